@@ -1,0 +1,358 @@
+"""One sample through the whole of the arithmetic: a table of contents, one call per stage.
+
+`step(params, inputs, state, outputs)` is what live and replay share. It reads no clock: all times are the
+robot's own.
+"""
+
+from __future__ import annotations
+
+from monitor.flow.layout import Block, Form, Notice, Signal
+from monitor.kernels import band, ledger, signal
+from monitor.kernels.dynamics import dynamics, quaternion_matrix
+from monitor.kernels.filters import cholesky, cholesky_solve, multiply
+from monitor.kernels.jit import kernel
+
+_OK = int(Signal.OK)
+_CLOCK = int(Signal.CLOCK)
+_JOINT_SPACE, _FIRST_ORDER = int(Form.JOINT_SPACE), int(Form.FIRST_ORDER)
+_EVENT_OPENED, _EVENT_ENDED = int(Notice.EVENT_OPENED), int(Notice.EVENT_ENDED)
+_BAD_SAMPLE, _BRAKE_MOVED = int(Notice.BAD_SAMPLE), int(Notice.BRAKE_MOVED)
+_TORQUE_AT_LIMIT, _DISOBEYED = int(Notice.TORQUE_AT_LIMIT), int(Notice.DISOBEYED)
+_GAP = int(Notice.GAP)
+# Reasons to re-base: after a gap or bad samples the residual is kept, after a start it begins at zero.
+_PAUSE, _START = 1, 2
+
+
+@kernel
+def step(params: Block, inputs: Block, state: Block, outputs: Block) -> None:
+    """Take the sample in `inputs` into `state` and fill `outputs`."""
+    outputs[0]["notice"] = 0
+    good = credible(params, inputs, state, outputs)
+    note_rebase(params, inputs, state, outputs)
+    if not good:
+        return
+    judge_limits(params, inputs, state, outputs)
+    to_model(params, inputs, state)
+    if not delayed(params, state):
+        return
+    if state[0]["pending"] != 0:
+        rebase(params, inputs, state, outputs)
+    else:
+        advance(params, inputs, state)
+    residuals(params, state, outputs)
+    judge(params, inputs, state, outputs)
+    state[0]["t_ns"] = state[0]["at_ns"]
+    state[0]["stepped"] += 1
+
+
+@kernel
+def credible(params: Block, inputs: Block, state: Block, outputs: Block) -> bool:
+    """Check the raw numbers; a sample that fails is counted and makes the next good one a re-base."""
+    c, x, s, out = params[0], inputs[0], state[0], outputs[0]
+    fault, joint = signal.range_fault(
+        x["q"], x["qd"], x["tau"], c["q_min"], c["q_max"], c["qd_max"], c["tau_max"]
+    )
+    if fault == _OK and c["gravity_part"].shape[0] > x["q"].shape[0]:
+        fault = signal.base_fault(
+            x["base_p"], x["base_quat"], x["base_v"], x["base_w"],
+            c["base_position_max"], c["base_speed_max"],
+        )  # fmt: skip
+    if x["rebase"] == _START:
+        s["raw_held"] = 0  # nothing to compare with, also where this very sample turns out bad
+    if fault == _OK:
+        dt_ns = x["t_ns"] - s["raw_t_ns"]
+        if s["raw_held"] == 0:
+            s["still_ns"][:] = 0
+            s["drift"][:] = 0.0
+        elif dt_ns <= 0 or abs(dt_ns - (x["seq"] - s["raw_seq"]) * c["period_ns"]) > c["clock_jump_ns"]:
+            fault = _CLOCK
+        elif dt_ns <= c["gap_ns"]:
+            fault, joint = signal.motion_fault(
+                x["q"], x["qd"], dt_ns, s["raw_q"], s["raw_qd"], c["jump"], c["drift"], c["drift_s"],
+                c["frozen_velocity"], c["frozen_ns"], s["still_ns"], s["drift"],
+            )  # fmt: skip
+        # The next sample is compared with this one even when it is refused: a jump is reported once.
+        s["raw_q"][:] = x["q"]
+        s["raw_qd"][:] = x["qd"]
+        s["raw_t_ns"] = x["t_ns"]
+        s["raw_seq"] = x["seq"]
+        s["raw_held"] = 1
+    out["signal"] = fault
+    out["signal_joint"] = joint
+    s["bad"][fault] += 1
+    if fault != _OK:
+        out["notice"] |= _BAD_SAMPLE
+    return bool(fault == _OK)
+
+
+@kernel
+def note_rebase(params: Block, inputs: Block, state: Block, outputs: Block) -> None:
+    """Collect the reasons to re-base until a good sample can serve as the new start."""
+    x, s = inputs[0], state[0]
+    wish, fault = x["rebase"], outputs[0]["signal"]
+    waits = s["pending"]
+    if fault == _CLOCK or (s["started"] == 0 and waits == 0):
+        wish = _START
+    elif fault != _OK:
+        wish = max(wish, _PAUSE)
+    elif wish == 0 and waits == 0 and x["t_ns"] - s["entered_ns"] > params[0]["gap_ns"]:
+        # Without a reason known already (bad samples, a clock that was set) it is samples that are missing.
+        wish = _PAUSE
+        outputs[0]["notice"] |= _GAP
+    if fault == _OK:
+        s["entered_ns"] = x["t_ns"]
+    if wish != 0:
+        s["pending"] = max(s["pending"], wish)
+        s["line_held"] = 0
+        x["rebase"] = 0
+
+
+@kernel
+def judge_limits(params: Block, inputs: Block, state: Block, outputs: Block) -> None:
+    """Notice a torque at its limit, a drive that does not obey, a joint that moves with its brake closed."""
+    c, x, s, out = params[0], inputs[0], state[0], outputs[0]
+    for i in range(x["q"].shape[0]):
+        if abs(x["tau"][i]) >= c["tau_peak"][i]:
+            s["at_limit"][i] += 1
+            out["notice"] |= _TORQUE_AT_LIMIT
+        obeys = not abs(x["tau"][i] - x["tau_cmd"][i]) > c["command_error"][i]  # also where tau_cmd is NaN
+        if obeys or x["brake"][i] != 0 or x["drive"][i] == 0:  # a drive at rest has nothing to obey
+            s["disobeyed_ns"][i] = 0
+            s["disobeyed"][i] = 0
+        elif s["disobeyed_ns"][i] == 0 or x["t_ns"] < s["disobeyed_ns"][i]:  # the clock may be set back
+            s["disobeyed_ns"][i] = x["t_ns"]
+        elif s["disobeyed"][i] == 0 and x["t_ns"] - s["disobeyed_ns"][i] > c["command_error_ns"]:
+            s["disobeyed"][i] = 1
+            out["notice"] |= _DISOBEYED
+        if x["brake"][i] == 0:
+            s["brake_ns"][i] = 0
+            s["brake_moved"][i] = 0
+            continue
+        if s["brake_ns"][i] == 0 or x["t_ns"] < s["brake_ns"][i]:
+            s["brake_ns"][i] = x["t_ns"]
+        if x["t_ns"] - s["brake_ns"][i] <= c["brake_settle_ns"]:
+            s["brake_q"][i] = x["q"][i]
+        elif s["brake_moved"][i] == 0 and abs(x["q"][i] - s["brake_q"][i]) > c["brake_motion"][i]:
+            s["brake_moved"][i] = 1
+            out["notice"] |= _BRAKE_MOVED
+
+
+@kernel
+def to_model(params: Block, inputs: Block, state: Block) -> None:
+    """Put the sample into the model's order, signs, units and body axes."""
+    c, x, s = params[0], inputs[0], state[0]
+    m = x["q"].shape[0]
+    base = s["v"].shape[0] - m
+    s["at_ns"] = x["t_ns"]
+    shift = 7 if base == 6 else 0
+    multiply(c["to_q"], x["q"], s["q"][shift:])
+    for i in range(m):
+        s["q"][shift + i] += c["q_zero"][i]
+    multiply(c["to_q"], x["qd"], s["v"][base:])
+    multiply(c["to_tau"], x["tau"], s["tau"][base:])
+    if base == 6:
+        s["q"][:3] = x["base_p"]
+        scale = 0.0
+        for i in range(4):
+            scale += x["base_quat"][i] ** 2
+        for i in range(4):
+            s["q"][3 + i] = x["base_quat"][i] / scale**0.5
+        R = s["R_W"][0]
+        quaternion_matrix(s["q"][3], s["q"][4], s["q"][5], s["q"][6], R)
+        for i in range(3):
+            s["v"][i] = x["base_w"][i]
+            s["v"][3 + i] = R[0, i] * x["base_v"][0] + R[1, i] * x["base_v"][1] + R[2, i] * x["base_v"][2]
+            s["tau"][i] = 0.0
+            s["tau"][3 + i] = 0.0
+
+
+@kernel
+def delayed(params: Block, state: Block) -> bool:
+    """Pass the sample through the delay line that evens out late torques; False until the line is full."""
+    c, s = params[0], state[0]
+    D = s["line_q"].shape[0]
+    if D == 1:
+        return True
+    m = c["tau_lag"].shape[0]
+    base = s["v"].shape[0] - m
+    at = s["line_at"]
+    s["line_ns"][at] = s["at_ns"]
+    s["line_q"][at] = s["q"]
+    s["line_v"][at] = s["v"]
+    s["line_tau"][at] = s["tau"][base:]
+    held = (at - c["state_lag"]) % D
+    s["at_ns"] = s["line_ns"][held]
+    s["q"][:] = s["line_q"][held]
+    s["v"][:] = s["line_v"][held]
+    for i in range(m):
+        s["tau"][base + i] = s["line_tau"][(at - c["tau_lag"][i]) % D, i]
+    s["line_at"] = (at + 1) % D
+    s["line_held"] = min(s["line_held"] + 1, D)
+    return bool(s["line_held"] == D)
+
+
+@kernel
+def model_at(params: Block, inputs: Block, state: Block) -> None:
+    """Fill M and its factor, C, g, p, C'v where the dynamics are taken: at q_at, v_at."""
+    c, x, s = params[0], inputs[0], state[0]
+    dynamics(
+        c["parent"], c["kind"], c["dof"], c["multiplier"], c["offset"], c["R_PJ"], c["p_PJ"], c["axis"],
+        x["E"], c["armature"], c["gravity"], s["q_at"], s["v_at"],
+        s["R_W"], s["p_W"], s["S"], s["Sd"], s["V"], s["Ic"], s["Bc"],
+        s["M"], s["C"], s["g"], s["p"], s["Ctv"],
+    )  # fmt: skip
+
+
+@kernel
+def known_torque(params: Block, state: Block) -> None:
+    """Fill the torque that is known: motor, less friction and gravity (velocity terms are the form's own)."""
+    c, s = params[0], state[0]
+    for i in range(s["known"].shape[0]):
+        s["known"][i] = s["tau"][i] - c["gravity_part"][i] * s["g"][i]
+    ledger.friction(
+        s["v_at"], c["viscous"], c["coulomb"], c["friction_offset"], c["friction_velocity"], s["known"]
+    )
+
+
+@kernel
+def model_acceleration(params: Block, inputs: Block, state: Block) -> None:
+    """Fill a, the acceleration the model expects of the known torque at q_at, v_at."""
+    s = state[0]
+    model_at(params, inputs, state)
+    known_torque(params, state)
+    multiply(s["C"], s["v_at"], s["bias"])
+    for i in range(s["known"].shape[0]):
+        s["bias"][i] = s["known"][i] - s["bias"][i]
+    cholesky(s["M"], s["L"])
+    cholesky_solve(s["L"], s["bias"], s["a"])
+
+
+@kernel
+def model_momentum(params: Block, inputs: Block, state: Block) -> None:
+    """Fill p and `u = known torque + C'v`, the rate of change of p that the model expects."""
+    s = state[0]
+    s["q_at"][:] = s["q"]
+    s["v_at"][:] = s["v"]
+    model_at(params, inputs, state)
+    known_torque(params, state)
+    for i in range(s["u"].shape[0]):
+        s["u"][i] = s["known"][i] + s["Ctv"][i]
+
+
+@kernel
+def rebase(params: Block, inputs: Block, state: Block, outputs: Block) -> None:
+    """Start the ledger at this sample."""
+    c, s = params[0], state[0]
+    t_ns = s["at_ns"]
+    if s["pending"] == _START:
+        s["e_fast"][:] = 0.0
+        s["e_slow"][:] = 0.0
+        s["r_fast"][:] = 0.0
+        s["r_slow"][:] = 0.0
+        s["settled_ns"] = t_ns + c["start_settle_ns"]
+        if s["event_open"] != 0:
+            s["event_open"] = 0
+            outputs[0]["notice"] |= _EVENT_ENDED
+    else:
+        s["settled_ns"] = max(s["settled_ns"], t_ns + c["settle_ns"])
+    if c["form"] == _JOINT_SPACE:
+        s["q_fast"][:], s["v_fast"][:] = s["q"], s["v"]
+        s["q_slow"][:], s["v_slow"][:] = s["q"], s["v"]
+        s["q_at"][:], s["v_at"][:] = s["q"], s["v"]
+        model_acceleration(params, inputs, state)
+    else:
+        model_momentum(params, inputs, state)
+        s["p_fast"][:], s["p_slow"][:] = s["p"], s["p"]
+    s["dt_s"] = 0.0
+    s["started"] = 1
+    s["pending"] = 0
+    s["rebased"] += 1
+
+
+@kernel
+def advance(params: Block, inputs: Block, state: Block) -> None:
+    """Move the ledger from the last sample to this one by the Δt of the robot's own clock."""
+    s = state[0]
+    s["dt_s"] = (s["at_ns"] - s["t_ns"]) * 1e-9
+    if params[0]["form"] == _JOINT_SPACE:
+        advance_joint_space(params, inputs, state)
+    else:
+        advance_momentum(params, inputs, state)
+
+
+@kernel
+def advance_joint_space(params: Block, inputs: Block, state: Block) -> None:
+    """Fuse position and velocity; dynamics and friction are taken where the fast filter expects the robot."""
+    c, s = params[0], state[0]
+    dt = s["dt_s"]
+    n = s["v"].shape[0]
+    base = n - c["tau_lag"].shape[0]
+    s["q_at"][:] = s["q_fast"]
+    ledger.advance_pose(base, s["v_fast"], s["a"], s["e_fast"], dt, s["q_at"])
+    for i in range(n):
+        s["v_at"][i] = s["v_fast"][i] + dt * (s["a"][i] + s["e_fast"][i])
+        s["a_mean"][i] = 0.5 * s["a"][i]
+    model_acceleration(params, inputs, state)
+    for i in range(n):
+        s["a_mean"][i] += 0.5 * s["a"][i]
+    k = min(max(round(dt * 1e9 / c["period_ns"]), 1), c["gain_fast"].shape[0]) - 1
+    ledger.joint_space(
+        base, s["q"], s["v"], s["a_mean"], dt, c["gain_fast"][k], s["q_fast"], s["v_fast"], s["e_fast"]
+    )
+    ledger.joint_space(
+        base, s["q"], s["v"], s["a_mean"], dt, c["gain_slow"][k], s["q_slow"], s["v_slow"], s["e_slow"]
+    )
+    multiply(s["M"], s["e_fast"], s["r_fast"])
+    multiply(s["M"], s["e_slow"], s["r_slow"])
+
+
+@kernel
+def advance_momentum(params: Block, inputs: Block, state: Block) -> None:
+    """Keep the ledger of generalised momentum, first or second order, on the measured velocity."""
+    c, s = params[0], state[0]
+    dt = s["dt_s"]
+    s["p_last"][:], s["u_last"][:] = s["p"], s["u"]
+    model_momentum(params, inputs, state)
+    if c["form"] == _FIRST_ORDER:
+        ledger.first_order(s["p"], s["p_last"], s["u"], s["u_last"], c["pole_fast"], dt, s["r_fast"])
+        ledger.first_order(s["p"], s["p_last"], s["u"], s["u_last"], c["pole_slow"], dt, s["r_slow"])
+    else:
+        ledger.second_order(s["p"], s["u"], s["u_last"], c["pole_fast"], dt, s["p_fast"], s["r_fast"])
+        ledger.second_order(s["p"], s["u"], s["u_last"], c["pole_slow"], dt, s["p_slow"], s["r_slow"])
+
+
+@kernel
+def residuals(params: Block, state: Block, outputs: Block) -> None:
+    """Show the residuals, how far they fill their bands, and the torque the model expects."""
+    c, s, out = params[0], state[0], outputs[0]
+    out["r_fast"][:] = s["r_fast"]
+    out["r_slow"][:] = s["r_slow"]
+    for i in range(s["tau"].shape[0]):
+        out["tau_model"][i] = s["tau"][i] + s["r_fast"][i]
+    band.band_ratio(s["r_fast"], s["r_slow"], c["band_fast"], c["band_slow"], out["ratio"])
+    for i in range(out["ratio"].shape[0]):
+        s["ratio_peak"][i] = max(s["ratio_peak"][i], out["ratio"][i])
+
+
+@kernel
+def judge(params: Block, inputs: Block, state: Block, outputs: Block) -> None:
+    """Open an event when a judged residual leaves its band; end it after a time of quiet."""
+    c, x, s, out = params[0], inputs[0], state[0], outputs[0]
+    t_ns = s["at_ns"]
+    out["settling"] = 1 if t_ns < s["settled_ns"] else 0
+    row = band.largest(out["ratio"], x["judged"])
+    if row >= 0 and out["settling"] == 0 and out["ratio"][row] > 1.0:
+        s["event_over_ns"] = t_ns
+        if s["event_open"] == 0:
+            s["event_open"] = 1
+            s["event_onset_ns"] = t_ns
+            s["event_ratio"] = 0.0
+            out["notice"] |= _EVENT_OPENED
+        if out["ratio"][row] > s["event_ratio"]:
+            s["event_ratio"] = out["ratio"][row]
+            s["event_row"] = row
+            fast = abs(s["r_fast"][row]) / c["band_fast"][row] >= abs(s["r_slow"][row]) / c["band_slow"][row]
+            s["event_size"] = s["r_fast"][row] if fast else s["r_slow"][row]
+    elif s["event_open"] != 0 and t_ns - s["event_over_ns"] > c["quiet_ns"]:
+        s["event_open"] = 0
+        out["notice"] |= _EVENT_ENDED

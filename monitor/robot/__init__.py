@@ -1,0 +1,1 @@
+"""What the machine is: URDF, tree, pseudo-inertias, arrays in kernel order."""

@@ -1,0 +1,302 @@
+"""From a configuration to the blocks of the data path: the one place that allocates them."""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass
+from functools import cache
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+from scipy.linalg import solve_discrete_are
+
+from monitor.errors import ConfigError
+from monitor.flow.layout import (
+    Facts,
+    Form,
+    Sizes,
+    Tool,
+    inputs_fields,
+    outputs_fields,
+    params_fields,
+    state_fields,
+    zeros,
+)
+from monitor.flow.pipeline import Blocks, Pipeline
+from monitor.flow.step import step
+from monitor.robot.pseudo_inertia import transform
+from monitor.robot.tree import WORLD, Tree, build_tree
+from monitor.robot.urdf import parse_urdf
+from monitor.setup.config import Config, JointConfig
+
+Floats = NDArray[np.float64]
+
+# Gains are kept for Δt of up to so many periods; longer gaps re-base.
+_MOST_GAIN_STEPS = 64
+# A brake that is reported closed may still be closing; from then on the joint must stand.
+_BRAKE_SETTLE_S = 0.3
+# Where nothing else bounds a reading: rad or m, and per second. Beyond, arithmetic would overflow.
+_FARTHEST, _FASTEST = 1e6, 1e3
+
+
+@dataclass(frozen=True, eq=False)
+class Setup:
+    """A configuration made ready: the robot, its facts and constants."""
+
+    config: Config
+    tree: Tree
+    sizes: Sizes
+    facts: Facts
+    params: Any  # Block
+    bodies: Floats  # (N,4,4) pseudo-inertias without payload
+
+    def blocks(self) -> Blocks:
+        """Return fresh blocks for a run."""
+        s = self.sizes
+        inputs = zeros(inputs_fields(s))
+        inputs["E"] = self.bodies
+        inputs["tau_cmd"] = math.nan
+        return Blocks(self.params, inputs, zeros(state_fields(s)), zeros(outputs_fields(s)))
+
+    def warm(self) -> None:
+        """Compile the step for this robot and run it once, so that nothing compiles later."""
+        blocks = self.blocks()
+        blocks.inputs["base_quat"][0, 0] = 1.0
+        step(*blocks)
+
+    def pipeline(self, run: str, blocks: Blocks | None = None) -> Pipeline:
+        """Return a data path in its first state, its kernels compiled."""
+        self.warm()
+        return Pipeline(self.facts, blocks or self.blocks(), run)
+
+
+def build(config: Config) -> Setup:
+    """Return the robot of a configuration, checked against its description.
+
+    Raises
+    ------
+    ConfigError
+        A joint, foot or tool link is not in the robot description, or the units cannot be told.
+    ModelError
+        The description itself is refused.
+    """
+    where = str(config.path)
+    description = parse_urdf(config.urdf_text, str(config.path.parent / config.robot.urdf))
+    joints = config.robot.joint
+    _check_joints(where, joints, tuple(j.name for j in description.joints if j.moves and j.mimic is None))
+    armature = {j.name: 0.0 if j.torque_meaning == "link" else j.armature for j in joints}
+    tree = build_tree(description, config.robot.base, armature)
+    lags, D = _lags(config)
+    sizes = Sizes(tree.n, tree.nq, len(joints), len(tree.arrays.parent), D, _gain_steps(config))
+    params = zeros(params_fields(sizes))
+    _fill_tree(params, tree, config)
+    _fill_wire(params, tree, config, lags)
+    _fill_friction(params, tree, config)
+    _fill_ledger(params, sizes, tree, config)
+    _fill_limits(params, tree, config)
+    params.flags.writeable = False
+    return Setup(config, tree, sizes, _facts(where, tree, config), params, tree.arrays.E.copy())
+
+
+def _check_joints(where: str, joints: tuple[JointConfig, ...], moving: tuple[str, ...]) -> None:
+    for i, joint in enumerate(joints):
+        if joint.name not in moving:
+            raise ConfigError(
+                f"{where}: robot.joint[{i}].name",
+                repr(joint.name),
+                f"a moving joint of the robot description: {', '.join(moving)}",
+            )
+    missing = [name for name in moving if name not in {joint.name for joint in joints}]
+    if missing:
+        raise ConfigError(
+            f"{where}: robot.joint",
+            f"no entry for {', '.join(missing)}",
+            "one [[robot.joint]] for each moving joint of the robot description",
+            "A joint that is not driven and not measured has to be `fixed` in the description.",
+        )
+
+
+def _order(tree: Tree, config: Config) -> list[int]:
+    """Return, for each joint of the tree, where it stands on the wire."""
+    names = [joint.name for joint in config.robot.joint]
+    return [names.index(name) for name in tree.joints]
+
+
+def _lags(config: Config) -> tuple[list[int], int]:
+    """Return by how many samples the state and each torque are held back, and the length of the line."""
+    samples = [round(joint.torque_delay_s * config.input.rate_hz) for joint in config.robot.joint]
+    longest = max(0, *samples)
+    return [longest, *(longest - s for s in samples)], 1 + longest - min(0, *samples)
+
+
+def _fill_tree(params: Any, tree: Tree, config: Config) -> None:
+    for name, value in tree.arrays._asdict().items():
+        if name != "E":
+            params[name] = value
+    params["armature"] = tree.armature
+    params["gravity"] = config.robot.gravity_vector
+
+
+def _fill_wire(params: Any, tree: Tree, config: Config, lags: list[int]) -> None:
+    """Set how the wire's numbers become the model's: signs, zeros, couplings, order, units, delays."""
+    joints, order = config.robot.joint, _order(tree, config)
+    m = len(joints)
+    coupling = np.array(config.robot.coupling) if config.robot.coupling else np.eye(m)
+    sign = np.array([float(joint.sign) for joint in joints])
+    scale = np.array([joint.torque_scale for joint in joints])
+    params["to_q"] = (coupling * sign)[order]
+    params["q_zero"] = (coupling @ [joint.zero_offset for joint in joints])[order]
+    # Power is the same on both sides: tau_joint = coupling^-T tau_motor.
+    params["to_tau"] = (np.linalg.inv(coupling).T * (sign * scale))[order]
+    params["gravity_part"][0, :] = 1.0
+    params["gravity_part"][0, -m:] = [0.0 if joints[i].gravity_compensated else 1.0 for i in order]
+    params["state_lag"] = lags[0]
+    params["tau_lag"] = np.array(lags[1:])[order]
+    for i, joint in enumerate(joints):
+        params["tau_peak"][0, i] = config.watch.torque_limit_ratio * joint.peak_torque / joint.torque_scale
+        params["tau_max"][0, i] = config.watch.torque_credible_ratio * joint.peak_torque / joint.torque_scale
+        params["command_error"][0, i] = (
+            config.watch.command_error_ratio * joint.rated_torque / joint.torque_scale
+        )
+
+
+def _fill_friction(params: Any, tree: Tree, config: Config) -> None:
+    base = tree.n - len(tree.joints)
+    params["friction_velocity"] = 1.0
+    for row, i in enumerate(_order(tree, config), start=base):
+        joint = config.robot.joint[i]
+        params["friction_velocity"][0, row] = joint.friction_velocity
+        if joint.torque_meaning != "link":
+            params["viscous"][0, row] = joint.viscous_friction
+            params["coulomb"][0, row] = joint.coulomb_friction
+            params["friction_offset"][0, row] = joint.friction_offset
+
+
+def _gain_steps(config: Config) -> int:
+    return min(_MOST_GAIN_STEPS, max(1, math.ceil(config.watch.gap_limit_s * config.input.rate_hz)))
+
+
+def _fill_ledger(params: Any, sizes: Sizes, tree: Tree, config: Config) -> None:
+    watch, period_s = config.watch, 1.0 / config.input.rate_hz
+    params["form"] = Form[watch.residual.upper().replace("-", "_")]
+    params["pole_fast"] = 2.0 * math.pi * watch.fast_bandwidth_hz
+    params["pole_slow"] = 2.0 * math.pi * watch.slow_bandwidth_hz
+    noises = _noises(tree, config)
+    for k in range(sizes.K):
+        for i, (position_sd, velocity_sd) in enumerate(noises):
+            dt_s = (k + 1) * period_s
+            params["gain_fast"][0, k, i] = riccati_gain(position_sd, velocity_sd, watch.fast_walk, dt_s)
+            params["gain_slow"][0, k, i] = riccati_gain(position_sd, velocity_sd, watch.slow_walk, dt_s)
+    params["period_ns"] = round(1e9 * period_s)
+    params["gap_ns"] = round(1e9 * max(1.5 * period_s, min(watch.gap_limit_s, (sizes.K + 0.5) * period_s)))
+    params["settle_ns"] = round(1e9 * watch.settle_s)
+    params["start_settle_ns"] = round(1e9 * watch.start_settle_s)
+    params["quiet_ns"] = round(1e9 * watch.quiet_s)
+    params["clock_jump_ns"] = round(1e9 * watch.clock_jump_periods * period_s)
+
+
+def _noises(tree: Tree, config: Config) -> list[tuple[float, float]]:
+    """Return (position sd, velocity sd) of each row of v."""
+    base = config.robot.base_noise
+    rows = []
+    if config.robot.base == "floating":
+        rows = 3 * [(base.attitude_sd, base.rate_sd)] + 3 * [(base.position_sd, base.velocity_sd)]
+    joints = [config.robot.joint[i] for i in _order(tree, config)]
+    return rows + [(joint.position_noise_sd, joint.velocity_noise_sd) for joint in joints]
+
+
+@cache
+def riccati_gain(position_sd: float, velocity_sd: float, walk: float, dt_s: float) -> Floats:
+    """Return the steady-state Kalman gain (3,2) of position, velocity and unexplained acceleration.
+
+    Position and velocity are measured with the given standard deviations [rad, rad/s]; the acceleration that
+    the model does not explain is a random walk of `walk` [rad/s² per √s].
+    """
+    A = np.array([[1.0, dt_s, 0.5 * dt_s**2], [0.0, 1.0, dt_s], [0.0, 0.0, 1.0]])
+    H = np.array([[1.0, 0.0, 0.0], [0.0, 1.0, 0.0]])
+    # The acceleration's own step is spread over the interval: its integral moves velocity and position too.
+    g = np.array([dt_s**2 / 6.0, dt_s / 2.0, 1.0])
+    # In units of the noise, or the solver meets numbers ten orders apart; H stays the same in them.
+    scale = np.array([position_sd, velocity_sd, walk * math.sqrt(dt_s)])
+    g = walk * math.sqrt(dt_s) * g / scale
+    P = solve_discrete_are((A * scale / scale[:, None]).T, H.T, np.outer(g, g), np.eye(2))
+    gain: Floats = (P @ H.T @ np.linalg.inv(H @ P @ H.T + np.eye(2))) * scale[:, None] / scale[:2]
+    gain.flags.writeable = False
+    return gain
+
+
+def _fill_limits(params: Any, tree: Tree, config: Config) -> None:
+    """Set the limits of credibility, in units and order of the wire."""
+    watch, joints = config.watch, config.robot.joint
+    base = tree.n - len(joints)
+    params["band_fast"], params["band_slow"] = math.inf, math.inf
+    for row, i in enumerate(_order(tree, config), start=base):
+        params["band_fast"][0, row], params["band_slow"][0, row] = config.bands[i]
+    for i in range(len(joints)):
+        low, high, speed = _travel(tree, config, i)
+        params["q_min"][0, i], params["q_max"][0, i], params["qd_max"][0, i] = low, high, speed
+        params["brake_motion"][0, i] = watch.brake_motion
+        params["jump"][0, i] = watch.position_jump
+        params["drift"][0, i] = watch.contradiction
+        params["frozen_velocity"][0, i] = watch.frozen_velocity
+    params["drift_s"] = watch.contradiction_s
+    params["frozen_ns"] = round(1e9 * watch.frozen_s)
+    params["command_error_ns"] = round(1e9 * watch.command_error_s)
+    params["brake_settle_ns"] = round(1e9 * _BRAKE_SETTLE_S)
+    params["base_position_max"] = _FARTHEST
+    params["base_speed_max"] = _FASTEST
+
+
+def _travel(tree: Tree, config: Config, i: int) -> tuple[float, float, float]:
+    """Return least and greatest credible position and speed of joint i as the wire reports them."""
+    joint, k = config.robot.joint[i], tree.joints.index(config.robot.joint[i].name)
+    if config.robot.coupling:
+        # The wire reports motors; their travel is not the joints'.
+        return -_FARTHEST, _FARTHEST, _FASTEST
+    low = tree.limits.lower[k] if joint.position_min is None else joint.position_min
+    high = tree.limits.upper[k] if joint.position_max is None else joint.position_max
+    speed = tree.limits.velocity[k] if joint.velocity_max is None else joint.velocity_max
+    ends = sorted(joint.sign * (end - joint.zero_offset) for end in (low, high))
+    margin = config.watch.position_margin
+    return (
+        max(ends[0] - margin, -_FARTHEST),
+        min(ends[1] + margin, _FARTHEST),
+        min(config.watch.velocity_limit_ratio * speed, _FASTEST),
+    )
+
+
+def _facts(where: str, tree: Tree, config: Config) -> Facts:
+    robot, watch = config.robot, config.watch
+    base = tree.n - len(tree.joints)
+    order = _order(tree, config)
+    coupling = np.array(robot.coupling) if robot.coupling else np.eye(len(order))
+    for i, foot in enumerate(robot.foot):
+        _link(f"{where}: robot.foot[{i}].link", tree, foot.link)
+    tool = _link(f"{where}: robot.tool_link", tree, robot.tool_link) if robot.tool_link else None
+    base_rows = tuple(f"base_{kind}_{x}" for kind in ("turn", "move") for x in "xyz")[:base]
+    units = ("N m",) * min(base, 3) + ("N",) * min(base, 3)
+    return Facts(
+        robot=robot.name or tree.name,
+        joints=tuple(joint.name for joint in robot.joint),
+        rows=base_rows + tree.joints,
+        units=units + tuple("N" if kind == "prismatic" else "N m" for kind in tree.joint_kinds),
+        feet=tuple(foot.name for foot in robot.foot),
+        floating=robot.base == "floating",
+        serial=robot.serial,
+        row_needs=((coupling != 0.0) | (np.abs(np.linalg.inv(coupling).T) > 1e-12))[order],
+        tool=tool,
+        wait_ns=round(1e9 * watch.wait_periods / config.input.rate_hz),
+        stream_stale_ns=round(1e9 * watch.stream_stale_s),
+        condition_stale_ns=round(1e9 * config.input.condition_stale_s),
+        quiet_ns=round(1e9 * watch.quiet_s),
+    )
+
+
+def _link(where: str, tree: Tree, name: str) -> Tool:
+    """Return where a link named in the configuration is."""
+    for place in tree.links:
+        if place.name == name and place.axis != WORLD:
+            return Tool(place.axis, transform(place.R, place.p))
+    moving = ", ".join(place.name for place in tree.links if place.axis != WORLD)
+    raise ConfigError(where, repr(name), f"a moving link of the robot description: {moving}")

@@ -1,0 +1,291 @@
+"""`limbtell demo`: a simulated *Rind* on one side, the real daemon on the other, and what was felt.
+
+The robot runs in a process of its own and publishes over ZeroMQ; `limbtell watch` is started as a user would
+start it. Only the schedule and the truth file know what really happened.
+"""
+
+from __future__ import annotations
+
+import contextlib
+import json
+import multiprocessing
+import shutil
+import signal
+import socket
+import subprocess
+import sys
+import time
+from collections.abc import Iterator
+from pathlib import Path
+from typing import Annotated, Any, NamedTuple
+
+import msgpack
+import typer
+import zmq
+from rich.console import Console
+from rich.table import Table
+
+from monitor.errors import SystemFault
+from monitor.setup.template import write_config
+from replay.simulate import (
+    DATASHEET,
+    SERIAL,
+    SHORTEST_S,
+    TANH_V0,
+    URDF,
+    default_schedule,
+    publish,
+)
+
+_END_S = 10.0  # the robot writes its truth after the last sample
+_MATCH_S = 0.6  # an alarm this long after the end of a happening still belongs to it
+CAUTION = "A monitoring aid, not a safety function: no performance level, never a protective stop."
+
+
+class Felt(NamedTuple):
+    """One thing that truly happened, and what the daemon said."""
+
+    kind: str
+    where: str
+    size: float
+    t_s: float  # since the robot's first sample
+    peak_nm: float
+    peak_joint: str
+    delay_ms: float | None
+    joint: str | None
+
+
+def command(
+    seconds: Annotated[float, typer.Option(help="How long the robot works.")] = 40.0,
+    out: Annotated[Path, typer.Option(help="Folder for configuration, sessions and truth.")] = Path(
+        "limbtell-demo"
+    ),
+    seed: Annotated[int, typer.Option(help="Which robot: noise and model errors.")] = 1,
+    as_json: Annotated[bool, typer.Option("--json", help="Print the summary as JSON.")] = False,
+) -> None:
+    """Watch a simulated arm being pushed, losing torque and stopping, with the real daemon."""
+    if seconds < SHORTEST_S:
+        raise SystemFault("--seconds", f"{seconds:g}", f"at least {SHORTEST_S:g}")
+    for number in (signal.SIGTERM, signal.SIGHUP):
+        signal.signal(number, signal.default_int_handler)  # as Ctrl-C: no process stays behind
+    console = Console(stderr=as_json)
+    folder = _fresh(out)
+    config = _configuration(folder)
+    console.print(f"[bold]{CAUTION}[/bold]", soft_wrap=True)
+    console.print("Starting the daemon (the first start on a machine compiles for some seconds) …")
+    with _daemon(config.path, console):
+        alarms = _run(config, seconds, seed, folder / "truth.json", console)
+    truth = json.loads((folder / "truth.json").read_text(encoding="utf-8"))
+    session = max((folder / "sessions").glob("*.mcap"))
+    felt, extra = _compare(truth, alarms)
+    if as_json:
+        typer.echo(
+            json.dumps({"felt": [f._asdict() for f in felt], "other_alarms": extra, "session": str(session)})
+        )
+    else:
+        _print(felt, extra, session, config.path, console)
+
+
+class _Config(NamedTuple):
+    path: Path
+    robot: str
+    alarms: str
+
+
+def _fresh(out: Path) -> Path:
+    """Return the folder, emptied of an earlier demo but of nothing else."""
+    if out.exists() and any(out.iterdir()) and not (out / "rind.toml").exists():
+        raise SystemFault(
+            f"--out {out}", "a folder with other files", "an empty or new folder, or an earlier demo's"
+        )
+    if out.exists():
+        shutil.rmtree(out)
+    out.mkdir(parents=True)
+    return out
+
+
+def _configuration(folder: Path) -> _Config:
+    """Write the robot's files and a configuration as `limbtell init` does, on ports that are free."""
+    for source in (URDF, DATASHEET):
+        shutil.copy(source, folder / source.name)
+    text = write_config(folder / URDF.name, "fixed", folder / DATASHEET.name, folder)
+    ports = free_ports(3)
+    robot, alarms = (f"tcp://127.0.0.1:{port}" for port in ports[:2])
+    for old, new in (
+        ("tcp://127.0.0.1:5555", robot),
+        ("tcp://127.0.0.1:5556", alarms),
+        ("metrics_port = 9637", f"metrics_port = {ports[2]}"),
+        ('serial = ""', f'serial = "{SERIAL}"'),
+        ("friction_velocity = 0.004", f"friction_velocity = {TANH_V0}"),
+    ):
+        assert old in text, old
+        text = text.replace(old, new)
+    path = folder / "rind.toml"
+    path.write_text(text, encoding="utf-8")
+    return _Config(path, robot, alarms)
+
+
+def free_ports(count: int) -> list[int]:
+    """Return TCP ports on loopback that nobody uses now."""
+    with contextlib.ExitStack() as stack:
+        sockets = [stack.enter_context(socket.socket()) for _ in range(count)]
+        for one in sockets:
+            one.bind(("127.0.0.1", 0))
+        return [one.getsockname()[1] for one in sockets]
+
+
+@contextlib.contextmanager
+def _daemon(config: Path, console: Console) -> Iterator[None]:
+    """Run `limbtell watch` until the block is left; its words go to the terminal."""
+    process = subprocess.Popen(
+        [sys.executable, "-P", "-m", "monitor", "watch", str(config)],
+        stdout=subprocess.PIPE,
+        stderr=subprocess.STDOUT,
+        text=True,
+        start_new_session=True,  # Ctrl-C is ours: the daemon is stopped when the robot is
+    )
+    assert process.stdout is not None
+    try:
+        for line in process.stdout:
+            console.print(f"  {line.rstrip()}", highlight=False, markup=False)
+            if line.strip() == "ready":
+                break
+        else:
+            raise SystemFault("limbtell watch", f"an end with code {process.wait()}", "a daemon that starts")
+        yield
+    finally:
+        process.terminate()
+        try:
+            rest, _ = process.communicate(timeout=30)
+        except subprocess.TimeoutExpired:
+            process.kill()  # its children notice and end
+            raise
+        if rest.strip():
+            console.print(rest.rstrip(), highlight=False, markup=False)
+
+
+def _run(config: _Config, seconds: float, seed: int, truth: Path, console: Console) -> list[dict[str, Any]]:
+    """Let the robot work and print what the daemon says of it; return the alarms."""
+    spawn = multiprocessing.get_context("spawn")
+    robot = spawn.Process(
+        target=publish, args=(config.robot, seconds, seed, default_schedule(seconds), truth)
+    )
+    alarms: list[dict[str, Any]] = []
+    with zmq.Context() as context, context.socket(zmq.SUB) as subscriber:
+        subscriber.set(zmq.LINGER, 0)
+        subscriber.connect(config.alarms)
+        for topic in (b"alarm", b"health"):
+            subscriber.subscribe(topic)
+        robot.start()
+        begun = time.monotonic()
+        try:
+            while robot.is_alive():
+                if not subscriber.poll(100):
+                    continue
+                topic, payload = subscriber.recv_multipart()
+                message = msgpack.unpackb(payload)
+                # The robot falls silent at the end, as agreed; that is no news.
+                over = time.monotonic() - begun > seconds and message.get("detail") == "stale"
+                if over:
+                    robot.join(_END_S)
+                if not robot.is_alive():
+                    break
+                if topic == b"alarm":
+                    alarms.append(message)
+                _say(topic.decode(), message, console)
+        finally:
+            if robot.is_alive():
+                robot.terminate()
+            robot.join()
+    if robot.exitcode != 0:
+        raise SystemFault("the simulated robot", f"an end with code {robot.exitcode}", "a full run")
+    return alarms
+
+
+def _say(topic: str, message: dict[str, Any], console: Console) -> None:
+    """Print one line for an alarm, and in a terminal one for each second's health."""
+    if topic == "alarm":
+        size = message["size"]
+        how = f" {size['value']:+.1f} {size['unit']}" if size else ""
+        where = f" at {message['joint']}" if message["joint"] else ""
+        style = "bold red" if message["state"] == "unacknowledged" else "green"
+        console.print(
+            f"{message['utc']}  {message['state']:<34} {message['kind']} ({message['verdict']}, "
+            f"{message['detail']}){where}{how}",
+            style=style,
+            highlight=False,
+            soft_wrap=True,
+        )
+    elif console.is_terminal:
+        joint, ratio = max(message["band_ratio"].items(), key=lambda item: item[1])
+        bar = "█" * min(20, round(10 * ratio))
+        console.print(
+            f"{message['utc']}  {message['coverage']:<11} largest residual {ratio:4.0%} of its band "
+            f"at {joint:<8} {bar}",
+            style="dim",
+            highlight=False,
+            soft_wrap=True,
+        )
+
+
+def _compare(
+    truth: list[dict[str, Any]], alarms: list[dict[str, Any]]
+) -> tuple[list[Felt], list[dict[str, Any]]]:
+    """Match what happened with what was alarmed; the rest of the alarms were about nothing that happened."""
+    raised = [alarm for alarm in alarms if alarm["state"] == "unacknowledged"]
+    first_s = min((one["start_ns"] for one in truth), default=0) / 1e9
+    felt: list[Felt] = []
+    used: set[int] = set()
+    for one in truth:
+        start, end = one["start_ns"] / 1e9, one["end_ns"] / 1e9 + _MATCH_S
+        own = [alarm for alarm in raised if start <= alarm["t"] <= end]
+        used.update(alarm["seq"] for alarm in own)
+        joint, peak = max(one["peak_nm"].items(), key=lambda item: abs(item[1]), default=("", 0.0))
+        felt.append(
+            Felt(
+                one["kind"],
+                one["where"],
+                one["size"],
+                start - first_s,
+                peak,
+                joint,
+                round(1e3 * (own[0]["t"] - start), 1) if own else None,
+                own[0]["joint"] if own else None,
+            )
+        )
+    return felt, [alarm for alarm in raised if alarm["seq"] not in used]
+
+
+def _print(
+    felt: list[Felt], extra: list[dict[str, Any]], session: Path, config: Path, console: Console
+) -> None:
+    table = Table(title="What happened, and what was noticed", title_justify="left")
+    for name in ("happened", "where", "size", "peak effect", "noticed", "named first"):
+        table.add_column(name)
+    for one in felt:
+        unit = {"push": "N", "torque-loss": "of its torque", "stop": "s braked"}[one.kind]
+        rightly_quiet = one.kind == "stop"
+        said = "alarm after" if rightly_quiet else "after"
+        if one.delay_ms is None:
+            noticed = "no alarm, rightly" if rightly_quiet else "NOT noticed"
+        else:
+            noticed = f"{said} {one.delay_ms:.0f} ms"
+        table.add_row(
+            one.kind,
+            one.where,
+            f"{one.size:.3g} {unit}",
+            f"{one.peak_nm:+.1f} N m at {one.peak_joint}" if one.peak_nm else "none",
+            noticed,
+            one.joint or "",
+        )
+    console.print(table)
+    console.print(f"Alarms about nothing that happened: {len(extra)}")
+    for alarm in extra:
+        console.print(f"  {alarm['kind']} {alarm['detail']} at {alarm['joint']}, t = {alarm['t']:.3f} s")
+    console.print(
+        "Each verdict is `undecided`: a constant band tells that torque is unexplained, not yet by what.\n"
+        f"Session: {session}\nConfiguration: {config}\n"
+        f"Look at it again: limbtell review {session} --out {config.parent / 'review'}",
+        highlight=False,
+        soft_wrap=True,
+    )

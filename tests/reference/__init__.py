@@ -1,0 +1,1 @@
+"""Slow mechanics that share no code with the product: references for the tests."""
