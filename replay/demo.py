@@ -261,9 +261,9 @@ def _print(
 ) -> None:
     table = Table(title="What happened, and what was noticed", title_justify="left")
     for name in ("happened", "where", "size", "peak effect", "noticed", "named first"):
-        table.add_column(name)
+        table.add_column(name, no_wrap=True)
     for one in felt:
-        unit = {"push": "N", "torque-loss": "of its torque", "stop": "s braked"}[one.kind]
+        unit = {"push": "N", "torque-loss": "of torque", "stop": "s braked"}[one.kind]
         rightly_quiet = one.kind == "stop"
         said = "alarm after" if rightly_quiet else "after"
         if one.delay_ms is None:
@@ -271,10 +271,10 @@ def _print(
         else:
             noticed = f"{said} {one.delay_ms:.0f} ms"
         table.add_row(
-            one.kind,
+            one.kind.replace("-", " "),
             one.where,
             f"{one.size:.3g} {unit}",
-            f"{one.peak_nm:+.1f} N m at {one.peak_joint}" if one.peak_nm else "none",
+            f"{one.peak_nm:+.1f} N m, {one.peak_joint}" if one.peak_nm else "none",
             noticed,
             one.joint or "",
         )
@@ -285,7 +285,7 @@ def _print(
     console.print(
         "Each verdict is `undecided`: a constant band tells that torque is unexplained, not yet by what.\n"
         f"Session: {session}\nConfiguration: {config}\n"
-        f"Look at it again: limbtell review {session} --out {config.parent / 'review'}",
+        f"Look at it again: {Path(sys.argv[0])} review {session} --out {config.parent / 'review'}",
         highlight=False,
         soft_wrap=True,
     )

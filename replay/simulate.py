@@ -27,6 +27,7 @@ from scipy.interpolate import CubicSpline
 
 from monitor.errors import SystemFault
 from monitor.kernels.dynamics import dynamics, jacobian
+from monitor.kernels.filters import cholesky, cholesky_solve
 from monitor.kernels.jit import kernel
 from monitor.robot.tree import Tree, build_tree
 from monitor.robot.urdf import read_urdf
@@ -236,26 +237,6 @@ def _refer(
 
 
 @kernel
-def _solve(A: Floats, x: Floats) -> None:
-    """Turn x into the solution y of `A y = x`, A (n,n) symmetric positive definite; A is lost (Cholesky)."""
-    n = x.shape[0]
-    for i in range(n):
-        for j in range(i + 1):
-            s = A[i, j]
-            for k in range(j):
-                s -= A[i, k] * A[j, k]
-            A[i, j] = math.sqrt(s) if i == j else s / A[j, j]
-    for i in range(n):
-        for k in range(i):
-            x[i] -= A[i, k] * x[k]
-        x[i] /= A[i, i]
-    for i in range(n - 1, -1, -1):
-        for k in range(i + 1, n):
-            x[i] -= A[k, i] * x[k]
-        x[i] /= A[i, i]
-
-
-@kernel
 def _model(x: Any, E: Floats) -> None:
     """Fill M, C, g and the twists S of the arm with inertias E, at its state."""
     dynamics(
@@ -328,7 +309,8 @@ def _move(x: Any, t: float, h: float, losses: Floats, loss_peaks: Floats) -> Non
         lost = _swell(t, losses[e]) * losses[e, _SHARE] * x["tau"][i]
         a[i] -= lost
         loss_peaks[e, i] = max(loss_peaks[e, i], abs(lost))
-    _solve(M, a)
+    cholesky(M, M)
+    cholesky_solve(M, a, a)
     for i in range(n):
         if x["braked"]:
             v[i] = 0.0

@@ -16,7 +16,7 @@ Floats = NDArray[np.float64]
 def cholesky(M: Floats, L: Floats) -> None:
     """Fill the lower triangle of L (n,n) with the Cholesky factor of M; the rest of L is zeroed.
 
-    M has to be positive definite; setup refuses models for which it is not.
+    M has to be positive definite; setup refuses models for which it is not. L may be M itself.
     """
     n = M.shape[0]
     for i in range(n):
@@ -31,7 +31,7 @@ def cholesky(M: Floats, L: Floats) -> None:
 
 @inlined
 def cholesky_solve(L: Floats, b: Floats, x: Floats) -> None:
-    """Fill x (n) with the solution of `L L' x = b`."""
+    """Fill x (n) with the solution of `L L' x = b`; x may be b itself."""
     n = b.shape[0]
     for i in range(n):
         s = b[i]
