@@ -210,8 +210,8 @@ def _say(topic: str, message: dict[str, Any], console: Console) -> None:
         where = f" at {message['joint']}" if message["joint"] else ""
         style = "bold red" if message["state"] == "unacknowledged" else "green"
         console.print(
-            f"{message['utc']}  {message['state']:<34} {message['kind']} ({message['verdict']}, "
-            f"{message['detail']}){where}{how}",
+            f"{message['utc']} ({message['t']:.3f} s)  {message['state']:<34} {message['kind']} "
+            f"({message['verdict']}, {message['detail']}){where}{how}",
             style=style,
             highlight=False,
             soft_wrap=True,

@@ -278,10 +278,12 @@ def _events(alarms: list[dict[str, Any]]) -> list[dict[str, Any]]:
     """One entry for each event, as last stated; null where it came or went outside the reviewed stretch."""
     events: dict[int, dict[str, Any]] = {}
     for alarm in alarms:
-        event = events.setdefault(alarm["event"], {"event": alarm["event"], "raised_t": None})
+        unseen = {"event": alarm["event"], "raised_t": None, "raised_utc": None}
+        event = events.setdefault(alarm["event"], unseen)
         came = alarm["state"] == UNACKNOWLEDGED
-        event |= {"raised_t": alarm["t"]} if came else {}
+        event |= {"raised_t": alarm["t"], "raised_utc": alarm["utc"]} if came else {}
         event["cleared_t"] = None if came else alarm["t"]
+        event["cleared_utc"] = None if came else alarm["utc"]
         event |= {name: alarm[name] for name in _STATED}
     return list(events.values())
 
@@ -340,15 +342,30 @@ def _show(console: Console, summary: Mapping[str, Any], folder: Path) -> None:
             console.print(note, markup=False)
 
 
+def _when(event: Mapping[str, Any]) -> str:
+    """Return when it was raised by both clocks: UTC, and seconds of the robot's own."""
+    if event["raised_t"] is None:
+        return "before"
+    utc = event["raised_utc"] or "UTC not known"
+    return f"{utc}\nrobot clock {event['raised_t']:.3f} s"
+
+
+def _lasted(event: Mapping[str, Any]) -> str:
+    if None in (event["raised_t"], event["cleared_t"]):
+        return "" if event["cleared_t"] is not None else "stands"
+    return f"{event['cleared_t'] - event['raised_t']:.3f} s"
+
+
 def _event_table(events: Sequence[Mapping[str, Any]]) -> Table:
-    table = Table("event", "verdict", "joint", "raised [s]", "cleared [s]", "size")
+    table = Table("event", "verdict", "joint", "raised", "lasted", "size")
     for event in events[:_SHOWN_EVENTS]:
         size = event["size"]
         table.add_row(
             str(event["event"]),
             f"{event['verdict']}: {event['detail']}",
             escape(event["joint"] or ""),
-            *("" if event[name] is None else f"{event[name]:.3f}" for name in ("raised_t", "cleared_t")),
+            _when(event),
+            _lasted(event),
             "" if size is None else f"{size['value']:.3g} {size['unit']}",
         )
     if len(events) > _SHOWN_EVENTS:
