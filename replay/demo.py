@@ -37,6 +37,7 @@ from replay.simulate import (
     publish,
 )
 
+_WIDTH = 110  # where there is no terminal to ask
 _END_S = 10.0  # the robot writes its truth after the last sample
 _MATCH_S = 0.6  # an alarm this long after the end of a happening still belongs to it
 CAUTION = "A monitoring aid, not a safety function: no performance level, never a protective stop."
@@ -68,7 +69,8 @@ def command(
         raise SystemFault("--seconds", f"{seconds:g}", f"at least {SHORTEST_S:g}")
     for number in (signal.SIGTERM, signal.SIGHUP):
         signal.signal(number, signal.default_int_handler)  # as Ctrl-C: no process stays behind
-    console = Console(stderr=as_json)
+    stream = sys.stderr if as_json else sys.stdout
+    console = Console(file=stream, width=None if stream.isatty() else _WIDTH)
     folder = _fresh(out)
     config = _configuration(folder)
     console.print(f"[bold]{CAUTION}[/bold]", soft_wrap=True)
@@ -261,7 +263,7 @@ def _print(
 ) -> None:
     table = Table(title="What happened, and what was noticed", title_justify="left")
     for name in ("happened", "where", "size", "peak effect", "noticed", "named first"):
-        table.add_column(name, no_wrap=True)
+        table.add_column(name)
     for one in felt:
         unit = {"push": "N", "torque-loss": "of torque", "stop": "s braked"}[one.kind]
         rightly_quiet = one.kind == "stop"
