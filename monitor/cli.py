@@ -120,6 +120,7 @@ def _joint_row(setup: Any, i: int, gravity_nm: float) -> dict[str, Any]:
     k = tree.joints.index(joint.name)
     limits = tree.limits
     return {
+        "order": i,
         "joint": joint.name,
         "kind": tree.joint_kinds[k],
         "sign": joint.sign,

@@ -244,12 +244,13 @@ class _Child:
     deaths_s: list[float] = field(default_factory=list)
     again_s: float | None = None  # it died: when to start it again
     is_ready: bool = False
+    error: LimbtellError | None = None  # what it could not do
 
     def start(self, brief: Brief) -> None:
         """Start the process; it reports on its pipe."""
         self.pipe, theirs = _SPAWN.Pipe()
         self.process = _SPAWN.Process(target=self.target, args=(brief, theirs), name=f"limbtell {self.name}")
-        self.again_s, self.is_ready = None, False
+        self.again_s, self.is_ready, self.error = None, False, None
         # Ctrl-C reaches the whole group, but the parent decides the order of stopping: the child inherits
         # that SIGINT is blocked. The tracker would unblock it when it starts, so it has to run before.
         resource_tracker.ensure_running()
@@ -263,6 +264,7 @@ class _Child:
     def become(self, other: _Child) -> None:
         """Be the process that was the other."""
         self.process, self.pipe, self.is_ready = other.process, other.pipe, other.is_ready
+        self.error = None
         other.process = other.pipe = None
 
     @property
@@ -283,30 +285,29 @@ class _Child:
                 )
         said = self.heard()
         if said is None:
-            raise SystemFault(f"process {self.name}", self.last_words(), "a process that starts")
+            end = self.last_words()
+            raise self.error or SystemFault(f"process {self.name}", end, "a process that starts")
         self.is_ready = True
         return said
 
     def heard(self) -> Any:
-        """Return what it reports now, None when it does not; raise what the process could not do."""
+        """Return what it reports now, None when it does not; what it could not do is kept as `error`."""
         assert self.pipe is not None
         try:
             said = self.pipe.recv() if self.pipe.poll() else None
         except (EOFError, ConnectionResetError):
             return None
         if isinstance(said, LimbtellError):
-            raise said
+            self.error = said
+            return None
         return said
 
     def last_words(self) -> str:
         """Return why it ended, as far as it is known."""
         assert self.process is not None
         self.process.join(1.0)
-        try:
-            self.heard()
-        except LimbtellError as error:
-            return str(error)
-        return f"an end with code {self.process.exitcode}"
+        self.heard()
+        return str(self.error or f"an end with code {self.process.exitcode}")
 
     def stop(self) -> None:
         """Ask the process to stop, and make sure."""

@@ -19,7 +19,6 @@ from monitor.robot.pseudo_inertia import moved, pseudo_inertia
 _START = 2
 # A change of one of these makes the torque balance start anew.
 _BALANCE = ("boot", "mode", "drive", "brake", "tool", "payload", "payload_known", "support")
-_NOT_JUDGED = (Reason.GUIDED, Reason.CALIBRATING, Reason.FEET_ON_GROUND)
 _MODE_REASON = {"guided": Reason.GUIDED, "calibrating": Reason.CALIBRATING}
 
 
@@ -122,12 +121,19 @@ class ConditionKeeper:
         x["brake"] = 0 if known is None or known.brake is None else known.brake
         x["drive"] = 1 if known is None or known.drive is None else known.drive
         self._joints = [self._joint(i) for i in range(m)]
-        judged = np.array([c != Coverage.BLIND and r not in _NOT_JUDGED for c, r in self._joints])
+        judged = np.array([c != Coverage.BLIND for c, _ in self._joints]) & self._may_judge()
         # A row is judged when every joint on the wire that enters it is; base rows hold the feet's forces.
         x["judged"] = 0
         x["judged"][-m:] = np.all(judged | ~self._facts.row_needs, axis=1)
         self._whole = _whole(self._joints)
         self._show()
+
+    def _may_judge(self) -> bool:
+        """Return whether unexplained torque means anything: no hand that guides, no foot on the ground."""
+        known = self._condition
+        if self._facts.floating and (known is None or self._stale or known.support != "hoisted"):
+            return False
+        return known is None or known.mode not in _MODE_REASON
 
     def _joint(self, i: int) -> tuple[Coverage, Reason]:
         """Return coverage of joint i and the gravest reason for it."""

@@ -121,7 +121,8 @@ class Pipeline:
         if self._aligner.waiting:
             for sample, restart in self._aligner.waited(tick_ns):
                 self._step(sample, tick_ns, restart)
-        silent = tick_ns - self._sample_ns > self.facts.stream_stale_ns
+        # The samples of another robot are refused, which is no silence.
+        silent = tick_ns - self._sample_ns > self.facts.stream_stale_ns and not self._condition.refused
         self._condition.tick(tick_ns, silent)
         if silent and self._sample_ns and not self._silent:
             self._silent = True

@@ -1,0 +1,388 @@
+"""What the signal checks refuse never reaches the ledger, and they leave a healthy robot alone."""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Callable
+from typing import Any
+
+import numpy as np
+import pytest
+from numpy.typing import NDArray
+
+from monitor.flow.layout import Signal
+from monitor.setup.build import Setup
+from tests.flow.rig import (
+    PAIR,
+    PAIR_JOINTS,
+    PERIOD_NS,
+    SLED,
+    SLED_JOINTS,
+    Mover,
+    Rig,
+    base_fields,
+    both,
+    made,
+)
+
+Floats = NDArray[np.float64]
+
+LEDGER = (
+    "q_fast", "v_fast", "e_fast", "q_slow", "v_slow", "e_slow", "a", "p_fast", "p_slow", "r_fast", "r_slow",
+    "q", "v", "tau", "t_ns", "started", "stepped", "event_open", "line_q",
+)  # fmt: skip
+
+
+def turning(k: int) -> tuple[Floats, Floats]:
+    """Return q and qd of a slow turn at .5 and -.8 rad/s, after k samples."""
+    speed = np.array([0.5, -0.8])
+    return np.array([-0.4, 0.6]) + speed * 1e-3 * k, speed
+
+
+class Turning:
+    """A rig whose two joints turn steadily, with the torque that takes."""
+
+    def __init__(self, setup: Setup) -> None:
+        self.rig, self.k = Rig(setup), 0
+        self.mover = Mover(PAIR, (0.3, 0.1))
+
+    def send(
+        self, change: Callable[[dict[str, Any]], None] | None = None, step_ns: int = PERIOD_NS, skip: int = 0
+    ) -> None:
+        """Send the next sample, changed; `skip` so many before it."""
+        import pinocchio
+
+        self.k += 1 + skip
+        self.rig.seq += skip
+        q, qd = turning(self.k)
+        tau = pinocchio.rnea(self.mover.model, self.mover.data, q, qd, np.zeros(2))
+        fields: dict[str, Any] = {"q": q, "qd": qd.copy(), "tau": tau.copy()}
+        if change is not None:
+            change(fields)
+        self.rig.sample(step_ns=step_ns, **fields)
+
+    def run(self, count: int) -> None:
+        for _ in range(count):
+            self.send()
+
+    def ledger(self) -> bytes:
+        return b"".join(self.rig.state[name].tobytes() for name in LEDGER)
+
+    def signal(self) -> tuple[Signal, int]:
+        return Signal(int(self.rig.outputs["signal"])), int(self.rig.outputs["signal_joint"])
+
+
+@pytest.fixture
+def arm(pair_setup: Setup) -> Turning:
+    arm = Turning(pair_setup)
+    arm.run(700)
+    assert arm.rig.outputs["settling"] == 0
+    return arm
+
+
+def at(name: str, i: int, value: float) -> Callable[[dict[str, Any]], None]:
+    def change(fields: dict[str, Any]) -> None:
+        fields[name][i] = value
+
+    return change
+
+
+def moved(i: int, by: float) -> Callable[[dict[str, Any]], None]:
+    def change(fields: dict[str, Any]) -> None:
+        fields["q"][i] += by
+
+    return change
+
+
+@pytest.mark.parametrize(
+    ("change", "fault", "joint"),
+    [
+        (at("q", 0, math.nan), Signal.NON_FINITE, 0),
+        (at("qd", 1, math.inf), Signal.NON_FINITE, 1),
+        (at("tau", 1, -math.inf), Signal.NON_FINITE, 1),
+        (at("q", 0, 3.11), Signal.OUT_OF_RANGE, 0),
+        (at("q", 1, -3.11), Signal.OUT_OF_RANGE, 1),
+        (at("qd", 1, 9.1), Signal.OUT_OF_RANGE, 1),
+        (at("tau", 0, 181.0), Signal.OUT_OF_RANGE, 0),
+        (at("tau", 1, -91.0), Signal.OUT_OF_RANGE, 1),
+        (moved(0, 0.021), Signal.JUMP, 0),
+        (moved(1, -0.021), Signal.JUMP, 1),
+    ],
+)
+def test_a_bad_sample_is_named_and_never_enters_the_ledger(
+    arm: Turning, change: Callable[[dict[str, Any]], None], fault: Signal, joint: int
+) -> None:
+    before, rebased = arm.ledger(), int(arm.rig.state["rebased"])
+    arm.send(change)
+    assert arm.signal() == (fault, joint)
+    assert arm.ledger() == before
+    assert arm.rig.state["bad"][fault] == 1
+    detail = fault.name.lower().replace("_", "-")
+    name = ("upper", "lower")[joint]
+    assert arm.rig.standing() == {("signal", detail, name)}
+    alarm = arm.rig.alarms()[-1]
+    assert (alarm["verdict"], alarm["detail"], alarm["priority"]) == ("signal", detail, "medium")
+    # The next good one re-bases; the judgement pauses for the settling time and no longer.
+    arm.send()
+    if arm.signal()[0] == Signal.JUMP:  # back from where it had jumped to
+        arm.send()
+    assert arm.signal() == (Signal.OK, -1)
+    assert arm.rig.state["rebased"] == rebased + 1
+    assert arm.rig.outputs["settling"] == 1
+    arm.run(115)
+    assert arm.rig.outputs["settling"] == 1
+    arm.run(10)
+    assert arm.rig.outputs["settling"] == 0
+    # It clears by quiet, and left no residual and no event.
+    arm.run(200)
+    assert arm.rig.standing() == set()
+    assert {body["kind"] for body in arm.rig.alarms()} == {"signal"}
+    assert np.abs(arm.rig.outputs["r_fast"]).max() < 0.01
+
+
+def test_a_position_that_stays_while_its_velocity_says_otherwise_is_frozen(arm: Turning) -> None:
+    stuck = turning(arm.k)[0][1]
+    for _ in range(48):
+        arm.send(at("q", 1, stuck))
+        assert arm.signal()[0] in (Signal.OK, Signal.CONTRADICTION)
+    arm.run(0)
+    seen = set()
+    for _ in range(10):
+        arm.send(at("q", 1, stuck))
+        seen.add(arm.signal())
+    assert seen <= {(Signal.FROZEN, 1), (Signal.CONTRADICTION, 1), (Signal.OK, -1)}
+    assert any(fault in (Signal.FROZEN, Signal.CONTRADICTION) for fault, _ in seen)
+
+
+def test_a_slowly_turning_joint_that_freezes_is_called_frozen_after_the_stated_time(
+    pair_setup: Setup,
+) -> None:
+    rig = Rig(pair_setup)
+    weight = Mover(PAIR, (0.3, 0.1)).gravity_torque(np.array([0.1, 0.2]))
+    for k in range(600):
+        rig.sample([0.1 + 1e-4 * k, 0.2], [0.1, 0.0], weight)
+    first = None
+    for k in range(80):
+        rig.sample([0.1 + 1e-4 * 599, 0.2], [0.1, 0.0], weight)
+        if rig.outputs["signal"] and first is None:
+            first = k, Signal(int(rig.outputs["signal"])), int(rig.outputs["signal_joint"])
+    assert first == (50, Signal.FROZEN, 0)
+    # Until then the frozen reading is in the residual too; what is made of that is undecided.
+    assert ("signal", "frozen", "upper") in rig.standing()
+    assert {b["verdict"] for b in rig.alarms()} <= {"signal", "undecided"}
+
+
+def test_a_position_that_moves_otherwise_than_its_velocity_contradicts_it(pair_setup: Setup) -> None:
+    rig = Rig(pair_setup)
+    weight = Mover(PAIR, (0.3, 0.1)).gravity_torque(np.array([0.1, 0.2]))
+    for _ in range(600):
+        rig.sample([0.1, 0.2], [0.0, 0.0], weight)
+    seen = []
+    for k in range(300):
+        # Drifts at 1 rad/s while the velocity says nothing.
+        rig.sample([0.1, 0.2 + 1e-3 * k], [0.0, 0.0], weight)
+        seen.append((Signal(int(rig.outputs["signal"])), int(rig.outputs["signal_joint"])))
+    # d' = 1 - d / .1 s: .03 after -.1 ln(1 - .3) = 35.7 ms.
+    first = seen.index((Signal.CONTRADICTION, 1))
+    assert first == pytest.approx(36, abs=2)
+    assert set(seen[first:]) == {(Signal.CONTRADICTION, 1)}
+    assert ("signal", "contradiction", "lower") in rig.standing()
+    assert {b["verdict"] for b in rig.alarms()} <= {"signal", "undecided"}
+
+
+@pytest.mark.parametrize("hour_ns", [3_600_000_000_000, -3_600_000_000_000, 4_500_000, -900_000])
+def test_a_clock_that_is_set_is_reported_and_watching_goes_on(arm: Turning, hour_ns: int) -> None:
+    arm.rig.t_ns += 2 * 3_600_000_000_000
+    arm.send()
+    arm.run(1000)
+    arm.rig.messages.clear()
+    before, rebased = arm.ledger(), int(arm.rig.state["rebased"])
+    # The numbers go on, the clock does not; -.9 ms puts it just behind the last sample.
+    arm.send(step_ns=PERIOD_NS + hour_ns - (200_000 if hour_ns == -900_000 else 0))
+    assert arm.signal() == (Signal.CLOCK, -1)
+    assert arm.ledger() == before
+    arm.run(600)
+    assert arm.rig.state["rebased"] == rebased + 1
+    assert arm.rig.outputs["settling"] == 0
+    assert {(b["kind"], b["detail"]) for b in arm.rig.alarms()} == {("signal", "clock")}
+    assert arm.rig.standing() == set()
+    assert int(arm.rig.state["restarts"]) == 0
+
+
+def test_brakes_and_drives_are_still_watched_after_the_clock_was_set_back(arm: Turning) -> None:
+    rig = arm.rig
+    rig.condition(brake=[0, 1])
+    hold = turning(arm.k)[0]
+    weight = Mover(PAIR, (0.3, 0.1)).gravity_torque(hold)
+    for _ in range(500):
+        rig.sample(hold, [0.0, 0.0], weight, tau_cmd=weight.tolist())
+    rig.t_ns -= 3_600_000_000_000
+    # Time of the robot is above zero all the same.
+    rig.t_ns = max(rig.t_ns, 1_000)
+    for _ in range(700):
+        rig.sample(hold, [0.0, 0.0], weight, tau_cmd=weight.tolist())
+    for k in range(200):
+        asked = (weight + both(10.0, 0.0)).tolist()
+        rig.sample(hold + both(0.0, 2e-4 * k), [0.0, 0.2], weight, tau_cmd=asked)
+    kinds = {(b["kind"], b["joint"]) for b in rig.alarms() if b["kind"] in ("brake", "drive")}
+    assert kinds == {("brake", "lower"), ("drive", "upper")}
+
+
+def test_a_restart_of_the_robot_whose_first_sample_is_bad_raises_no_alarm_of_the_clock(arm: Turning) -> None:
+    arm.rig.elapse(2_000_000_000)
+    arm.rig.seq, arm.rig.t_ns = -1, 0
+    arm.send(at("q", 0, math.nan))
+    arm.run(700)
+    assert arm.rig.state["restarts"] == 1
+    assert arm.rig.state["bad"][Signal.CLOCK] == 0
+    assert {b["detail"] for b in arm.rig.alarms()} == {"stale", "non-finite"}
+    assert not [b for b in arm.rig.alarms() if b["kind"] == "unexplained-torque"]
+    assert np.abs(arm.rig.outputs["r_fast"]).max() < 0.01
+
+
+def test_bad_samples_in_a_row_are_no_gap_in_the_stream(arm: Turning) -> None:
+    for _ in range(60):
+        arm.send(at("tau", 0, math.nan))
+    arm.run(800)
+    assert {b["detail"] for b in arm.rig.alarms()} == {"non-finite"}
+    assert len(arm.rig.alarms()) == 2
+
+
+@pytest.mark.parametrize("where", ["duplicate", "swap", "restart", "lost"])
+def test_odd_arrivals_leave_no_spike(arm: Turning, where: str) -> None:
+    rig = arm.rig
+    if where == "duplicate":
+        for _ in range(300):
+            arm.send()
+            rig.seq -= 1
+            arm.k -= 1
+            arm.send(step_ns=0)
+    elif where == "swap":
+        for _ in range(150):
+            rig.seq += 1
+            rig.t_ns += PERIOD_NS
+            arm.k += 1
+            arm.send()
+            rig.seq -= 2
+            rig.t_ns -= 2 * PERIOD_NS
+            arm.k -= 2
+            arm.send()
+            rig.seq += 1
+            rig.t_ns += PERIOD_NS
+            arm.k += 1
+    elif where == "restart":
+        rig.elapse(50_000_000)
+        rig.seq, rig.t_ns = -1, -PERIOD_NS
+        arm.run(700)
+        assert rig.state["restarts"] == 1
+    else:
+        for lost in (1, 3, 18, 19, 25):
+            rig.t_ns += lost * PERIOD_NS
+            rig.elapse(lost * PERIOD_NS)
+            arm.send(skip=lost)
+            arm.run(300)
+    assert np.abs(rig.outputs["r_fast"]).max() < 0.01
+    assert max(m.body["band_ratio"]["upper"] for m in rig.messages if m.topic == "health") < 0.05
+    assert {b["detail"] for b in rig.alarms()} <= {"gap"}
+    assert rig.state["bad"][1:].sum() == 0
+    assert rig.state["duplicates"] == (300 if where == "duplicate" else 0)
+
+
+@pytest.mark.parametrize("kind", ["noise", "exact"])
+def test_a_robot_that_stands_still_for_minutes_fires_nothing(pair_setup: Setup, kind: str) -> None:
+    rig, rng = Rig(pair_setup), np.random.default_rng(7)
+    q = np.array([0.3, -0.5])
+    weight = Mover(PAIR, (0.3, 0.1)).gravity_torque(q)
+    for _ in range(120_000 // (4 if kind == "exact" else 1)):
+        if kind == "exact":
+            rig.sample(q, [0.0, 0.0], weight)
+        else:
+            # An encoder of 5e-5 rad that flips between two steps, and the configured noise.
+            seen = q + 5e-5 * rng.integers(0, 2, 2)
+            noise = rng.standard_normal((2, 2))
+            rig.sample(seen, 0.005 * noise[0], weight + np.array([0.2, 0.1]) * noise[1])
+    assert rig.alarms() == []
+    assert rig.state["bad"][1:].sum() == 0
+    assert rig.state["events"] == 0
+    assert rig.outputs["coverage_whole"] == 0
+
+
+def test_torque_at_its_limit_is_counted_and_no_alarm(pair_setup: Setup) -> None:
+    rig = Rig(pair_setup)
+    q, limit = [0.3, -0.5], np.array([0.0, 30.0])
+    for _ in range(100):
+        rig.sample(q, [0.0, 0.0], limit)
+    assert rig.state["at_limit"].tolist() == [0, 100]
+    assert rig.alarms() == []
+
+
+@pytest.mark.parametrize("known", [True, False])
+def test_a_drive_that_does_not_give_what_is_commanded_is_an_actuator_alarm_by_itself(
+    pair_setup: Setup, known: bool
+) -> None:
+    # Methods §7: 5 % of rated for 20 ms.
+    rig = Rig(pair_setup, known)
+    q = np.array([0.3, -0.5])
+    weight = Mover(PAIR, (0.3, 0.1)).gravity_torque(q)
+
+    def send(count: int, error: float) -> None:
+        for _ in range(count):
+            rig.sample(q, [0.0, 0.0], weight, tau_cmd=(weight + both(0.0, error)).tolist())
+
+    send(100, 0.99)  # just below 5 % of 20 N m
+    send(20, 1.01)
+    send(1, 0.0)
+    send(20, 1.01)
+    assert rig.alarms() == []
+    send(2, 1.01)
+    (alarm,) = rig.alarms()
+    assert (alarm["kind"], alarm["verdict"], alarm["detail"], alarm["joint"]) == (
+        "drive", "actuator", "command-differs", "lower",
+    )  # fmt: skip
+    send(1, 0.0)
+    assert rig.standing() == set()
+    assert rig.state["bad"][1:].sum() == 0
+
+
+def test_numbers_that_no_limit_names_are_bounded_before_they_can_spoil_the_ledger() -> None:
+    # Motors behind a coupling, and the base of a walker: finite but absurd, then healthy again.
+    sled = made(SLED, SLED_JOINTS, {"base": "floating"})
+    rig = Rig(sled)
+    q = np.array([0.0, 0.0, 1.0, 1.0, 0.0, 0.0, 0.0])
+    zeros = np.zeros(6)
+    for field, fault in (("p", "base-pose"), ("v", "base-pose"), ("w", "base-pose"), ("quat", "base-pose")):
+        for value in (1e200, -1e200, math.nan, math.inf):
+            for _ in range(5):
+                rig.sample([0.0, 0.0], [0.0, 0.0], [0.0, 0.0], **base_fields(q, zeros))
+            wild = base_fields(q, zeros)
+            wild["base"][field][1] = value
+            rig.sample([0.0, 0.0], [0.0, 0.0], [0.0, 0.0], **wild)
+            assert Signal(int(rig.outputs["signal"])) == Signal.BASE_POSE
+            assert ("signal", fault, None) in rig.standing()
+    for _ in range(20):
+        rig.sample([0.0, 0.0], [0.0, 0.0], [0.0, 0.0], **base_fields(q, zeros))
+    assert np.isfinite(rig.outputs["r_fast"]).all()
+    coupled = Rig(made(PAIR, PAIR_JOINTS, {"coupling": [[1.0, 0.5], [0.0, 1.0]]}))
+    for large in (1e200, 1e9):
+        coupled.sample([0.0, 0.0], [0.0, 0.0], [0.0, 0.0])
+        for q1, qd1 in ((large, 0.0), (0.0, large)):
+            coupled.sample([0.0, q1], [0.0, qd1], [0.0, 0.0])
+            assert Signal(int(coupled.outputs["signal"])) == Signal.OUT_OF_RANGE
+
+
+def test_a_slightly_long_quaternion_is_normalised_and_a_wrong_one_refused(sled_setup: Setup) -> None:
+    rig = Rig(sled_setup)
+    quat = np.array([0.8, 0.3, -0.4, 0.33])
+    quat /= np.linalg.norm(quat)
+    q, v = np.concatenate([[0.0, 0.0, 1.0], quat]), np.zeros(6)
+    for scale, fault in (
+        (1.0, Signal.OK),
+        (1.004, Signal.OK),
+        (1.02, Signal.BASE_POSE),
+        (0.0, Signal.BASE_POSE),
+    ):
+        fields = base_fields(q, v)
+        fields["base"]["quat"] = (scale * quat).tolist()
+        rig.sample([0.0, 0.0], [0.0, 0.0], [0.0, 0.0], **fields)
+        assert Signal(int(rig.outputs["signal"])) == fault
+        assert np.linalg.norm(rig.state["q"][3:7]) == pytest.approx(1.0, abs=1e-15)
