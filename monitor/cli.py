@@ -1,7 +1,7 @@
 """The command `limbtell`. Sub-commands of other packages join by the entry-point group `limbtell.commands`.
 
 Exit codes: 0 done or stopped on request; 1 a check or review found something wrong; 2 wrong input or failed
-to start; 3 a process of the daemon died too often.
+to start; 3 the loop died too often.
 """
 
 from __future__ import annotations
@@ -175,8 +175,10 @@ def _warn(message: Warning | str, *_: object) -> None:
 
 def main() -> None:
     """Run the command; an expected error is one line, not a traceback."""
-    for entry in entry_points(group="limbtell.commands"):
-        app.command(entry.name)(entry.load())
+    # Importing the other packages' commands takes half a second; ours do without.
+    if len(sys.argv) < 2 or sys.argv[1] not in ("init", "check", "watch"):
+        for entry in entry_points(group="limbtell.commands"):
+            app.command(entry.name)(entry.load())
     warnings.showwarning = _warn  # type: ignore[assignment]
     try:
         app()

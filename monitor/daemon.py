@@ -16,6 +16,7 @@ import sys
 import tempfile
 import time
 import uuid
+import warnings
 from collections.abc import Callable, Mapping
 from contextlib import suppress
 from dataclasses import dataclass, field
@@ -36,6 +37,7 @@ from monitor.edges.subscribe import Subscriber
 from monitor.errors import LimbtellError, SystemFault
 from monitor.flow import wire
 from monitor.loop import Loop, ask_rights
+from monitor.robot.urdf import ModelWarning
 from monitor.setup.build import Setup, build
 from monitor.setup.config import Config, loads
 from monitor.setup.shared import Shared, attach
@@ -45,8 +47,9 @@ STOPPED, DIED = 0, 3  # exit codes; 2 is "failed to start", by the command line
 _HANG_NS = 2_000_000_000  # a loop whose heartbeat is older is taken for dead
 _START_S = 120.0  # the first start on a machine compiles the kernels
 _STOP_S = 5.0
-_RESTART_PAUSE_S = 1.0
-_MOST_DEATHS = 5  # of one process within a minute: give up
+_RESTART_PAUSE_S = 1.0  # doubled with every death within a minute
+_LONGEST_PAUSE_S = 60.0
+_MOST_DEATHS = 5  # of the loop within a minute: give up
 _SPAWN = multiprocessing.get_context("spawn")
 
 
@@ -63,7 +66,9 @@ class Brief:
 
     def setup(self) -> Setup:
         """Return the configuration made ready; all processes have the same, whatever happens to the file."""
-        return build(self.config())
+        with warnings.catch_warnings():
+            warnings.simplefilter("ignore", ModelWarning)  # the parent has shown them
+            return build(self.config())
 
     def config(self) -> Config:
         """Return the configuration."""
@@ -323,11 +328,11 @@ class _Child:
         self.process.kill()
         self.process.join()
 
-    def died(self) -> bool:
-        """Count a death; True when there were too many within a minute."""
+    def died(self) -> int:
+        """Count a death; return how many there were within a minute."""
         now_s = time.monotonic()
         self.deaths_s = [s for s in self.deaths_s if now_s - s < 60.0] + [now_s]
-        return len(self.deaths_s) >= _MOST_DEATHS
+        return len(self.deaths_s)
 
 
 class _Heart:
@@ -382,7 +387,7 @@ class Parent:
         LimbtellError
             A process cannot do what the configuration asks: a port is in use.
         """
-        for number in (signal.SIGTERM, signal.SIGINT):
+        for number in (signal.SIGTERM, signal.SIGINT, signal.SIGHUP):
             signal.signal(number, self._signal)
         self._context: zmq.Context[zmq.Socket[bytes]] = zmq.Context()
         self._tell = self._context.socket(zmq.PUSH)
@@ -403,7 +408,7 @@ class Parent:
         return self._asked
 
     def _start(self) -> None:
-        setup = self._brief.setup()
+        setup = build(self._config)
         self._shared = self._brief.shared(setup)
         for child in (self._loop, *self._helpers):
             child.start(self._brief)
@@ -436,15 +441,15 @@ class Parent:
             wait([x.process.sentinel for x in children if x.process and not x.is_over], timeout=0.1)
             if self._is_asked_to_stop():
                 break
-            if not all(self._look_after(child) for child in (self._standby, *self._helpers)):
-                return DIED
+            for child in (self._standby, *self._helpers):
+                self._look_after(child)
             hung = self._heart.stands_still(int(self._shared.loop["tick_ns"][0]))
             if (self._loop.is_over or hung) and not self._take_over(hung):
                 return DIED
         return STOPPED
 
-    def _look_after(self, child: _Child) -> bool:
-        """Start a dead helper again after a pause and say when it is back; False when it dies too often."""
+    def _look_after(self, child: _Child) -> None:
+        """Start a dead helper again after a pause, and say when it is back. The loop goes on without it."""
         now_s = time.monotonic()
         if not child.is_over:
             if not child.is_ready and child.heard() is not None:
@@ -452,15 +457,12 @@ class Parent:
                 self._host({"recovered": child.name})
         elif child.again_s is None:
             text = f"{child.name} died: {child.last_words()}"
-            if child.died():
-                self._say(f"{text}, for the {_MOST_DEATHS}th time within a minute; giving up")
-                return False
-            self._say(f"{text}; starting it again")
+            pause_s = min(_LONGEST_PAUSE_S, _RESTART_PAUSE_S * 2 ** (child.died() - 1))
+            self._say(f"{text}; starting it again in {pause_s:g} s")
             self._host({"failed": child.name, "text": text})
-            child.again_s = now_s + _RESTART_PAUSE_S
+            child.again_s = now_s + pause_s
         elif now_s >= child.again_s:
             child.start(self._brief)
-        return True
 
     def _take_over(self, hung: bool) -> bool:
         """Put the standby in the place of a dead or hung loop; False when that happens too often."""
@@ -468,7 +470,7 @@ class Parent:
         why = "the loop hung" if hung else f"the loop died: {self._loop.last_words()}"
         self._loop.kill()
         held = {name: int(self._shared.state[name][0]) for name in numbers}
-        while not self._loop.died():
+        while self._loop.died() < _MOST_DEATHS:
             if self._standby.is_over:
                 self._standby.start(self._brief)
             self._loop.become(self._standby)

@@ -44,8 +44,9 @@ class WireError(LimbtellError):
     """
 
     def __init__(self, where: str, found: str, expected: str, kind: str = "malformed") -> None:
-        self.kind = kind
         super().__init__(where, found, expected)
+        self.kind = kind
+        self.args = (where, found, expected, kind)  # what a copy in another process is made of
 
 
 class SessionError(LimbtellError):

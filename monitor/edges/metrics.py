@@ -294,7 +294,7 @@ METRICS = (
     Declared(
         "limbtell_tick_overruns_total",
         "counter",
-        "Ticks left out because an earlier one took too long.",
+        "Deadlines that passed while a tick was still busy.",
         _loop("overruns"),
     ),
     Declared(

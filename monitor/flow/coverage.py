@@ -18,7 +18,7 @@ from monitor.robot.pseudo_inertia import moved, pseudo_inertia
 
 _START = 2
 # A change of one of these makes the torque balance start anew.
-_BALANCE = ("boot", "mode", "drive", "brake", "tool", "payload", "payload_known", "support")
+_BALANCE = ("boot", "mode", "drive", "brake", "stop", "tool", "payload", "payload_known", "support")
 _MODE_REASON = {"guided": Reason.GUIDED, "calibrating": Reason.CALIBRATING}
 
 
@@ -148,6 +148,8 @@ class ConditionKeeper:
             return Coverage.CONDITIONAL, Reason.CONDITION_UNKNOWN
         if known.mode in _MODE_REASON:
             return Coverage.CONDITIONAL, _MODE_REASON[known.mode]
+        if known.mode == "stopped" or known.stop is not None:
+            return Coverage.CONDITIONAL, Reason.STOPPED
         if self._facts.floating and known.support != "hoisted":
             return Coverage.CONDITIONAL, Reason.FEET_ON_GROUND
         if not known.payload_known or (known.payload is not None and self._facts.tool is None):

@@ -6,7 +6,7 @@ the counters of flow; `outputs` by the step. A block is a one-element structured
 `inputs`; `outputs` follow from them.
 
 Sizes: n degrees of freedom (a floating base counts six), nq numbers in q, m joints on the wire, N axes,
-D samples in the delay line, K rows of gains (one for each Δt of 1 to K periods).
+D samples in the delay line.
 """
 
 from __future__ import annotations
@@ -31,7 +31,6 @@ class Sizes(NamedTuple):
     m: int
     N: int
     D: int
-    K: int
 
     @property
     def base(self) -> int:
@@ -106,8 +105,9 @@ class Reason(IntEnum):
     CONDITION_UNKNOWN = 6  # topic `robot` absent or stale
     GUIDED = 7
     CALIBRATING = 8
-    FEET_ON_GROUND = 9  # floating base: foot forces are not told apart from faults
-    PAYLOAD_UNKNOWN = 10
+    STOPPED = 9  # a stop is in force: the drives may be braking or about to lose power
+    FEET_ON_GROUND = 10  # floating base: foot forces are not told apart from faults
+    PAYLOAD_UNKNOWN = 11
 
 
 class Notice(IntEnum):
@@ -137,6 +137,11 @@ KINDS = {
 LATENESS_EDGES_S = (50e-6, 100e-6, 200e-6, 500e-6, 1e-3, 2e-3, 5e-3, 10e-3, 50e-3, 200e-3)
 
 
+# Gains of the joint-space form are kept for Δt of 1 to so many periods; a longer gap re-bases. The number is
+# fixed, since it is part of the blocks' type, for which the step is compiled.
+GAIN_STEPS = 20
+
+
 class Right(IntEnum):
     """Whether the machine granted what the loop asked for."""
 
@@ -151,7 +156,7 @@ Field = tuple[str, str, tuple[Any, ...]]
 
 def params_fields(s: Sizes) -> list[Field]:
     """Constants of one robot and one configuration."""
-    n, m, N, K = s.n, s.m, s.N, s.K
+    n, m, N = s.n, s.m, s.N
     return [
         # the tree: see kernels/dynamics.py
         ("parent", i8, (N,)),
@@ -178,8 +183,12 @@ def params_fields(s: Sizes) -> list[Field]:
         ("friction_velocity", f8, (n,)),
         # the ledger
         ("form", i8, ()),
-        ("gain_fast", f8, (K, n, 3, 2)),  # by Δt in periods; rows q, v, e; columns position, velocity
-        ("gain_slow", f8, (K, n, 3, 2)),
+        (
+            "gain_fast",
+            f8,
+            (GAIN_STEPS, n, 3, 2),
+        ),  # by Δt in periods; rows q, v, e; columns position, velocity
+        ("gain_slow", f8, (GAIN_STEPS, n, 3, 2)),
         ("pole_fast", f8, ()),  # rad/s, momentum forms
         ("pole_slow", f8, ()),
         ("band_fast", f8, (n,)),  # N m; infinite where a row is never judged

@@ -85,6 +85,7 @@ class Pipeline:
         self._out: list[Message] = []
         self._sample_ns = 0  # when the last sample that was stepped had been received
         self._silent = False  # called: no sample for too long
+        self._first_tick_ns: int | None = None
         self._health_ns = 0
         self._last_bad: dict[Key, int] = {}  # alarms of single messages: cleared by quiet
         self._flagged: dict[Key, tuple[str, int]] = {}  # alarms of a joint that stand with a flag of the step
@@ -124,7 +125,7 @@ class Pipeline:
         # The samples of another robot are refused, which is no silence.
         silent = tick_ns - self._sample_ns > self.facts.stream_stale_ns and not self._condition.refused
         self._condition.tick(tick_ns, silent)
-        if silent and self._sample_ns and not self._silent:
+        if silent and not self._silent and self._is_overdue(tick_ns):
             self._silent = True
             self._raise(_STALE, Verdict("signal", "stale"), tick_ns)
         if self._last_bad or self._flagged:
@@ -134,6 +135,12 @@ class Pipeline:
             self._health(tick_ns)
         out, self._out = self._out, []
         return out
+
+    def _is_overdue(self, tick_ns: int) -> bool:
+        """Whether silence is news: at the start, the robot may take as long as its condition may."""
+        if self._first_tick_ns is None:
+            self._first_tick_ns = tick_ns
+        return bool(self._sample_ns) or tick_ns - self._first_tick_ns > self.facts.condition_stale_ns
 
     def _step(self, sample: wire.JointSample, now_ns: int, restart: bool = False) -> None:
         """Step one sample, and look closer only where the step took notice of something."""
@@ -330,6 +337,7 @@ class Pipeline:
                 "alarms": self._board.snapshot(),
                 "sample_ns": self._sample_ns,
                 "silent": self._silent,
+                "first_tick_ns": self._first_tick_ns,
                 "health_ns": self._health_ns,
                 "last_bad": [[list(key), at] for key, at in self._last_bad.items()],
                 "flagged": [[list(key), *flag] for key, flag in self._flagged.items()],
@@ -361,6 +369,7 @@ class Pipeline:
         self._condition.restore(saved["condition"])
         self._board.restore(saved["alarms"])
         self._sample_ns, self._silent = saved["sample_ns"], saved["silent"]
+        self._first_tick_ns = saved["first_tick_ns"]
         self._health_ns = saved["health_ns"]
         self._last_bad = {Key(*key): at for key, at in saved["last_bad"]}
         self._flagged = {Key(*key): (field, i) for key, field, i in saved["flagged"]}

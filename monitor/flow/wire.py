@@ -7,6 +7,7 @@ the `inputs` block, so that handing it to the step is one copy.
 from __future__ import annotations
 
 import math
+import reprlib
 import struct
 from collections.abc import Mapping, Sequence
 from typing import Any, NamedTuple
@@ -22,6 +23,8 @@ _LEAST_KEYS = 6  # v, seq, t_ns, q, qd, tau
 _LARGEST = 1e6  # kg, m, kg m²: no robot carries more, and sums of squares stay finite
 _NUMBERS = frozenset((float, int))
 _NO_BASE = bytes(8 * 13)
+_SHORT = reprlib.Repr()  # an error says what was found in a few words, however much it was
+_SHORT.maxlevel, _SHORT.maxlist, _SHORT.maxstring, _SHORT.maxother = 2, 8, 60, 60
 MODES = ("work", "guided", "calibrating", "stopped")
 SUPPORTS = ("ground", "hoisted", "carried", "docked")
 
@@ -103,9 +106,9 @@ class JointsFormat:
             raise WireError("joints v", repr(message.get("v")), f"version {VERSION}", kind="version")
         seq, t_ns = message.get("seq"), message.get("t_ns")
         if type(seq) is not int or not 0 <= seq <= INT64_MAX:
-            raise WireError("joints seq", _short(seq), "an integer from 0 to 2^63 - 1")
+            raise WireError("joints seq", _SHORT.repr(seq), "an integer from 0 to 2^63 - 1")
         if type(t_ns) is not int or not 0 <= t_ns <= INT64_MAX:
-            raise WireError("joints t_ns", _short(t_ns), "nanoseconds from 0 to 2^63 - 1")
+            raise WireError("joints t_ns", _SHORT.repr(t_ns), "nanoseconds from 0 to 2^63 - 1")
         q: Any = message.get("q")
         qd: Any = message.get("qd")
         tau: Any = message.get("tau")
@@ -162,26 +165,28 @@ class JointsFormat:
                 return value
             value = list(self._row.unpack(value))
         if type(value) is not list or len(value) != m:
-            found = f"{len(value)} values" if type(value) is list else _short(value)
+            found = f"{len(value)} values" if type(value) is list else _SHORT.repr(value)
             raise WireError(f"joints {name}", found, f"{m} values, one for each joint")
         if not _NUMBERS.issuperset(map(type, value)):
-            raise WireError(f"joints {name}", _short(value), "numbers only")
+            raise WireError(f"joints {name}", _SHORT.repr(value), "numbers only")
         try:
             return self._row.pack(*(value if order is None else [value[i] for i in order]))
         except (struct.error, OverflowError):
-            raise WireError(f"joints {name}", _short(value), "numbers a double can hold") from None
+            raise WireError(f"joints {name}", _SHORT.repr(value), "numbers a double can hold") from None
 
     def _order(self, names: Any) -> tuple[int, ...] | None:
         """Return where each configured joint stands in the sender's order, None when it is the same."""
         if type(names) is not list or any(type(name) is not str for name in names):
-            raise WireError("joints names", _short(names), "a list of joint names", kind="names")
+            raise WireError("joints names", _SHORT.repr(names), "a list of joint names", kind="names")
         key = tuple(names)
         if key not in self._orders:
             if sorted(key) != sorted(self.names):
                 unknown = sorted(set(key) - set(self.names))
                 missing = sorted(set(self.names) - set(key))
-                found = f"unknown {_short(unknown)}, missing {_short(missing)}"
-                raise WireError("joints names", found, f"the joints {_short(list(self.names))}", kind="names")
+                found = f"unknown {_SHORT.repr(unknown)}, missing {_SHORT.repr(missing)}"
+                raise WireError(
+                    "joints names", found, f"the joints {_SHORT.repr(list(self.names))}", kind="names"
+                )
             if len(self._orders) > 1000:
                 self._orders = {self.names: None}
             self._orders[key] = tuple(key.index(name) for name in self.names)
@@ -204,19 +209,19 @@ def unpack(payload: bytes, topic: str) -> dict[str, Any]:
 def _base(value: Any) -> bytes:
     """Return the base state as `inputs` holds it: p, quat, v, w."""
     if type(value) is not dict:
-        raise WireError("joints base", _short(value), "a map with p, quat, v, w (floating base)")
+        raise WireError("joints base", _SHORT.repr(value), "a map with p, quat, v, w (floating base)")
     numbers: list[float] = []
     for name, size in (("p", 3), ("quat", 4), ("v", 3), ("w", 3)):
         part = value.get(name)
         if type(part) is bytes and len(part) == 8 * size:
             part = list(struct.unpack(f"<{size}d", part))
         if type(part) is not list or len(part) != size or not _NUMBERS.issuperset(map(type, part)):
-            raise WireError(f"joints base {name}", _short(part), f"{size} numbers")
+            raise WireError(f"joints base {name}", _SHORT.repr(part), f"{size} numbers")
         numbers += part
     try:
         return struct.pack("<13d", *numbers)
     except (struct.error, OverflowError):
-        raise WireError("joints base", _short(numbers), "numbers a double can hold") from None
+        raise WireError("joints base", _SHORT.repr(numbers), "numbers a double can hold") from None
 
 
 def decode_condition(payload: bytes, joints: int) -> Condition:
@@ -226,7 +231,7 @@ def decode_condition(payload: bytes, joints: int) -> Condition:
     for name in ("serial", "boot", "mode", "stop", "tool", "support", "program", "revision"):
         value = message.get(name)
         if value is not None and type(value) is not str:
-            raise WireError(f"robot {name}", _short(value), "text or null")
+            raise WireError(f"robot {name}", _SHORT.repr(value), "text or null")
         texts[name] = value
     for name, allowed in (("mode", MODES), ("support", SUPPORTS)):
         if texts[name] is not None and texts[name] not in allowed:
@@ -243,18 +248,18 @@ def decode_condition(payload: bytes, joints: int) -> Condition:
 def _flags(where: str, value: Any, size: int) -> tuple[int, ...]:
     # 0 and 1, or false and true: `in` compares by value.
     if type(value) is not list or len(value) != size or any(x not in (0, 1) for x in value):
-        raise WireError(where, _short(value), f"{size} values 0 or 1")
+        raise WireError(where, _SHORT.repr(value), f"{size} values 0 or 1")
     return tuple(int(x) for x in value)
 
 
 def _payload(value: Any) -> Payload:
     if type(value) is not dict:
-        raise WireError("robot payload", _short(value), "a map with m, c, I")
+        raise WireError("robot payload", _SHORT.repr(value), "a map with m, c, I")
     mass = _number("robot payload m", value.get("m"))
     com = _numbers("robot payload c", value.get("c", [0.0, 0.0, 0.0]), 3)
     rows = value.get("I", [[0.0] * 3] * 3)
     if type(rows) is not list or len(rows) != 3:
-        raise WireError("robot payload I", _short(rows), "three rows of three numbers")
+        raise WireError("robot payload I", _SHORT.repr(rows), "three rows of three numbers")
     inertia = tuple(_numbers("robot payload I", row, 3) for row in rows)
     if mass < 0.0:
         raise WireError("robot payload m", repr(mass), "a mass of at least 0 kg")
@@ -264,13 +269,13 @@ def _payload(value: Any) -> Payload:
 def _number(where: str, value: Any) -> float:
     # Also false for NaN.
     if type(value) not in _NUMBERS or not abs(value) <= _LARGEST:
-        raise WireError(where, _short(value), f"a number up to {_LARGEST:g}")
+        raise WireError(where, _SHORT.repr(value), f"a number up to {_LARGEST:g}")
     return float(value)
 
 
 def _numbers(where: str, value: Any, size: int) -> tuple[float, float, float]:
     if type(value) is not list or len(value) != size:
-        raise WireError(where, _short(value), f"{size} numbers")
+        raise WireError(where, _SHORT.repr(value), f"{size} numbers")
     x, y, z = (_number(where, part) for part in value)
     return x, y, z
 
@@ -282,14 +287,14 @@ def decode_host(payload: bytes) -> Host:
     if utc == (None, None):
         utc = None
     elif not all(map(_is_int64, utc)):
-        raise WireError("host utc_offset_ns, utc_uncertainty_ns", _short(utc), "two integers of 64 bits")
+        raise WireError("host utc_offset_ns, utc_uncertainty_ns", _SHORT.repr(utc), "two integers of 64 bits")
     loop = message.get("loop")
     if loop is not None and not (type(loop) is dict and all(_is_int64(figure) for figure in loop.values())):
-        raise WireError("host loop", _short(loop), "figures by name")
+        raise WireError("host loop", _SHORT.repr(loop), "figures by name")
     texts = {name: message.get(name) for name in ("failed", "text", "recovered")}
     for name, value in texts.items():
         if value is not None and type(value) is not str:
-            raise WireError(f"host {name}", _short(value), "text or null")
+            raise WireError(f"host {name}", _SHORT.repr(value), "text or null")
     return Host(utc, loop, texts["failed"], texts["text"] or "", texts["recovered"])
 
 
@@ -301,8 +306,3 @@ def pack(message: Mapping[str, Any]) -> bytes:
     """Return the bytes of an outgoing message."""
     packed: bytes = msgpack.packb(message)
     return packed
-
-
-def _short(value: Any) -> str:
-    text = repr(value)
-    return text if len(text) <= 80 else text[:77] + "..."

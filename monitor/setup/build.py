@@ -13,6 +13,7 @@ from scipy.linalg import solve_discrete_are
 
 from monitor.errors import ConfigError
 from monitor.flow.layout import (
+    GAIN_STEPS,
     Facts,
     Form,
     Sizes,
@@ -32,8 +33,6 @@ from monitor.setup.config import Config, JointConfig
 
 Floats = NDArray[np.float64]
 
-# Gains are kept for Δt of up to so many periods; longer gaps re-base.
-_MOST_GAIN_STEPS = 64
 # A brake that is reported closed may still be closing; from then on the joint must stand.
 _BRAKE_SETTLE_S = 0.3
 # Where nothing else bounds a reading: rad or m, and per second. Beyond, arithmetic would overflow.
@@ -88,12 +87,12 @@ def build(config: Config) -> Setup:
     armature = {j.name: 0.0 if j.torque_meaning == "link" else j.armature for j in joints}
     tree = build_tree(description, config.robot.base, armature)
     lags, D = _lags(config)
-    sizes = Sizes(tree.n, tree.nq, len(joints), len(tree.arrays.parent), D, _gain_steps(config))
+    sizes = Sizes(tree.n, tree.nq, len(joints), len(tree.arrays.parent), D)
     params = zeros(params_fields(sizes))
     _fill_tree(params, tree, config)
     _fill_wire(params, tree, config, lags)
     _fill_friction(params, tree, config)
-    _fill_ledger(params, sizes, tree, config)
+    _fill_ledger(params, tree, config)
     _fill_limits(params, tree, config)
     params.flags.writeable = False
     return Setup(config, tree, sizes, _facts(where, tree, config), params, tree.arrays.E.copy())
@@ -173,23 +172,19 @@ def _fill_friction(params: Any, tree: Tree, config: Config) -> None:
             params["friction_offset"][0, row] = joint.friction_offset
 
 
-def _gain_steps(config: Config) -> int:
-    return min(_MOST_GAIN_STEPS, max(1, math.ceil(config.watch.gap_limit_s * config.input.rate_hz)))
-
-
-def _fill_ledger(params: Any, sizes: Sizes, tree: Tree, config: Config) -> None:
+def _fill_ledger(params: Any, tree: Tree, config: Config) -> None:
     watch, period_s = config.watch, 1.0 / config.input.rate_hz
     params["form"] = Form[watch.residual.upper().replace("-", "_")]
     params["pole_fast"] = 2.0 * math.pi * watch.fast_bandwidth_hz
     params["pole_slow"] = 2.0 * math.pi * watch.slow_bandwidth_hz
     noises = _noises(tree, config)
-    for k in range(sizes.K):
+    for k in range(GAIN_STEPS):
         for i, (position_sd, velocity_sd) in enumerate(noises):
             dt_s = (k + 1) * period_s
             params["gain_fast"][0, k, i] = riccati_gain(position_sd, velocity_sd, watch.fast_walk, dt_s)
             params["gain_slow"][0, k, i] = riccati_gain(position_sd, velocity_sd, watch.slow_walk, dt_s)
     params["period_ns"] = round(1e9 * period_s)
-    params["gap_ns"] = round(1e9 * max(1.5 * period_s, min(watch.gap_limit_s, (sizes.K + 0.5) * period_s)))
+    params["gap_ns"] = round(1e9 * max(1.5 * period_s, min(watch.gap_limit_s, (GAIN_STEPS + 0.5) * period_s)))
     params["settle_ns"] = round(1e9 * watch.settle_s)
     params["start_settle_ns"] = round(1e9 * watch.start_settle_s)
     params["quiet_ns"] = round(1e9 * watch.quiet_s)

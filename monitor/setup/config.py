@@ -436,10 +436,13 @@ class WatchConfig(Table):
     )
     gap_limit_s: Positive = Field(
         default=0.02,
-        description="Lost samples in a row that span longer raise a signal alarm; shorter are counted [s].",
+        description=(
+            "Lost samples in a row that span longer raise a signal alarm, and the balance begins anew; "
+            "fewer are bridged and counted. At most 20 periods are bridged [s]."
+        ),
     )
     clock_jump_periods: Positive = Field(
-        default=3.0, description="How far the robot's clock may leave `seq` between two samples [periods]."
+        default=50.0, description="How far the robot's clock may leave `seq` between two samples [periods]."
     )
     position_margin: NotNegative = Field(
         default=0.1, description="How far beyond the travel a position is still credible [rad or m]."

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+import atexit
+import shutil
 import tempfile
 from collections.abc import Iterator
 from pathlib import Path
@@ -13,9 +15,16 @@ from monitor.setup.template import write_config
 from replay.simulate import DATASHEET, TANH_V0, URDF, Rind, Schedule
 
 
+def temporary_folder() -> Path:
+    """Return a folder that is removed when the benchmark ends."""
+    folder = Path(tempfile.mkdtemp(prefix="limbtell-bench-"))
+    atexit.register(shutil.rmtree, folder, ignore_errors=True)
+    return folder
+
+
 def rind_config(**changes: str) -> Config:
     """Return the configuration `limbtell init` writes for *Rind*, lines changed as `key = "value"` texts."""
-    folder = Path(tempfile.mkdtemp(prefix="limbtell-bench-"))
+    folder = temporary_folder()
     text = write_config(URDF, "fixed", DATASHEET, folder)
     text = text.replace("friction_velocity = 0.004", f"friction_velocity = {TANH_V0}")
     for old, new in changes.items():

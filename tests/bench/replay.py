@@ -2,14 +2,12 @@
 
 from __future__ import annotations
 
-import tempfile
 import time
-from pathlib import Path
 
 from monitor.session import Session, SessionWriter
 from monitor.setup.build import build
 from replay.run import Replay
-from tests.bench.common import messages, rind_config
+from tests.bench.common import messages, rind_config, temporary_folder
 
 _SECONDS = 20.0
 
@@ -18,7 +16,7 @@ def run() -> None:
     """Print the ratio of recorded to needed CPU time, the best and the worst of some turns."""
     config = rind_config()
     build(config).warm()
-    path = Path(tempfile.mkdtemp(prefix="limbtell-bench-")) / "minute.mcap"
+    path = temporary_folder() / "minute.mcap"
     writer = SessionWriter(
         path,
         config_toml=config.source_toml,

@@ -8,9 +8,13 @@ from pathlib import Path
 import msgpack
 import numpy as np
 
+from monitor.session import TICK, TUPLE, Session
+from monitor.setup.build import build
+from monitor.setup.config import loads
 from replay.simulate import DATASHEET, URDF
 from tests.daemon.conftest import Start
 from tests.daemon.running import conversation
+from tests.flow.test_mujoco import RATED, expected
 from tests.replay.rind import condition, write_rind
 from tests.worlds.arm import ArmWorld, Friction, Push, random_motion, simulate
 from tests.worlds.noise import with_noise
@@ -24,6 +28,24 @@ WORLD = ArmWorld(
 )
 PUSH = Push(1.5, 0.4, "spar", (50.0, 60.0, -30.0), (0.0, 0.05, 0.1))
 MS = 1_000_000
+
+
+def residuals_of(path: Path) -> tuple[list[int], np.ndarray]:
+    """Return which samples of the arm a session shows as stepped, and the fast residual (T,n) after each."""
+    session = Session(path)
+    setup = build(loads(session.config_toml, str(path), session.model))
+    pipeline = setup.pipeline(session.run)
+    state, stepped, residuals = pipeline.blocks.state[0], [], []
+    for kind, topic, payload, time_ns in session.records():
+        before = state["stepped"]
+        if kind == TUPLE:
+            pipeline.feed(topic, payload, time_ns)
+        elif kind == TICK:
+            pipeline.tick(time_ns)
+        if state["stepped"] > before:
+            stepped.append(int(state["t_ns"]) // MS)
+            residuals.append(state["r_fast"].copy())
+    return stepped, np.array(residuals)
 
 
 def test_a_push_is_felt_at_a_joint_that_it_loads_and_nothing_before(start: Start, tmp_path: Path) -> None:
@@ -56,6 +78,13 @@ def test_a_push_is_felt_at_a_joint_that_it_loads_and_nothing_before(start: Start
         ]
         health = listener.health()
         assert daemon.stop() == 0
+
+    # Replayed, the session's residual is the engine's torque as the filter shows it.
+    # Noise at the worst joint is .0085 of rated torque rms (tests/flow/test_mujoco.py).
+    rows_seen, residual = residuals_of(daemon.sessions()[0])
+    error = (residual - expected(arm.tau_ext, "joint-space", slow=False)[rows_seen])[600:] / RATED
+    assert np.sqrt((error**2).mean(axis=0)).max() < 0.012
+    assert np.abs(error.mean(axis=0)).max() < 5e-4
 
     assert PUSH.start_s < felt["onset_t"] <= felt["t"] < PUSH.start_s + 0.15
     assert all(a["t"] < PUSH.start_s + PUSH.duration_s + 0.3 for a in others)

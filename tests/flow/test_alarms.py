@@ -200,12 +200,19 @@ def test_the_stream_going_silent_is_noticed_and_robot_time_goes_on_by_ours(pair:
     assert pair.standing() == set()
 
 
-def test_before_the_first_sample_there_is_no_stream_to_be_stale(pair_setup: Setup) -> None:
+def test_a_robot_may_start_after_the_monitor_but_not_stay_away(pair_setup: Setup) -> None:
     rig = Rig(pair_setup, known=False)
-    for _ in range(300):
+    patience_ns = pair_setup.facts.condition_stale_ns
+    for _ in range(patience_ns // PERIOD_NS):
         rig.elapse(PERIOD_NS)
     assert rig.alarms() == []
     assert rig.outputs["reason_whole"] == 1
+    for _ in range(100):
+        rig.elapse(PERIOD_NS)
+    (alarm,) = rig.alarms()
+    assert (alarm["kind"], alarm["detail"], alarm["state"]) == ("signal", "stale", UNACKNOWLEDGED)
+    stand(rig, 10)
+    assert rig.alarms()[-1]["state"] == RETURNED
 
 
 def test_utc_is_told_once_the_offset_is_known(pair: Rig) -> None:

@@ -127,16 +127,16 @@ def iterated_gain(position_sd: float, velocity_sd: float, walk: float, dt: float
     """Return the gain the plain recursion of the covariance settles to (any textbook on Kalman filters)."""
     A = np.array([[1.0, dt, dt * dt / 2.0], [0.0, 1.0, dt], [0.0, 0.0, 1.0]])
     H = np.eye(3)[:2]
-    # Exact covariance of a random walk of the acceleration, held constant at its mean over dt.
+    # The step of the random walk is spread evenly over dt, as the docstring of riccati_gain says.
     g = np.array([dt * dt / 6.0, dt / 2.0, 1.0])
     Q = walk**2 * dt * np.outer(g, g)
     R = np.diag([position_sd**2, velocity_sd**2])
     P: Floats = np.diag([position_sd**2, velocity_sd**2, (30.0 * walk) ** 2])
     K: Floats = np.zeros((3, 2))
     for _ in range(20_000):
-        K = np.linalg.solve(H @ P @ H.T + R, H @ P).T
-        P = (np.eye(3) - K @ H) @ P
-        P = A @ (0.5 * (P + P.T)) @ A.T + Q
+        K = np.asarray(np.linalg.solve(H @ P @ H.T + R, H @ P).T, np.float64)
+        P = np.asarray((np.eye(3) - K @ H) @ P, np.float64)
+        P = np.asarray(A @ (0.5 * (P + P.T)) @ A.T + Q, np.float64)
     return K
 
 
