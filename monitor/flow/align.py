@@ -46,13 +46,8 @@ class Aligner:
         self._next: int | None = None  # seq whose turn it is; None: whatever comes first
         # (seq, t_ns, receive time) of the last released samples, at the place seq modulo the memory's length
         self._seen: list[tuple[int, int, int] | None] = [None] * _MEMORY
-        self._early: dict[int, tuple[JointSample, int]] = {}  # overtook a missing one: with receive time
+        self.early: dict[int, tuple[JointSample, int]] = {}  # overtook a missing one; with receive time
         self._restart = False
-
-    @property
-    def waiting(self) -> int:
-        """Number of samples that arrived and wait for an earlier one."""
-        return len(self._early)
 
     def restart(self) -> None:
         """Forget the numbering: the robot said that it was powered up anew."""
@@ -60,16 +55,16 @@ class Aligner:
         self._forget()
 
     def _forget(self) -> None:
-        self._counts["late"] += len(self._early)
+        self._counts["late"] += len(self.early)
         self._next = None
         self._seen = [None] * _MEMORY
-        self._early.clear()
+        self.early.clear()
         self._restart = True
 
     def follows(self, sample: JointSample, received_ns: int) -> bool:
         """Release a sample that simply is the next; False for any other, which has to go to `arrived`."""
         seq, t_ns, _ = sample
-        if seq != self._next or self._early or self._restart:
+        if seq != self._next or self.early or self._restart:
             return False
         self._next = seq + 1
         self._seen[seq % _MEMORY] = (seq, t_ns, received_ns)
@@ -85,24 +80,24 @@ class Aligner:
         if self._next is None or sample.seq == self._next:
             yield self._release(sample, received_ns)
             yield from self._in_turn()
-        elif sample.seq in self._early:
+        elif sample.seq in self.early:
             self._counts["duplicates"] += 1
         else:
-            self._early[sample.seq] = (sample, received_ns)
+            self.early[sample.seq] = (sample, received_ns)
             yield from self.waited(received_ns)
 
     def waited(self, now_ns: int) -> Iterator[Released]:
         """Yield what needs wait no longer, because the missing ones took too long."""
-        while self._early and now_ns - min(at for _, at in self._early.values()) >= self._wait_ns:
-            first = min(self._early)
+        while self.early and now_ns - min(at for _, at in self.early.values()) >= self._wait_ns:
+            first = min(self.early)
             assert self._next is not None
             self._counts["lost"] += first - self._next
             self._next = first
             yield from self._in_turn()
 
     def _in_turn(self) -> Iterator[Released]:
-        while self._early and self._next in self._early:
-            yield self._release(*self._early.pop(self._next))
+        while self.early and self._next in self.early:
+            yield self._release(*self.early.pop(self._next))
 
     def _release(self, sample: JointSample, received_ns: int) -> Released:
         restart, self._restart = self._restart, False
@@ -136,7 +131,7 @@ class Aligner:
         return {
             "next": self._next,
             "seen": [one for one in self._seen if one is not None],
-            "early": [[s.seq, s.t_ns, s.body, at] for s, at in self._early.values()],
+            "early": [[s.seq, s.t_ns, s.body, at] for s, at in self.early.values()],
             "restart": self._restart,
         }
 
@@ -146,5 +141,5 @@ class Aligner:
         self._seen = [None] * _MEMORY
         for seq, t_ns, at in saved["seen"]:
             self._seen[seq % _MEMORY] = (seq, t_ns, at)
-        self._early = {seq: (JointSample(seq, t_ns, body), at) for seq, t_ns, body, at in saved["early"]}
+        self.early = {seq: (JointSample(seq, t_ns, body), at) for seq, t_ns, body, at in saved["early"]}
         self._restart = saved["restart"]

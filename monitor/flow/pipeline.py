@@ -119,7 +119,7 @@ class Pipeline:
 
     def tick(self, tick_ns: int) -> list[Message]:
         """Look at what waited and what is missing; return all messages since the last tick."""
-        if self._aligner.waiting:
+        if self._aligner.early:
             for sample, restart in self._aligner.waited(tick_ns):
                 self._step(sample, tick_ns, restart)
         # The samples of another robot are refused, which is no silence.

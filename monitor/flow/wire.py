@@ -13,6 +13,7 @@ from collections.abc import Mapping, Sequence
 from typing import Any, NamedTuple
 
 import msgpack
+from msgpack import unpackb
 
 from monitor.errors import WireError
 
@@ -198,7 +199,7 @@ def unpack(payload: bytes, topic: str) -> dict[str, Any]:
     if len(payload) > _LONGEST:
         raise WireError(topic, f"{len(payload)} bytes", f"at most {_LONGEST} bytes")
     try:
-        message = msgpack.unpackb(payload, strict_map_key=True)
+        message = unpackb(payload)  # map keys have to be text or bytes: the library's default
     except (ValueError, TypeError, RecursionError, msgpack.UnpackException) as error:
         raise WireError(topic, f"{len(payload)} bytes ({type(error).__name__})", "a msgpack map") from None
     if type(message) is not dict:

@@ -380,7 +380,7 @@ def test_the_data_path_takes_any_topics_and_bytes_and_every_message_is_accounted
     s = rig.state
     joints = [payload for topic, payload, _ in sent if topic == "joints"]
     assert s["received"] == len(joints)
-    left = s["bad"].sum() + s["duplicates"] + s["late"] + s["refused"] + rig.pipeline._aligner.waiting
+    left = s["bad"].sum() + s["duplicates"] + s["late"] + s["refused"] + len(rig.pipeline._aligner.early)
     assert left == sum(map(is_sample, joints))
     assert s["wire_errors"] >= len(joints) - left
     for message in rig.messages:
