@@ -1,4 +1,4 @@
-# Sourced by deploy/demo.sh and tests/run.sh: makes the environment .venv of this checkout and installs into it.
+# Sourced by deploy/demo.sh and tests/run.sh: makes an environment in this checkout and installs into it.
 # Usage: make_environment FOLDER WHAT…    (WHAT as pip takes it, for example -e '.[test]')
 
 fail() {

@@ -366,7 +366,9 @@ class Parent:
 
     def __init__(self, config: Config, say: Callable[[str], None]) -> None:
         self._config, self._say = config, say
-        folder = Path(tempfile.mkdtemp(prefix="limbtell-"))
+        # In memory where that is possible: the loop writes the shared blocks in every tick.
+        memory = "/dev/shm" if os.access("/dev/shm", os.W_OK) and "TMPDIR" not in os.environ else None
+        folder = Path(tempfile.mkdtemp(prefix="limbtell-", dir=memory))
         self._brief = Brief(
             config.source_toml, str(config.path), config.model_files(), folder, uuid.uuid4().hex, os.getpid()
         )

@@ -151,9 +151,9 @@ class Loop:
             taken += 1
             topic, payload = message
             now = time.monotonic_ns()
-            feed(topic, payload, now)
             if recorder is not None:
                 recorder.record(topic, payload, now)
+            feed(topic, payload, now)
         else:
             self._add("full_ticks", 1)
         out = self._pipeline.tick(tick_ns)

@@ -200,6 +200,11 @@ class SessionWriter:
             self._file.flush()
             os.fsync(self._file.fileno())
 
+    @property
+    def is_empty(self) -> bool:
+        """Whether no chunk was closed yet: then nothing in the file can be replayed."""
+        return self._chunks == 0
+
     def _begin_chunk(self) -> None:
         self._records = 0
         self._bytes = 0

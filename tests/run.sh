@@ -24,8 +24,10 @@ $bin/python -m build --wheel --outdir "$elsewhere/wheel" . >"$elsewhere/build.lo
     tail -n 20 "$elsewhere/build.log" >&2
     exit 1
 }
-make_environment .venv-wheel "$elsewhere"/wheel/*.whl pytest
-.venv-wheel/bin/python -m pip install --quiet --disable-pip-version-check --no-deps --force-reinstall "$elsewhere"/wheel/*.whl
+make_environment .venv-wheel pytest
+pip="$PWD/.venv-wheel/bin/python -m pip install --quiet --disable-pip-version-check"
+$pip "$elsewhere"/wheel/*.whl
+$pip --no-deps --force-reinstall "$elsewhere"/wheel/*.whl # the version may be the same as before, the code not
 cp tests/test_installed.py "$elsewhere/"
 cd "$elsewhere"
 "$OLDPWD/.venv-wheel/bin/python" -P -m pytest -q -m installed -c /dev/null --rootdir "$elsewhere" test_installed.py \

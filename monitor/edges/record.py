@@ -15,13 +15,15 @@ from typing import Any
 import msgpack
 import zmq
 
-from monitor.errors import SystemFault
+from monitor.errors import SystemFault, WireError
+from monitor.flow import wire
 from monitor.session import SessionWriter
 from monitor.setup.config import Config
 
 _BATCH_NS = 20_000_000
 _BATCH_RECORDS = 200
 _RETRY_S = 10.0
+_OWN_FILES = "????????T??????Z-????????-*.mcap"
 
 
 class RecordFeed:
@@ -128,7 +130,7 @@ class Recorder:
             self._snapshot(*record)
         elif self._writer is not None:
             topic, payload, received_ns = record
-            self._writer.tuple(topic, payload, received_ns)
+            self._writer.tuple(topic, payload, received_ns, _robot_time(topic, payload))
 
     def _snapshot(self, state: bytes, tick_ns: int, offset_ns: int, uncertainty_ns: int) -> None:
         now_s = time.monotonic()
@@ -170,8 +172,8 @@ class Recorder:
                 return path
 
     def _make_room(self, folder: Path) -> None:
-        """Remove the oldest sessions beyond the limit."""
-        sessions = sorted(folder.glob("*.mcap"), key=lambda path: path.stat().st_mtime)
+        """Remove the oldest of our own sessions beyond the limit; what else lies there is left alone."""
+        sessions = sorted(folder.glob(_OWN_FILES), key=lambda path: path.stat().st_mtime)
         excess = sum(path.stat().st_size for path in sessions) - self._config.record.keep_gib * 2**30
         for path in sessions:
             if excess <= 0:
@@ -190,7 +192,7 @@ class Recorder:
                 self._tell({"recovered": "recorder"})
 
     def _fail(self, fault: SystemFault) -> None:
-        if self._path is not None and self._flushed_s == self._begun_s:
+        if self._path is not None and (self._writer is None or self._writer.is_empty):
             # Nothing to replay is in it; a full disk must not fill with such files.
             with suppress(OSError):
                 self._path.unlink()
@@ -212,6 +214,17 @@ class Recorder:
             self._end()
         except SystemFault as fault:
             self._fail(fault)
+
+
+def _robot_time(topic: str, payload: bytes) -> int | None:
+    """Return the robot's time of a joint sample where it has one."""
+    if topic != "joints":
+        return None
+    try:
+        t_ns = wire.unpack(payload, topic).get("t_ns")
+    except WireError:
+        return None
+    return t_ns if type(t_ns) is int and t_ns >= 0 else None
 
 
 def _time_of(records: list[Any]) -> int:

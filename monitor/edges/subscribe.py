@@ -5,10 +5,12 @@ from __future__ import annotations
 import zmq
 
 from monitor.flow.pipeline import MALFORMED
+from monitor.flow.wire import LONGEST
 from monitor.setup.config import Config
 
 # What the daemon itself writes into the data path; the robot has no say in these.
 OWN_TOPICS = ("host", "command")
+_KEPT = 1000  # bytes of an odd message that are recorded
 
 
 class Subscriber:
@@ -21,6 +23,7 @@ class Subscriber:
         self._socket = context.socket(zmq.SUB)
         self._socket.set(zmq.RCVHWM, config.input.queue)
         self._socket.set(zmq.LINGER, 0)
+        self._socket.set(zmq.MAXMSGSIZE, 16 * LONGEST)  # beyond, the sender is cut off
         self._socket.set(zmq.SUBSCRIBE, b"")
         self._socket.connect(config.input.address)
 
@@ -31,8 +34,8 @@ class Subscriber:
         except zmq.Again:
             return None
         topic = frames[0].decode("utf-8", "replace")
-        if len(frames) != 2 or topic in OWN_TOPICS:
-            return MALFORMED, b"".join(frames)
+        if len(frames) != 2 or topic in OWN_TOPICS or len(frames[0]) + len(frames[1]) > LONGEST:
+            return MALFORMED, b"".join(frames)[:_KEPT]
         return topic, frames[1]
 
     def close(self) -> None:

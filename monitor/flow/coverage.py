@@ -56,7 +56,9 @@ class ConditionKeeper:
     def heard(self, condition: Condition, received_ns: int) -> Change:
         """Take a message of topic `robot` in; WireError when its payload cannot be."""
         serial = self._facts.serial
-        if serial and condition.serial is not None and condition.serial != serial:
+        # A robot that does not say who it is may be ours, until another one was seen.
+        unproven = condition.serial is None and not self._refused
+        if serial and condition.serial != serial and not unproven:
             self._refused = True
             self._evaluate()
             return Change(rebooted=False, other_robot=True)

@@ -2,8 +2,7 @@
 
 `params` is written by setup/build and never after; `inputs` by flow (wire, coverage); `state` by the step and
 the counters of flow; `outputs` by the step. A block is a one-element structured array: `x = state[0]` and
-`x["r"]` read the same compiled and interpreted. A snapshot of the data path holds the bytes of `state` and
-`inputs`; `outputs` follow from them.
+`x["r"]` read the same compiled and interpreted. A snapshot of the data path holds all but `params`.
 
 Sizes: n degrees of freedom (a floating base counts six), nq numbers in q, m joints on the wire, N axes,
 D samples in the delay line.
@@ -167,7 +166,9 @@ def params_fields(s: Sizes) -> list[Field]:
         ("R_PJ", f8, (N, 3, 3)),
         ("p_PJ", f8, (N, 3)),
         ("axis", f8, (N, 3)),
-        ("armature", f8, (n,)),  # kg m²: rotor inertia seen at the joint
+        ("armature", f8, (n,)),  # kg m²: rotor inertia seen at the joint, where motors are not coupled
+        ("coupled", i8, ()),  # 1: rotor inertia is the matrix `rotor` instead
+        ("rotor", f8, (n, n)),  # kg m²: coupling^-T diag(motors' inertia) coupling^-1
         ("gravity", f8, (3,)),  # m/s²
         # from the wire to the model: q = to_q @ wire + q_zero, v = to_q @ wire, tau = to_tau @ wire
         ("to_q", f8, (m, m)),
@@ -208,6 +209,11 @@ def params_fields(s: Sizes) -> list[Field]:
         ("frozen_velocity", f8, (m,)),  # rad/s: a joint that reports more than this does move
         ("frozen_ns", i8, ()),
         ("base_position_max", f8, ()),  # m
+        (
+            "base_jump",
+            f8,
+            (),
+        ),  # m or rad: largest credible step of the base beyond what its velocity explains
         ("base_speed_max", f8, ()),  # m/s and rad/s
         ("brake_motion", f8, (m,)),  # rad a braked joint may move
         ("period_ns", i8, ()),
@@ -258,7 +264,8 @@ def state_fields(s: Sizes) -> list[Field]:
         ("g", f8, (n,)),
         ("p", f8, (n,)),
         ("Ctv", f8, (n,)),
-        ("L", f8, (n, n)),  # Cholesky factor of M
+        ("M_last", f8, (n, n)),
+        ("L", f8, (n, n)),  # Cholesky factor
     ]
     return [
         *work,
@@ -280,7 +287,7 @@ def state_fields(s: Sizes) -> list[Field]:
         ("q_at", f8, (nq,)),  # where the dynamics are taken
         ("v_at", f8, (n,)),
         ("known", f8, (n,)),  # N m: motor torque less friction and gravity
-        ("bias", f8, (n,)),  # N m: the same less C v
+        ("slope", f8, (n,)),  # N m s/rad: friction in proportion to velocity, at v_at
         # joint-space form: fused state and unexplained acceleration per bandwidth
         ("q_fast", f8, (nq,)),
         ("v_fast", f8, (n,)),
@@ -288,18 +295,22 @@ def state_fields(s: Sizes) -> list[Field]:
         ("q_slow", f8, (nq,)),
         ("v_slow", f8, (n,)),
         ("e_slow", f8, (n,)),
-        ("a", f8, (n,)),  # acceleration the model expects at this sample
-        ("a_mean", f8, (n,)),  # the same over the last Δt
-        # momentum forms: estimates per bandwidth, u = dp/dt as the model expects it
+        ("a", f8, (n,)),  # acceleration the model expects over the last Δt
+        # momentum forms: estimates per bandwidth
         ("p_fast", f8, (n,)),
         ("p_slow", f8, (n,)),
         ("p_last", f8, (n,)),
-        ("u", f8, (n,)),
+        ("u", f8, (n,)),  # N m: dp/dt as the model expects it; joint space: M a, friction apart
         ("u_last", f8, (n,)),
         ("r_fast", f8, (n,)),  # N m: residuals
         ("r_slow", f8, (n,)),
         ("raw_q", f8, (m,)),  # last credible sample on the wire, for the signal checks
         ("raw_qd", f8, (m,)),
+        ("raw_base_p", f8, (3,)),
+        ("raw_base_quat", f8, (4,)),
+        ("raw_base_v", f8, (3,)),
+        ("raw_base_w", f8, (3,)),
+        ("base_still_ns", i8, ()),  # how long the base pose has not changed although its velocity says so
         ("raw_t_ns", i8, ()),
         ("raw_seq", i8, ()),
         ("raw_held", i8, ()),
@@ -361,7 +372,7 @@ def outputs_fields(s: Sizes) -> list[Field]:
 
 
 def loop_fields() -> list[Field]:
-    """What the loop counts of itself, in shared memory for the desk; it never enters the data path."""
+    """What the loop counts of itself, in shared memory for the desk; some of it is told to the data path."""
     return [
         ("pid", i8, ()),
         ("started_ns", i8, ()),  # CLOCK_MONOTONIC

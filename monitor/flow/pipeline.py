@@ -74,6 +74,7 @@ class Pipeline:
     def __init__(self, facts: Facts, blocks: Blocks, run: str) -> None:
         self.facts, self.blocks, self.run = facts, blocks, run
         self._state, self._outputs = blocks.state[0], blocks.outputs[0]
+        self._inputs = blocks.inputs[0]
         self._inputs_bytes = memoryview(blocks.inputs.view("u1").data)
         self._notice, self._rebase = blocks.outputs["notice"].data, blocks.inputs["rebase"]
         self._run_step = resolved(step, *blocks)
@@ -282,7 +283,7 @@ class Pipeline:
 
     def _times(self, now_ns: int) -> dict[str, Any]:
         """Return the time by the robot's clock [s], going on by ours while it is silent, and UTC."""
-        robot_ns = int(self._state["raw_t_ns"]) + max(0, now_ns - self._sample_ns if self._sample_ns else 0)
+        robot_ns = int(self._inputs["t_ns"]) + max(0, now_ns - self._sample_ns if self._sample_ns else 0)
         return {"t": robot_ns / 1e9, "utc": self._utc_text(now_ns), "run": self.run}
 
     def _utc_text(self, now_ns: int) -> str | None:

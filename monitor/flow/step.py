@@ -50,9 +50,10 @@ def credible(params: Block, inputs: Block, state: Block, outputs: Block) -> bool
     """Check the raw numbers; a sample that fails is counted and makes the next good one a re-base."""
     c, x, s, out = params[0], inputs[0], state[0], outputs[0]
     fault, joint = signal.range_fault(
-        x["q"], x["qd"], x["tau"], c["q_min"], c["q_max"], c["qd_max"], c["tau_max"]
+        x["q"], x["qd"], x["tau"], x["tau_cmd"], c["q_min"], c["q_max"], c["qd_max"], c["tau_max"]
     )
-    if fault == _OK and c["gravity_part"].shape[0] > x["q"].shape[0]:
+    floating = c["gravity_part"].shape[0] > x["q"].shape[0]
+    if fault == _OK and floating:
         fault = signal.base_fault(
             x["base_p"], x["base_quat"], x["base_v"], x["base_w"],
             c["base_position_max"], c["base_speed_max"],
@@ -64,6 +65,7 @@ def credible(params: Block, inputs: Block, state: Block, outputs: Block) -> bool
         if s["raw_held"] == 0:
             s["still_ns"][:] = 0
             s["drift"][:] = 0.0
+            s["base_still_ns"] = 0
         elif dt_ns <= 0 or abs(dt_ns - (x["seq"] - s["raw_seq"]) * c["period_ns"]) > c["clock_jump_ns"]:
             fault = _CLOCK
         elif dt_ns <= c["gap_ns"]:
@@ -71,9 +73,19 @@ def credible(params: Block, inputs: Block, state: Block, outputs: Block) -> bool
                 x["q"], x["qd"], dt_ns, s["raw_q"], s["raw_qd"], c["jump"], c["drift"], c["drift_s"],
                 c["frozen_velocity"], c["frozen_ns"], s["still_ns"], s["drift"],
             )  # fmt: skip
+            if floating and fault == _OK:
+                fault, s["base_still_ns"] = signal.base_motion_fault(
+                    x["base_p"], x["base_quat"], x["base_v"], x["base_w"], dt_ns,
+                    s["raw_base_p"], s["raw_base_quat"], s["raw_base_v"], s["raw_base_w"],
+                    c["base_jump"], c["frozen_velocity"][0], c["frozen_ns"], s["base_still_ns"],
+                )  # fmt: skip
         # The next sample is compared with this one even when it is refused: a jump is reported once.
         s["raw_q"][:] = x["q"]
         s["raw_qd"][:] = x["qd"]
+        s["raw_base_p"][:] = x["base_p"]
+        s["raw_base_quat"][:] = x["base_quat"]
+        s["raw_base_v"][:] = x["base_v"]
+        s["raw_base_w"][:] = x["base_w"]
         s["raw_t_ns"] = x["t_ns"]
         s["raw_seq"] = x["seq"]
         s["raw_held"] = 1
@@ -201,6 +213,11 @@ def model_at(params: Block, inputs: Block, state: Block) -> None:
         s["R_W"], s["p_W"], s["S"], s["Sd"], s["V"], s["Ic"], s["Bc"],
         s["M"], s["C"], s["g"], s["p"], s["Ctv"],
     )  # fmt: skip
+    if c["coupled"] != 0:
+        for i in range(s["p"].shape[0]):
+            for j in range(s["p"].shape[0]):
+                s["M"][i, j] += c["rotor"][i, j]
+                s["p"][i] += c["rotor"][i, j] * s["v_at"][j]
 
 
 @kernel
@@ -215,16 +232,37 @@ def known_torque(params: Block, state: Block) -> None:
 
 
 @kernel
-def model_acceleration(params: Block, inputs: Block, state: Block) -> None:
-    """Fill a, the acceleration the model expects of the known torque at q_at, v_at."""
-    s = state[0]
+def smooth_torque(params: Block, inputs: Block, state: Block) -> None:
+    """Fill u, all known torque but that part of friction which depends on velocity, at q_at, v_at."""
+    c, s = params[0], state[0]
     model_at(params, inputs, state)
-    known_torque(params, state)
-    multiply(s["C"], s["v_at"], s["bias"])
-    for i in range(s["known"].shape[0]):
-        s["bias"][i] = s["known"][i] - s["bias"][i]
-    cholesky(s["M"], s["L"])
-    cholesky_solve(s["L"], s["bias"], s["a"])
+    multiply(s["C"], s["v_at"], s["u"])
+    for i in range(s["u"].shape[0]):
+        rest = c["gravity_part"][i] * s["g"][i] + c["friction_offset"][i]
+        s["u"][i] = s["tau"][i] - rest - s["u"][i]
+
+
+@kernel
+def mean_acceleration(params: Block, state: Block) -> None:
+    """Fill a, the acceleration the model expects over the last dt_s.
+
+    Smooth torque is the mean of both ends. Friction is taken at the velocity that a itself leads to, in
+    proportion to its slope at v_at: `(M + dt K) a = u - K (v + dt e)`. Taken at v_at directly it would swing
+    ever wider wherever Coulomb friction is stiffer than `v0 M / dt`, that is, at every reversal.
+    """
+    c, s = params[0], state[0]
+    dt = s["dt_s"]
+    ledger.friction_slope(s["v_at"], c["viscous"], c["coulomb"], c["friction_velocity"], s["slope"])
+    for i in range(s["a"].shape[0]):
+        free = s["v_fast"][i] + dt * s["e_fast"][i]
+        s["known"][i] = 0.5 * (s["u"][i] + s["u_last"][i]) - s["slope"][i] * free
+        for j in range(s["a"].shape[0]):
+            # The last torque met the last mass matrix.
+            s["known"][i] += 0.5 * (s["M"][i, j] - s["M_last"][i, j]) * s["a"][j]
+            s["L"][i, j] = s["M"][i, j]
+        s["L"][i, i] += dt * s["slope"][i]
+    cholesky(s["L"], s["L"])
+    cholesky_solve(s["L"], s["known"], s["a"])
 
 
 @kernel
@@ -255,15 +293,17 @@ def rebase(params: Block, inputs: Block, state: Block, outputs: Block) -> None:
             outputs[0]["notice"] |= _EVENT_ENDED
     else:
         s["settled_ns"] = max(s["settled_ns"], t_ns + c["settle_ns"])
+    s["dt_s"] = 0.0
     if c["form"] == _JOINT_SPACE:
         s["q_fast"][:], s["v_fast"][:] = s["q"], s["v"]
         s["q_slow"][:], s["v_slow"][:] = s["q"], s["v"]
         s["q_at"][:], s["v_at"][:] = s["q"], s["v"]
-        model_acceleration(params, inputs, state)
+        smooth_torque(params, inputs, state)
+        s["u_last"][:], s["M_last"][:] = s["u"], s["M"]
+        mean_acceleration(params, state)
     else:
         model_momentum(params, inputs, state)
         s["p_fast"][:], s["p_slow"][:] = s["p"], s["p"]
-    s["dt_s"] = 0.0
     s["started"] = 1
     s["pending"] = 0
     s["rebased"] += 1
@@ -282,7 +322,7 @@ def advance(params: Block, inputs: Block, state: Block) -> None:
 
 @kernel
 def advance_joint_space(params: Block, inputs: Block, state: Block) -> None:
-    """Fuse position and velocity; dynamics and friction are taken where the fast filter expects the robot."""
+    """Fuse position and velocity; dynamics are taken where the fast filter expects the robot."""
     c, s = params[0], state[0]
     dt = s["dt_s"]
     n = s["v"].shape[0]
@@ -291,16 +331,15 @@ def advance_joint_space(params: Block, inputs: Block, state: Block) -> None:
     ledger.advance_pose(base, s["v_fast"], s["a"], s["e_fast"], dt, s["q_at"])
     for i in range(n):
         s["v_at"][i] = s["v_fast"][i] + dt * (s["a"][i] + s["e_fast"][i])
-        s["a_mean"][i] = 0.5 * s["a"][i]
-    model_acceleration(params, inputs, state)
-    for i in range(n):
-        s["a_mean"][i] += 0.5 * s["a"][i]
+    s["u_last"][:], s["M_last"][:] = s["u"], s["M"]
+    smooth_torque(params, inputs, state)
+    mean_acceleration(params, state)
     k = min(max(round(dt * 1e9 / c["period_ns"]), 1), c["gain_fast"].shape[0]) - 1
     ledger.joint_space(
-        base, s["q"], s["v"], s["a_mean"], dt, c["gain_fast"][k], s["q_fast"], s["v_fast"], s["e_fast"]
+        base, s["q"], s["v"], s["a"], dt, c["gain_fast"][k], s["q_fast"], s["v_fast"], s["e_fast"]
     )
     ledger.joint_space(
-        base, s["q"], s["v"], s["a_mean"], dt, c["gain_slow"][k], s["q_slow"], s["v_slow"], s["e_slow"]
+        base, s["q"], s["v"], s["a"], dt, c["gain_slow"][k], s["q_slow"], s["v_slow"], s["e_slow"]
     )
     multiply(s["M"], s["e_fast"], s["r_fast"])
     multiply(s["M"], s["e_slow"], s["r_slow"])

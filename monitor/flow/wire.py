@@ -18,8 +18,8 @@ from msgpack import unpackb
 from monitor.errors import WireError
 
 VERSION = 1
-INT64_MAX = 2**63 - 1
-_LONGEST = 1 << 20  # msgpack itself takes no length on trust that is longer than the message
+_LATEST = 2**62  # of seq and t_ns [ns]: sums with them stay below 2^63
+LONGEST = 1 << 20  # msgpack itself takes no length on trust that is longer than the message
 _LEAST_KEYS = 6  # v, seq, t_ns, q, qd, tau
 _LARGEST = 1e6  # kg, m, kg m²: no robot carries more, and sums of squares stay finite
 _NUMBERS = frozenset((float, int))
@@ -104,12 +104,12 @@ class JointsFormat:
         """Return the sample in `payload` or raise WireError."""
         message = unpack(payload, "joints")
         if message.get("v") != VERSION:
-            raise WireError("joints v", repr(message.get("v")), f"version {VERSION}", kind="version")
+            raise WireError("joints v", _SHORT.repr(message.get("v")), f"version {VERSION}", kind="version")
         seq, t_ns = message.get("seq"), message.get("t_ns")
-        if type(seq) is not int or not 0 <= seq <= INT64_MAX:
-            raise WireError("joints seq", _SHORT.repr(seq), "an integer from 0 to 2^63 - 1")
-        if type(t_ns) is not int or not 0 <= t_ns <= INT64_MAX:
-            raise WireError("joints t_ns", _SHORT.repr(t_ns), "nanoseconds from 0 to 2^63 - 1")
+        if type(seq) is not int or not 0 <= seq < _LATEST:
+            raise WireError("joints seq", _SHORT.repr(seq), "an integer from 0 to 2^62")
+        if type(t_ns) is not int or not 0 <= t_ns < _LATEST:
+            raise WireError("joints t_ns", _SHORT.repr(t_ns), "nanoseconds from 0 to 2^62")
         q: Any = message.get("q")
         qd: Any = message.get("qd")
         tau: Any = message.get("tau")
@@ -196,8 +196,8 @@ class JointsFormat:
 
 def unpack(payload: bytes, topic: str) -> dict[str, Any]:
     """Return the msgpack map in `payload`, sizes capped, or raise WireError."""
-    if len(payload) > _LONGEST:
-        raise WireError(topic, f"{len(payload)} bytes", f"at most {_LONGEST} bytes")
+    if len(payload) > LONGEST:
+        raise WireError(topic, f"{len(payload)} bytes", f"at most {LONGEST} bytes")
     try:
         message = unpackb(payload)  # map keys have to be text or bytes: the library's default
     except (ValueError, TypeError, RecursionError, msgpack.UnpackException) as error:
@@ -236,7 +236,7 @@ def decode_condition(payload: bytes, joints: int) -> Condition:
         texts[name] = value
     for name, allowed in (("mode", MODES), ("support", SUPPORTS)):
         if texts[name] is not None and texts[name] not in allowed:
-            raise WireError(f"robot {name}", repr(texts[name]), " or ".join(allowed))
+            raise WireError(f"robot {name}", _SHORT.repr(texts[name]), " or ".join(allowed))
     flags: dict[str, Any] = {}
     for name in ("drive", "brake"):
         value = message.get(name)
@@ -300,7 +300,7 @@ def decode_host(payload: bytes) -> Host:
 
 
 def _is_int64(value: Any) -> bool:
-    return type(value) is int and -INT64_MAX <= value <= INT64_MAX
+    return type(value) is int and -(2**63) < value < 2**63
 
 
 def pack(message: Mapping[str, Any]) -> bytes:

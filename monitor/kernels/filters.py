@@ -53,11 +53,3 @@ def multiply(A: Floats, x: Floats, y: Floats) -> None:
         for j in range(A.shape[1]):
             s += A[i, j] * x[j]
         y[i] = s
-
-
-@inlined
-def low_pass(x: Floats, pole: float, dt: float, y: Floats) -> None:
-    """Move y towards x with the pole `exp(-pole dt)`, exact for any dt."""
-    keep = math.exp(-pole * dt)
-    for i in range(x.shape[0]):
-        y[i] = keep * y[i] + (1.0 - keep) * x[i]

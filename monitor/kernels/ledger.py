@@ -33,6 +33,16 @@ def friction(v: Floats, viscous: Floats, coulomb: Floats, offset: Floats, v0: Fl
 
 
 @inlined
+def friction_slope(v: Floats, viscous: Floats, coulomb: Floats, v0: Floats, slope: Floats) -> None:
+    """Fill slope (n), N m s/rad, with `friction(v) / v`, the offset left out."""
+    for i in range(v.shape[0]):
+        slope[i] = viscous[i]
+        if coulomb[i] != 0.0:
+            x = v[i] / v0[i]
+            slope[i] += coulomb[i] / v0[i] * (math.tanh(x) / x if abs(x) > 1e-6 else 1.0)
+
+
+@inlined
 def first_order(
     p: Floats, p_last: Floats, u: Floats, u_last: Floats, pole: float, dt: float, r: Floats
 ) -> None:

@@ -21,11 +21,21 @@ OK, NON_FINITE, OUT_OF_RANGE, CLOCK, JUMP, FROZEN, CONTRADICTION, BASE_POSE = 0,
 
 @inlined
 def range_fault(
-    q: Floats, qd: Floats, tau: Floats, q_min: Floats, q_max: Floats, qd_max: Floats, tau_max: Floats
+    q: Floats,
+    qd: Floats,
+    tau: Floats,
+    tau_cmd: Floats,
+    q_min: Floats,
+    q_max: Floats,
+    qd_max: Floats,
+    tau_max: Floats,
 ) -> tuple[int, int]:
     """Return (fault, joint) of the first value that is not finite or outside its range, else (OK, -1)."""
     for i in range(q.shape[0]):
-        if not (math.isfinite(q[i]) and math.isfinite(qd[i]) and math.isfinite(tau[i])):
+        # tau_cmd is NaN where it was not sent.
+        if not (math.isfinite(q[i]) and math.isfinite(qd[i]) and math.isfinite(tau[i])) or math.isinf(
+            tau_cmd[i]
+        ):
             return NON_FINITE, i
         if q[i] < q_min[i] or q[i] > q_max[i] or abs(qd[i]) > qd_max[i] or abs(tau[i]) > tau_max[i]:
             return OUT_OF_RANGE, i
@@ -45,6 +55,36 @@ def base_fault(p: Floats, quat: Floats, v: Floats, w: Floats, position_max: floa
         if not (abs(p[i]) < position_max and abs(v[i]) < speed_max and abs(w[i]) < speed_max):
             return BASE_POSE
     return OK
+
+
+@inlined
+def base_motion_fault(
+    p: Floats, quat: Floats, v: Floats, w: Floats, dt_ns: int,
+    p_last: Floats, quat_last: Floats, v_last: Floats, w_last: Floats,
+    jump: float, frozen_speed: float, frozen_ns: int, still_ns: int,
+) -> tuple[int, int]:  # fmt: skip
+    """Return (fault, still_ns): BASE_POSE when the base pose jumps or freezes against its own velocity.
+
+    A step of position [m] or attitude [rad] may differ by `jump` from what v (world) and w (body) explain.
+    still_ns is carried on: the time the pose has stood while a speed beyond frozen_speed is reported.
+    """
+    half = 0.5e-9 * dt_ns
+    # Vector part of conj(quat_last) quat is half the turn in body axes; the sign makes it the short one.
+    a, b, c, d = quat_last[0], -quat_last[1], -quat_last[2], -quat_last[3]
+    real = a * quat[0] - b * quat[1] - c * quat[2] - d * quat[3]
+    k = 2.0 if real >= 0.0 else -2.0
+    turn0 = k * (a * quat[1] + b * quat[0] + c * quat[3] - d * quat[2])
+    turn1 = k * (a * quat[2] + c * quat[0] + d * quat[1] - b * quat[3])
+    turn2 = k * (a * quat[3] + d * quat[0] + b * quat[2] - c * quat[1])
+    miss = max(abs(turn0 - half * (w[0] + w_last[0])), abs(turn1 - half * (w[1] + w_last[1])))
+    miss = max(miss, abs(turn2 - half * (w[2] + w_last[2])))
+    stands, moves = turn0 == 0.0 and turn1 == 0.0 and turn2 == 0.0, False
+    for i in range(3):
+        miss = max(miss, abs(p[i] - p_last[i] - half * (v[i] + v_last[i])))
+        stands = stands and p[i] == p_last[i]
+        moves = moves or abs(v[i]) > frozen_speed or abs(w[i]) > frozen_speed
+    still_ns = still_ns + dt_ns if stands and moves else 0
+    return (BASE_POSE if miss > jump or still_ns > frozen_ns else OK), still_ns
 
 
 @inlined

@@ -304,6 +304,9 @@ def _limits(element: Element | None, kind: str, where: str) -> tuple[float, floa
     for key, value in (("velocity", velocity), ("effort", effort)):
         if value < 0.0:
             raise ModelError(where, f"{key} {value:g}", f"{key} not negative", "Give the limit's magnitude.")
+    if velocity == 0.0:
+        warnings.warn(f"{where}: velocity 0 is taken as not given", ModelWarning, stacklevel=2)
+        velocity = math.inf
     return (
         (-math.inf, math.inf, velocity, effort) if kind == "continuous" else (lower, upper, velocity, effort)
     )

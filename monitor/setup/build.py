@@ -84,7 +84,7 @@ def build(config: Config) -> Setup:
     description = parse_urdf(config.urdf_text, str(config.path.parent / config.robot.urdf))
     joints = config.robot.joint
     _check_joints(where, joints, tuple(j.name for j in description.joints if j.moves and j.mimic is None))
-    armature = {j.name: 0.0 if j.torque_meaning == "link" else j.armature for j in joints}
+    armature = {joint.name: _rotor_inertia(joint) for joint in joints}
     tree = build_tree(description, config.robot.base, armature)
     lags, D = _lags(config)
     sizes = Sizes(tree.n, tree.nq, len(joints), len(tree.arrays.parent), D)
@@ -133,15 +133,35 @@ def _fill_tree(params: Any, tree: Tree, config: Config) -> None:
     for name, value in tree.arrays._asdict().items():
         if name != "E":
             params[name] = value
-    params["armature"] = tree.armature
     params["gravity"] = config.robot.gravity_vector
+    params["armature"] = tree.armature
+    if config.robot.coupling:
+        # Rotors turn with the motors: their kinetic energy is a full matrix in the joints' coordinates.
+        to_motors = np.linalg.inv(_coupling(config))
+        motors = np.diag([_rotor_inertia(joint) for joint in config.robot.joint])
+        order = _order(tree, config)
+        params["armature"] = 0.0
+        params["coupled"] = 1
+        params["rotor"][0, -len(order) :, -len(order) :] = (to_motors.T @ motors @ to_motors)[
+            np.ix_(order, order)
+        ]
+
+
+def _coupling(config: Config) -> Floats:
+    """Return the matrix (m,m) from motor to joint positions, in the order of the wire."""
+    return np.array(config.robot.coupling) if config.robot.coupling else np.eye(len(config.robot.joint))
+
+
+def _rotor_inertia(joint: JointConfig) -> float:
+    """Return the rotor inertia that enters the balance: a sensor behind the gear does not see it."""
+    return 0.0 if joint.torque_meaning == "link" else joint.armature
 
 
 def _fill_wire(params: Any, tree: Tree, config: Config, lags: list[int]) -> None:
     """Set how the wire's numbers become the model's: signs, zeros, couplings, order, units, delays."""
     joints, order = config.robot.joint, _order(tree, config)
     m = len(joints)
-    coupling = np.array(config.robot.coupling) if config.robot.coupling else np.eye(m)
+    coupling = _coupling(config)
     sign = np.array([float(joint.sign) for joint in joints])
     scale = np.array([joint.torque_scale for joint in joints])
     params["to_q"] = (coupling * sign)[order]
@@ -197,8 +217,11 @@ def _noises(tree: Tree, config: Config) -> list[tuple[float, float]]:
     rows = []
     if config.robot.base == "floating":
         rows = 3 * [(base.attitude_sd, base.rate_sd)] + 3 * [(base.position_sd, base.velocity_sd)]
-    joints = [config.robot.joint[i] for i in _order(tree, config)]
-    return rows + [(joint.position_noise_sd, joint.velocity_noise_sd) for joint in joints]
+    # Noise is the motors' where these are coupled; it adds up in squares.
+    shares = _coupling(config)[_order(tree, config)] ** 2
+    position = np.sqrt(shares @ [joint.position_noise_sd**2 for joint in config.robot.joint])
+    velocity = np.sqrt(shares @ [joint.velocity_noise_sd**2 for joint in config.robot.joint])
+    return rows + list(zip(position.tolist(), velocity.tolist(), strict=True))
 
 
 @cache
@@ -240,6 +263,7 @@ def _fill_limits(params: Any, tree: Tree, config: Config) -> None:
     params["command_error_ns"] = round(1e9 * watch.command_error_s)
     params["brake_settle_ns"] = round(1e9 * _BRAKE_SETTLE_S)
     params["base_position_max"] = _FARTHEST
+    params["base_jump"] = watch.base_jump
     params["base_speed_max"] = _FASTEST
 
 
@@ -265,7 +289,7 @@ def _facts(where: str, tree: Tree, config: Config) -> Facts:
     robot, watch = config.robot, config.watch
     base = tree.n - len(tree.joints)
     order = _order(tree, config)
-    coupling = np.array(robot.coupling) if robot.coupling else np.eye(len(order))
+    coupling = _coupling(config)
     for i, foot in enumerate(robot.foot):
         _link(f"{where}: robot.foot[{i}].link", tree, foot.link)
     tool = _link(f"{where}: robot.tool_link", tree, robot.tool_link) if robot.tool_link else None

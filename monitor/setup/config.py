@@ -106,11 +106,17 @@ class JointConfig(Table):
         description="How much later than the position the torque is reported; may be negative [s].",
     )
     armature: NotNegative = Field(
-        default=0.0, description="Rotor inertia seen through the gear: gear_ratio^2 * rotor inertia [kg m^2]."
+        default=0.0,
+        description=(
+            "Rotor inertia seen through the gear: gear_ratio^2 * rotor inertia; with a coupling matrix, that "
+            "of the motor which the wire reports in this place [kg m^2]."
+        ),
     )
-    coulomb_friction: NotNegative = Field(default=0.0, description="Coulomb friction of the joint [N m].")
+    coulomb_friction: NotNegative = Field(
+        default=0.0, description="Coulomb friction of the joint, behind any coupling [N m]."
+    )
     viscous_friction: NotNegative = Field(
-        default=0.0, description="Viscous friction of the joint [N m s/rad]."
+        default=0.0, description="Viscous friction of the joint, behind any coupling [N m s/rad]."
     )
     friction_offset: float = Field(
         default=0.0, description="Part of the friction that has one direction [N m]."
@@ -470,6 +476,13 @@ class WatchConfig(Table):
         default=0.02,
         description="Largest credible change of position in one sample beyond velocity * time [rad or m].",
     )
+    base_jump: Positive = Field(
+        default=0.03,
+        description=(
+            "Floating base: largest credible step of position or attitude in one sample beyond what its "
+            "velocity explains [m and rad]."
+        ),
+    )
     contradiction: Positive = Field(
         default=0.03,
         description="Largest credible difference of integrated velocity and change of position [rad or m].",
@@ -704,7 +717,11 @@ def standstill_floors(
     torque = max(joint.torque_noise_sd / joint.rated_torque for joint in joints)
     drift = velocity * sqrt(watch.contradiction_s * period)
     waiting = f"{watch.wait_periods + 1} periods of waiting"
+    base = (
+        max(robot.base_noise.position_sd, robot.base_noise.attitude_sd) if robot.base == "floating" else 0.0
+    )
     return {
+        "base_jump": (8.0 * sqrt(2.0) * base, "base_noise"),
         "frozen_velocity": (4.0 * velocity, "velocity_noise_sd"),
         "frozen_s": (max(2.0 * step / watch.frozen_velocity, 3.0 * period), "encoder_step and input.rate_hz"),
         "position_jump": (step + 8.0 * hypot(position, velocity * period), "position and velocity noise"),

@@ -230,6 +230,9 @@ def test_another_robots_serial_stops_the_watch_with_an_alarm_until_the_right_one
     assert (alarm["kind"], alarm["detail"]) == ("robot", "other-serial")
     assert (alarm["detail"], alarm["priority"]) == ("other-serial", "high")
     assert "'P-2'" in alarm["text"]
+    pair.condition(serial=...)
+    stand(pair, 100)
+    assert pair.state["refused"] == 400, "to say nothing is no proof"
     pair.condition(serial="P-1")
     stand(pair, 700)
     assert pair.standing() == set()

@@ -8,6 +8,7 @@ from functools import cache
 from typing import Any
 
 import numpy as np
+import pinocchio as pin
 import pytest
 from numpy.typing import NDArray
 
@@ -53,6 +54,15 @@ def from_half_a_second(torque: Floats) -> Callable[[float, Floats, Floats], Floa
 @cache
 def pushed_pair() -> Rows:
     return pair_mover().run(1.5, *START_PAIR, drives(pair_mover()), from_half_a_second(PUSH))
+
+
+ROTORLESS = [{**joint, "armature": 0.0} for joint in PAIR_JOINTS]
+
+
+@cache
+def rotorless_pair() -> Rows:
+    mover = Mover(PAIR, [0.0, 0.0])
+    return mover.run(1.5, *START_PAIR, drives(mover), from_half_a_second(PUSH))
 
 
 def hip_and_slide(t: float, q: Floats, v: Floats) -> Floats:
@@ -167,10 +177,14 @@ def test_where_the_world_begins_and_which_way_north_is_changes_nothing(form: str
 
 
 def played(
-    rows: Rows, joints: list[dict[str, Any]], robot: dict[str, Any] | None = None, **fields: Any
+    rows: Rows,
+    joints: list[dict[str, Any]],
+    robot: dict[str, Any] | None = None,
+    form: str = "joint-space",
+    **fields: Any,
 ) -> Floats:
-    """Return both residuals (2,T,2) of the arm of two joints, configured otherwise, joint-space form."""
-    setup = made(PAIR, joints, robot)
+    """Return both residuals (2,T,2) of the arm of two joints, configured otherwise."""
+    setup = made(PAIR, joints, robot, watch={"residual": form})
     rig = Rig(setup)
     residuals = np.array(rig.play(rows, **fields))
     assert rig.state["bad"][1:].sum() == 0
@@ -231,24 +245,35 @@ def test_torque_without_its_gravity_part_gives_the_same_residual() -> None:
         np.testing.assert_allclose(one.play(rows), other.play(wire), atol=1e-9)
 
 
-def test_coupled_motors_give_the_same_residual_of_the_joints(plain: Floats) -> None:
+def test_coupled_motors_give_the_same_residual_of_the_joints() -> None:
     # The two joints of a wrist behind two motors; power is the same on both sides.
-    rows, coupling = pushed_pair(), np.array([[1.0, 0.0], [-0.5, 0.8]])
+    rows, coupling = rotorless_pair(), np.array([[1.0, 0.0], [-0.5, 0.8]])
     inverse = np.linalg.inv(coupling)
     wire = rows._replace(q=rows.q @ inverse.T, v=rows.v @ inverse.T, tau=rows.tau @ coupling)
     np.testing.assert_allclose((wire.tau * wire.v).sum(axis=1), (rows.tau * rows.v).sum(axis=1), atol=1e-9)
-    residuals = played(wire, PAIR_JOINTS, {"coupling": coupling.tolist()})
-    np.testing.assert_allclose(residuals, plain, atol=1e-9)
+    # A momentum form: gains of the joint-space form follow the motors' noise, and so differ.
+    residuals = played(wire, ROTORLESS, {"coupling": coupling.tolist()}, "second-order")
+    np.testing.assert_allclose(residuals, played(rows, ROTORLESS, form="second-order"), atol=1e-9)
 
 
-def test_coupled_motors_in_another_order_of_joints_give_the_same_residual(plain: Floats) -> None:
+def test_rotors_behind_a_coupling_have_the_kinetic_energy_of_the_motors() -> None:
+    coupling, inertia = np.array([[1.0, 0.0], [-0.5, 0.8]]), np.array([0.3, 0.1])
+    setup = made(PAIR, changed(armature=inertia.tolist()), robot={"coupling": coupling.tolist()})
+    joints = np.random.default_rng(3).standard_normal((5, 2))
+    motors = joints @ np.linalg.inv(coupling).T
+    rotor = setup.params["rotor"][0]
+    np.testing.assert_allclose(np.einsum("ki,ij,kj->k", joints, rotor, joints), motors**2 @ inertia)
+    assert setup.params["armature"].sum() == 0.0
+
+
+def test_coupled_motors_in_another_order_of_joints_give_the_same_residual() -> None:
     # Rows of the matrix are joints and columns are motors, both in the order of the file.
-    rows, coupling = pushed_pair(), np.array([[0.8, -0.5], [0.3, 1.0]])
+    rows, coupling = rotorless_pair(), np.array([[0.8, -0.5], [0.3, 1.0]])
     inverse = np.linalg.inv(coupling)
     q, v, tau = rows.q[:, ::-1], rows.v[:, ::-1], rows.tau[:, ::-1]
     wire = rows._replace(q=q @ inverse.T, v=v @ inverse.T, tau=tau @ coupling)
-    residuals = played(wire, PAIR_JOINTS[::-1], {"coupling": coupling.tolist()})
-    np.testing.assert_allclose(residuals, plain, atol=1e-9)
+    residuals = played(wire, ROTORLESS[::-1], {"coupling": coupling.tolist()}, "second-order")
+    np.testing.assert_allclose(residuals, played(rows, ROTORLESS, form="second-order"), atol=1e-9)
 
 
 @pytest.mark.parametrize("lags", [(3, 3), (3, 0), (0, 3), (-2, 1)])
@@ -339,3 +364,24 @@ def test_the_expected_torque_is_that_of_inverse_dynamics() -> None:
     for k in range(1400):
         rig.sample(rows.q[k], rows.v[k], rows.tau[k])
     np.testing.assert_allclose(rig.outputs["tau_model"], rows.tau[1399] + PUSH, atol=6e-3)
+
+
+@pytest.mark.parametrize("rate_hz", [125, 250, 1000])
+@pytest.mark.parametrize("share", [0.5, 1.0, 1.5, 5.0])
+def test_a_joint_that_creeps_against_coulomb_friction_leaves_no_residual(rate_hz: int, share: float) -> None:
+    # Friction is far stiffer here than inertia over a period: coulomb / (v0 M) times Δt is 16 at 125 Hz.
+    coulomb, v0, rotor = 2.0, 0.004, 0.2
+    joints = [
+        {**joint, "armature": rotor, "coulomb_friction": coulomb, "friction_velocity": v0}
+        for joint in PAIR_JOINTS
+    ]
+    setup = made(PAIR, joints, input={"rate_hz": rate_hz})
+    rig, mover, speed = Rig(setup), Mover(PAIR, [rotor, rotor]), share * v0
+    worst = 0.0
+    for k in range(3 * rate_hz):
+        q, v = np.full(2, speed * k / rate_hz), np.full(2, speed)
+        tau = pin.rnea(mover.model, mover.data, q, v, np.zeros(2)) + coulomb * np.tanh(v / v0)
+        rig.sample(q, v, tau, step_ns=10**9 // rate_hz)
+        worst = max(worst, float(np.abs(rig.outputs["r_fast"]).max()))
+    assert int(rig.state["stepped"]) == 3 * rate_hz
+    assert worst < 1e-9

@@ -386,3 +386,39 @@ def test_a_slightly_long_quaternion_is_normalised_and_a_wrong_one_refused(sled_s
         rig.sample([0.0, 0.0], [0.0, 0.0], [0.0, 0.0], **fields)
         assert Signal(int(rig.outputs["signal"])) == fault
         assert np.linalg.norm(rig.state["q"][3:7]) == pytest.approx(1.0, abs=1e-15)
+
+
+@pytest.mark.parametrize("what", ["position", "attitude", "frozen"])
+def test_a_base_pose_that_contradicts_the_velocity_of_the_base_is_a_bad_signal(
+    sled_setup: Setup, what: str
+) -> None:
+    rig = Rig(sled_setup)
+    q = np.array([0.0, 0.0, 1.0, 1.0, 0.0, 0.0, 0.0])
+    v = np.array([0.0, 0.0, 0.0, 0.4, 0.0, 0.0])
+
+    def send(moves: bool = True) -> int:
+        q[0] += 0.4e-3 if moves else 0.0
+        rig.sample([0.0, 0.0], [0.0, 0.0], [0.0, 0.0], **base_fields(q, v))
+        return int(rig.outputs["signal"])
+
+    assert {send() for _ in range(300)} == {Signal.OK}
+    if what == "position":
+        q[1] += 0.2
+    elif what == "attitude":
+        q[3:7] = np.cos(0.05), 0.0, np.sin(0.05), 0.0
+    else:
+        assert {send(moves=False) for _ in range(50)} == {Signal.OK}
+    assert send(moves=what != "frozen") == Signal.BASE_POSE
+    assert ("signal", "base-pose", None) in rig.standing()
+    if what != "frozen":  # a jump is reported once
+        assert {send() for _ in range(50)} == {Signal.OK}
+
+
+def test_the_time_of_alarms_goes_on_while_all_samples_are_bad(arm: Turning) -> None:
+    arm.run(1000)
+    for _ in range(3000):
+        arm.rig.sample([math.nan, 0.0], [0.0, 0.0], [0.0, 0.0])
+    arm.rig.messages.clear()
+    arm.rig.elapse(1000, b"\xc1")
+    (alarm,) = arm.rig.alarms("wire")
+    assert alarm["t"] == pytest.approx(arm.rig.t_ns / 1e9, abs=2e-3)

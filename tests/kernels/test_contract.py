@@ -124,14 +124,16 @@ def test_work_arrays_carry_nothing_from_one_sample_to_the_next(base: str, form: 
         "q_at",
         "v_at",
         "known",
-        "bias",
-        "a_mean",
+        "slope",
+        "M_last",
         "p_last",
         "u_last",
         "at_ns",
     )
     if Form[form.upper().replace("-", "_")] != Form.JOINT_SPACE:
         names = tuple(name for name in names if name != "p")  # the momentum of the last sample is needed
+    else:
+        names = tuple(name for name in names if name != "M")  # and so is the last mass matrix here
     for k in range(30):
         for blocks in (clean, dirty):
             put(blocks.inputs, k)
@@ -207,14 +209,18 @@ def samples() -> list[tuple[Any, tuple[Any, ...]]]:
         (filters.cholesky, (M, np.full((4, 4), math.nan))),
         (filters.cholesky_solve, (L, row(), np.full(4, math.nan))),
         (filters.multiply, (A, row(), np.full(4, math.nan))),
-        (filters.low_pass, (row(), 50.0, 0.003, row())),
         (ledger.friction, (row(), abs(row()), 0.5 * whole // 1, row(), abs(row()) + 0.1, row())),
+        (ledger.friction_slope, (row() * whole, abs(row()), 0.5 * whole // 1, abs(row()) + 0.1, row())),
         (ledger.first_order, (row(), row(), row(), row(), 60.0, 0.0013, row())),
         (ledger.second_order, (row(), row(), row(), 90.0, 0.0013, row(), row())),
         (ledger.joint_space, (0, row(), row(), row(), 0.001, gain[:4], row(), row(), row())),
         (ledger.joint_space, (6, near, row(8), row(8), 0.001, gain, pose, row(8), row(8))),
-        (signal.range_fault, (row(), row(), row(), row() - 9, row() + 9, row() + 9, row() + 9)),
+        (signal.range_fault, (row(), row(), row(), row(), row() - 9, row() + 9, row() + 9, row() + 9)),
         (signal.base_fault, (row(3), quat / np.linalg.norm(quat), row(3), row(3), 9.0, 9.0)),
+        (
+            signal.base_motion_fault,
+            (row(3), pose[3:7], row(3), row(3), 10**6, row(3), near[3:7], row(3), row(3), 9.0, 0.1, 50, 7),
+        ),
         (
             signal.motion_fault,
             (row(), row(), 1_000_000, row(), row(), row() + 9, row() + 9, 0.1, row(), 50, whole, row()),
@@ -224,7 +230,7 @@ def samples() -> list[tuple[Any, tuple[Any, ...]]]:
     ]  # fmt: skip
 
 
-@pytest.mark.parametrize("number", range(14))
+@pytest.mark.parametrize("number", range(15))
 def test_small_kernels_compute_the_same_when_they_are_interpreted(number: int) -> None:
     kernel, arguments = samples()[number]
     compiled, interpreted = both_ways(kernel, *arguments)

@@ -451,3 +451,9 @@ def test_a_description_with_one_piece_replaced_gives_a_description_or_a_model_er
     except ModelError:
         return
     assert description.links
+
+
+def test_a_speed_limit_of_zero_is_a_placeholder_and_noted() -> None:
+    with pytest.warns(ModelWarning, match="velocity 0 is taken as not given"):
+        joint = _parse(_arm('<limit lower="-1" upper="1" velocity="0" effort="4"/>')).joints[0]
+    assert joint.velocity == math.inf
