@@ -25,7 +25,7 @@ make_environment() {
     seen=
     find_python
     "$PYTHON" -c 'import venv, ensurepip' 2>/dev/null ||
-        fail "$PYTHON has no module venv or ensurepip. On Debian and its relatives: apt-get install python3-venv"
+        fail "$PYTHON has no module venv or ensurepip. Where apt-get is the package manager: apt-get install python3-venv"
     wanted=$("$PYTHON" -c 'import hashlib, sys; print(hashlib.sha256(open("pyproject.toml", "rb").read() + " ".join(sys.argv).encode()).hexdigest())' "$@")
     if [ "$(cat "$folder/installed" 2>/dev/null)" = "$wanted" ]; then
         return

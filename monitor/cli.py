@@ -1,12 +1,13 @@
 """The command `limbtell`. Sub-commands of other packages join by the entry-point group `limbtell.commands`.
 
-Exit codes: 0 done or stopped on request; 1 a check or review found something wrong; 2 wrong input or failed
+Exit codes: 0 done or stopped on request; 1 a session is damaged; 2 wrong input or failed
 to start; 3 the loop died too often.
 """
 
 from __future__ import annotations
 
 import json
+import math
 import sys
 import warnings
 from importlib.metadata import entry_points, packages_distributions, version
@@ -119,21 +120,31 @@ def _joint_row(setup: Any, i: int, gravity_nm: float) -> dict[str, Any]:
     joint, tree = setup.config.robot.joint[i], setup.tree
     k = tree.joints.index(joint.name)
     limits = tree.limits
+    low = limits.lower[k] if joint.position_min is None else joint.position_min
+    high = limits.upper[k] if joint.position_max is None else joint.position_max
+    fast, slow = setup.config.bands[i]
     return {
         "order": i,
         "joint": joint.name,
         "kind": tree.joint_kinds[k],
         "sign": joint.sign,
-        "from": joint.position_min if joint.position_min is not None else float(limits.lower[k]),
-        "to": joint.position_max if joint.position_max is not None else float(limits.upper[k]),
+        "from": _finite(low),
+        "to": _finite(high),
+        "unit": "N" if tree.joint_kinds[k] == "prismatic" else "N m",
         "rated": joint.rated_torque,
-        "torque is": joint.torque_meaning,
-        "rotor inertia": joint.armature,
+        "tau_is": joint.torque_meaning,
+        "armature": joint.armature,
         "coulomb": joint.coulomb_friction,
         "viscous": joint.viscous_friction,
-        "band": setup.config.bands[i][0],
-        "gravity at zero": gravity_nm,
+        "band_fast": round(fast, 6),
+        "band_slow": round(slow, 6),
+        "gravity_at_zero": round(gravity_nm, 6),
     }
+
+
+def _finite(value: float) -> float | None:
+    """Return a limit, None where there is none."""
+    return float(value) if math.isfinite(value) else None
 
 
 def _print_table(title: str, rows: list[dict[str, Any]]) -> None:
@@ -141,8 +152,14 @@ def _print_table(title: str, rows: list[dict[str, Any]]) -> None:
     for name, value in rows[0].items():
         table.add_column(name, justify="left" if isinstance(value, str) else "right")
     for row in rows:
-        table.add_row(*(f"{v:.4g}" if isinstance(v, float) else str(v) for v in row.values()))
+        table.add_row(*(_cell(value) for value in row.values()))
     Console(soft_wrap=not sys.stdout.isatty(), width=None if sys.stdout.isatty() else 200).print(table)
+
+
+def _cell(value: Any) -> str:
+    if value is None:
+        return "none"
+    return f"{value:.4g}" if isinstance(value, float) else str(value)
 
 
 @app.command()

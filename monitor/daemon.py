@@ -36,6 +36,7 @@ from monitor.edges.record import Recorder, RecordFeed, queued_batches
 from monitor.edges.subscribe import Subscriber
 from monitor.errors import LimbtellError, SystemFault
 from monitor.flow import wire
+from monitor.flow.alarms import in_words
 from monitor.loop import Loop, ask_rights
 from monitor.robot.urdf import ModelWarning
 from monitor.setup.build import Setup, build
@@ -395,6 +396,11 @@ class Parent:
         self._tell = self._context.socket(zmq.PUSH)
         self._tell.set(zmq.LINGER, 0)
         self._tell.connect(self._brief.control_address)
+        self._alarms = self._context.socket(zmq.SUB)
+        self._alarms.subscribe(b"alarm")
+        self._alarms.connect(
+            self._config.output.address.replace("*", "127.0.0.1").replace("0.0.0.0", "127.0.0.1")
+        )
         try:
             self._start()
             return self._watch()
@@ -426,7 +432,7 @@ class Parent:
         self._say(f"alarms, verdicts and health: {config.output.address}")
         self._say(f"metrics: http://{desk.metrics_host}:{desk.metrics_port}/metrics")
         if config.record.enabled:
-            self._say(f"sessions: {config.record_folder}")
+            self._say(f"sessions: {config.record_folder.resolve()}")
         self._say("ready")
 
     def _go(self, numbers: dict[str, int]) -> None:
@@ -441,6 +447,7 @@ class Parent:
         while not self._is_asked_to_stop():
             children = (self._loop, self._standby, *self._helpers)
             wait([x.process.sentinel for x in children if x.process and not x.is_over], timeout=0.1)
+            self._show_alarms()
             if self._is_asked_to_stop():
                 break
             for child in (self._standby, *self._helpers):
@@ -449,6 +456,10 @@ class Parent:
             if (self._loop.is_over or hung) and not self._take_over(hung):
                 return DIED
         return STOPPED
+
+    def _show_alarms(self) -> None:
+        while self._alarms.poll(0):
+            self._say(in_words(wire.unpack(self._alarms.recv_multipart()[1], "alarm")))
 
     def _look_after(self, child: _Child) -> None:
         """Start a dead helper again after a pause, and say when it is back. The loop goes on without it."""
@@ -503,5 +514,5 @@ class Parent:
         """Stop in order: loop, then the recorder, which writes what the loop handed over, then the desk."""
         for child in (self._loop, self._standby, *self._helpers):
             child.stop()
-        self._context.destroy()
+        self._context.destroy(linger=0)
         shutil.rmtree(self._brief.folder, ignore_errors=True)

@@ -14,6 +14,7 @@ import signal
 import socket
 import subprocess
 import sys
+import threading
 import time
 from collections.abc import Iterator
 from pathlib import Path
@@ -26,6 +27,7 @@ from rich.console import Console
 from rich.table import Table
 
 from monitor.errors import SystemFault
+from monitor.flow.alarms import UNACKNOWLEDGED, in_words
 from monitor.setup.template import write_config
 from replay.simulate import (
     DATASHEET,
@@ -147,6 +149,8 @@ def _daemon(config: Path, console: Console) -> Iterator[None]:
         start_new_session=True,  # Ctrl-C is ours: the daemon is stopped when the robot is
     )
     assert process.stdout is not None
+    rest: list[str] = []
+    drain = threading.Thread(target=rest.extend, args=(process.stdout,), daemon=True)
     try:
         for line in process.stdout:
             console.print(f"  {line.rstrip()}", highlight=False, markup=False)
@@ -154,16 +158,17 @@ def _daemon(config: Path, console: Console) -> Iterator[None]:
                 break
         else:
             raise SystemFault("limbtell watch", f"an end with code {process.wait()}", "a daemon that starts")
+        drain.start()
         yield
     finally:
         process.terminate()
         try:
-            rest, _ = process.communicate(timeout=30)
+            process.wait(timeout=30)
         except subprocess.TimeoutExpired:
             process.kill()  # its children notice and end
             raise
-        if rest.strip():
-            console.print(rest.rstrip(), highlight=False, markup=False)
+        if process.returncode != 0:
+            console.print("".join(rest).rstrip(), highlight=False, markup=False)
 
 
 def _run(config: _Config, seconds: float, seed: int, truth: Path, console: Console) -> list[dict[str, Any]]:
@@ -207,17 +212,8 @@ def _run(config: _Config, seconds: float, seed: int, truth: Path, console: Conso
 def _say(topic: str, message: dict[str, Any], console: Console) -> None:
     """Print one line for an alarm, and in a terminal one for each second's health."""
     if topic == "alarm":
-        size = message["size"]
-        how = f" {size['value']:+.1f} {size['unit']}" if size else ""
-        where = f" at {message['joint']}" if message["joint"] else ""
-        style = "bold red" if message["state"] == "unacknowledged" else "green"
-        console.print(
-            f"{message['utc']} ({message['t']:.3f} s)  {message['state']:<34} {message['kind']} "
-            f"({message['verdict']}, {message['detail']}){where}{how}",
-            style=style,
-            highlight=False,
-            soft_wrap=True,
-        )
+        style = "bold red" if message["state"] == UNACKNOWLEDGED else "green"
+        console.print(in_words(message), style=style, highlight=False, markup=False, soft_wrap=True)
     elif console.is_terminal:
         joint, ratio = max(message["band_ratio"].items(), key=lambda item: item[1])
         bar = "█" * min(20, round(10 * ratio))
@@ -234,7 +230,7 @@ def _compare(
     truth: list[dict[str, Any]], alarms: list[dict[str, Any]]
 ) -> tuple[list[Felt], list[dict[str, Any]]]:
     """Match what happened with what was alarmed; the rest of the alarms were about nothing that happened."""
-    raised = [alarm for alarm in alarms if alarm["state"] == "unacknowledged"]
+    raised = [alarm for alarm in alarms if alarm["state"] == UNACKNOWLEDGED]
     first_s = min((one["start_ns"] for one in truth), default=0) / 1e9
     felt: list[Felt] = []
     used: set[int] = set()

@@ -304,7 +304,11 @@ def _notes(replay: Replay, config: Config | None, damaged: str | None) -> list[s
     if "assumed" in session.versions:
         notes.append(f"Converted; assumed of the robot: {session.versions['assumed']}.")
     if session.truncated:
-        notes.append("The session was not closed: at most its last chunk is missing.")
+        notes.append(
+            "The session was cut: after a crash at most its last chunk is missing, else all after it."
+        )
+    if replay.counters["received"] and not replay.counters["stepped"]:
+        notes.append("No sample of the session fits this configuration.")
     if damaged is not None:
         notes.append("The session is damaged: only what lies before the damage was reviewed.")
     return notes
@@ -328,7 +332,10 @@ def _show(console: Console, summary: Mapping[str, Any], folder: Path) -> None:
     figures = Table(title=escape(summary["session"]), show_header=False, title_justify="left")
     figures.add_row("time", f"{summary['duration_s']:.3f} s from {summary['from_s']:.3f} s")
     figures.add_row(
-        "samples", f"{samples['stepped']} stepped, {samples['lost']} lost, {samples['late']} late"
+        "samples",
+        f"{samples['received']} received, {samples['stepped']} stepped, {samples['lost']} lost, "
+        f"{samples['late']} late, {sum(samples['bad'].values())} not credible, {samples['refused']} refused, "
+        f"{samples['wire_errors']} not understood",
     )
     figures.add_row("coverage", watched)
     figures.add_row("exact replay", "yes" if summary["exact"] else "no")

@@ -6,6 +6,7 @@ addition, so that a cleared alarm stays `returned-to-normal-unacknowledged`.
 
 from __future__ import annotations
 
+from collections.abc import Mapping
 from dataclasses import dataclass
 from typing import Any, NamedTuple
 
@@ -102,3 +103,13 @@ def _plain(verdict: Verdict) -> dict[str, Any]:
 def _verdict(saved: dict[str, Any]) -> Verdict:
     size = saved["size"] and Size(*saved["size"])
     return Verdict(**saved | {"size": size, "alternatives": tuple(saved["alternatives"])})
+
+
+def in_words(body: Mapping[str, Any]) -> str:
+    """Return an alarm message as one line for a person: both clocks, state, what, where, how large."""
+    size = body["size"]
+    how = f" {size['value']:+.1f} {size['unit']}" if size else ""
+    where = f" at {body['joint']}" if body["joint"] else ""
+    text = f": {body['text']}" if body.get("text") else ""
+    what = f"{body['kind']} ({body['verdict']}, {body['detail']})"
+    return f"{body['utc']} ({body['t']:.3f} s)  {body['state']:<34} {what}{where}{how}{text}"

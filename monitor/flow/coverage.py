@@ -153,7 +153,7 @@ class ConditionKeeper:
         if known.mode == "stopped" or known.stop is not None:
             return Coverage.CONDITIONAL, Reason.STOPPED
         if self._facts.floating and known.support != "hoisted":
-            return Coverage.CONDITIONAL, Reason.FEET_ON_GROUND
+            return Coverage.CONDITIONAL, Reason.NOT_HOISTED
         if not known.payload_known or (known.payload is not None and self._facts.tool is None):
             return Coverage.CONDITIONAL, Reason.PAYLOAD_UNKNOWN
         return Coverage.WATCHING, Reason.NONE

@@ -105,7 +105,7 @@ class Reason(IntEnum):
     GUIDED = 7
     CALIBRATING = 8
     STOPPED = 9  # a stop is in force: the drives may be braking or about to lose power
-    FEET_ON_GROUND = 10  # floating base: foot forces are not told apart from faults
+    NOT_HOISTED = 10  # floating base: forces of feet, hands or docks are not told apart from faults
     PAYLOAD_UNKNOWN = 11
 
 

@@ -27,6 +27,9 @@ from monitor.kernels.jit import resolved
 SNAPSHOT_VERSION = 1
 MALFORMED = "malformed"  # topic of what is no message of the robot at all
 HEALTH_NS = 1_000_000_000
+_PATIENCE_NS = 10_000_000_000  # a robot that has not sent anything for so long is missed
+_PACE = 10.0  # a robot's clock that runs so many times faster or slower than ours counts something else
+_MOST_RESTARTS = 3  # within a second; more are no restarts
 _WIRE_QUIET_NS = 5_000_000_000  # refused messages are called over when none came for so long
 _EVENT = Key("unexplained-torque", "outside-band")
 _STALE = Key("signal", "stale")
@@ -87,6 +90,14 @@ class Pipeline:
         self._sample_ns = 0  # when the last sample that was stepped had been received
         self._silent = False  # called: no sample for too long
         self._first_tick_ns: int | None = None
+        self._refused_ns = 0  # when another robot was last heard
+        self._second = (
+            0,
+            0,
+            0,
+            0,
+            0,
+        )  # a second ago: receive time, robot clock, samples, restarts, clock faults
         self._health_ns = 0
         self._last_bad: dict[Key, int] = {}  # alarms of single messages: cleared by quiet
         self._flagged: dict[Key, tuple[str, int]] = {}  # alarms of a joint that stand with a flag of the step
@@ -101,6 +112,7 @@ class Pipeline:
                 sample = self._joints.decode(payload)
                 if self._condition.refused:
                     self._state["refused"] += 1
+                    self._refused_ns = received_ns
                     return
                 if self._aligner.follows(sample, received_ns):
                     self._step(sample, received_ns)
@@ -124,7 +136,8 @@ class Pipeline:
             for sample, restart in self._aligner.waited(tick_ns):
                 self._step(sample, tick_ns, restart)
         # The samples of another robot are refused, which is no silence.
-        silent = tick_ns - self._sample_ns > self.facts.stream_stale_ns and not self._condition.refused
+        heard_ns = max(self._sample_ns, self._refused_ns)
+        silent = tick_ns - heard_ns > self.facts.stream_stale_ns and not self._condition.refused
         self._condition.tick(tick_ns, silent)
         if silent and not self._silent and self._is_overdue(tick_ns):
             self._silent = True
@@ -133,15 +146,42 @@ class Pipeline:
             self._clear_passed(tick_ns)
         if tick_ns - self._health_ns >= HEALTH_NS:
             self._health_ns = tick_ns
+            self._check_numbering(tick_ns)
             self._health(tick_ns)
         out, self._out = self._out, []
         return out
 
+    def _check_numbering(self, now_ns: int) -> None:
+        """Call, once a second, a clock in another unit and a `seq` that does not count."""
+        s = self._state
+        last, now = self._second, (
+            self._sample_ns, int(self._inputs["t_ns"]), int(s["received"]), int(s["restarts"]),
+            int(s["bad"][Signal.CLOCK]),
+        )  # fmt: skip
+        self._second = now
+        ours, robots, samples, restarts, clock_faults = (b - a for a, b in zip(last, now, strict=True))
+        if restarts > _MOST_RESTARTS:
+            found = f"joints seq: began anew {restarts} times within a second"
+            self._misnumbered(
+                "numbering", f"{found}; expected a number that grows by 1 with every sample", now_ns
+            )
+        elif last[0] and samples > 10 and not restarts and not clock_faults and ours > 0:
+            # A clock that was set, or a restart, is told elsewhere.
+            if ours < _PACE * robots < _PACE**2 * ours:
+                return
+            found = f"joints t_ns: went on by {robots} in {ours} ns of ours"
+            self._misnumbered("clock", f"{found}; expected nanoseconds of the robot's clock", now_ns)
+
+    def _misnumbered(self, detail: str, text: str, now_ns: int) -> None:
+        key = Key("wire", detail)
+        self._raise(key, Verdict("signal", detail), now_ns, text)
+        self._last_bad[key] = now_ns
+
     def _is_overdue(self, tick_ns: int) -> bool:
-        """Whether silence is news: at the start, the robot may take as long as its condition may."""
+        """Whether silence is news: at the start the robot may take its time."""
         if self._first_tick_ns is None:
             self._first_tick_ns = tick_ns
-        return bool(self._sample_ns) or tick_ns - self._first_tick_ns > self.facts.condition_stale_ns
+        return bool(self._sample_ns) or tick_ns - self._first_tick_ns > _PATIENCE_NS
 
     def _step(self, sample: wire.JointSample, now_ns: int, restart: bool = False) -> None:
         """Step one sample, and look closer only where the step took notice of something."""
@@ -198,6 +238,8 @@ class Pipeline:
 
     def _robot(self, payload: bytes, received_ns: int) -> None:
         condition = wire.decode_condition(payload, len(self.facts.joints))
+        if self._condition.refused:
+            self._refused_ns = received_ns
         change = self._condition.heard(condition, received_ns)
         if change.other_robot:
             text = f"{condition.serial!r} is not the serial {self.facts.serial!r} of the configuration"
@@ -339,6 +381,8 @@ class Pipeline:
                 "sample_ns": self._sample_ns,
                 "silent": self._silent,
                 "first_tick_ns": self._first_tick_ns,
+                "refused_ns": self._refused_ns,
+                "second": list(self._second),
                 "health_ns": self._health_ns,
                 "last_bad": [[list(key), at] for key, at in self._last_bad.items()],
                 "flagged": [[list(key), *flag] for key, flag in self._flagged.items()],
@@ -371,6 +415,7 @@ class Pipeline:
         self._board.restore(saved["alarms"])
         self._sample_ns, self._silent = saved["sample_ns"], saved["silent"]
         self._first_tick_ns = saved["first_tick_ns"]
+        self._refused_ns, self._second = saved["refused_ns"], tuple(saved["second"])
         self._health_ns = saved["health_ns"]
         self._last_bad = {Key(*key): at for key, at in saved["last_bad"]}
         self._flagged = {Key(*key): (field, i) for key, field, i in saved["flagged"]}

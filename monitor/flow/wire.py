@@ -137,7 +137,7 @@ class JointsFormat:
         commanded = self._no_command if tau_cmd is None else self._array("tau_cmd", tau_cmd, order)
         if message.get("tau_link") is not None:
             self._array("tau_link", message["tau_link"], order)
-        if message.get("feet") is not None:
+        if self.feet and message.get("feet") is not None:
             _flags("joints feet", message["feet"], self.feet)
         return base + commanded
 

@@ -498,7 +498,11 @@ class WatchConfig(Table):
         default=0.02, description="A larger difference for this long is an actuator event by itself [s]."
     )
     brake_motion: Positive = Field(
-        default=0.01, description="How far a joint may move after its brake is reported closed [rad or m]."
+        default=0.01,
+        description=(
+            "How far a joint may move after its brake is reported closed; motion in the first 0.3 s, while "
+            "it closes, does not count [rad or m]."
+        ),
     )
 
     @model_validator(mode="after")

@@ -9,6 +9,7 @@ from numpy.typing import ArrayLike
 
 from monitor.flow.alarms import NORMAL, RETURNED, TRANSITIONS, UNACKNOWLEDGED, AlarmBoard, Key
 from monitor.flow.layout import KINDS
+from monitor.flow.pipeline import _PATIENCE_NS
 from monitor.flow.verdict import Size, Verdict
 from monitor.flow.wire import pack
 from monitor.setup.build import Setup
@@ -200,10 +201,9 @@ def test_the_stream_going_silent_is_noticed_and_robot_time_goes_on_by_ours(pair:
     assert pair.standing() == set()
 
 
-def test_a_robot_may_start_after_the_monitor_but_not_stay_away(pair_setup: Setup) -> None:
+def test_a_robot_may_start_ten_seconds_after_the_monitor_but_not_stay_away(pair_setup: Setup) -> None:
     rig = Rig(pair_setup, known=False)
-    patience_ns = pair_setup.facts.condition_stale_ns
-    for _ in range(patience_ns // PERIOD_NS):
+    for _ in range(_PATIENCE_NS // PERIOD_NS):
         rig.elapse(PERIOD_NS)
     assert rig.alarms() == []
     assert rig.outputs["reason_whole"] == 1
@@ -286,3 +286,16 @@ def test_how_messages_fall_into_ticks_changes_no_verdict_and_no_residual(pair_se
     runs = [run(every) for every in (1, 2, 10, 50)]
     assert len(runs[0][1]) == 4
     assert runs == [runs[0]] * 4
+
+
+@pytest.mark.parametrize(
+    ("detail", "seq_step", "t_step_ns"),
+    [("clock", 1, 1000), ("clock", 1, 1), ("clock", 1, 40_000_000), ("numbering", 0, PERIOD_NS)],
+)
+def test_a_clock_in_another_unit_and_a_number_that_does_not_count_are_called(
+    pair_setup: Setup, detail: str, seq_step: int, t_step_ns: int
+) -> None:
+    rig = Rig(pair_setup)
+    for k in range(3500):
+        rig.elapse(PERIOD_NS, message(7 + seq_step * k, 10**9 + t_step_ns * k, REST, [0.0, 0.0], WEIGHT))
+    assert ("wire", detail) in {(alarm["kind"], alarm["detail"]) for alarm in rig.alarms()}

@@ -114,7 +114,7 @@ def test_a_walker_is_watched_only_where_no_ground_can_push_its_feet(sled_setup: 
     for _ in range(600):
         rig.sample([0.0, 0.0], [0.0, 0.0], [0.0, 0.0], **base)
     free = support == "hoisted"
-    assert seen(rig)[0] == [(W, Reason.NONE) if free else (C, Reason.FEET_ON_GROUND)] * 2
+    assert seen(rig)[0] == [(W, Reason.NONE) if free else (C, Reason.NOT_HOISTED)] * 2
     judged = rig.pipeline.blocks.inputs[0]["judged"]
     assert judged.tolist() == [0] * 6 + ([1, 1] if free else [0, 0])
 

@@ -342,7 +342,7 @@ def test_a_cut_session_is_reviewed_up_to_the_cut(live: Live, tmp_path: Path) -> 
     assert 0 < found["samples"]["stepped"] < 800
     seen = lines(tmp_path / "out")
     assert [line["seq"] for line in seen] == [alarm["seq"] for alarm in whole][: len(seen)]
-    assert any("not closed" in note for note in found["notes"])
+    assert any("was cut" in note for note in found["notes"])
 
 
 def test_what_lies_before_damage_is_reviewed_and_the_exit_code_tells(live: Live, tmp_path: Path) -> None:
