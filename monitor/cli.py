@@ -193,7 +193,8 @@ def _warn(message: Warning | str, *_: object) -> None:
 def main() -> None:
     """Run the command; an expected error is one line, not a traceback."""
     # Importing the other packages' commands takes half a second; ours do without.
-    if len(sys.argv) < 2 or sys.argv[1] not in ("init", "check", "watch"):
+    ours = [command.callback.__name__ for command in app.registered_commands if command.callback]
+    if len(sys.argv) < 2 or sys.argv[1] not in ours:
         for entry in entry_points(group="limbtell.commands"):
             app.command(entry.name)(entry.load())
     warnings.showwarning = _warn  # type: ignore[assignment]

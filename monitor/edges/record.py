@@ -204,9 +204,8 @@ class Recorder:
 
     def _end(self) -> None:
         if self._writer is not None:
-            writer, self._writer = self._writer, None
+            writer, self._writer, self._path = self._writer, None, None
             writer.close()
-            self._path = None
 
     def close(self) -> None:
         """Close the session on the disk."""

@@ -112,4 +112,5 @@ def in_words(body: Mapping[str, Any]) -> str:
     where = f" at {body['joint']}" if body["joint"] else ""
     text = f": {body['text']}" if body.get("text") else ""
     what = f"{body['kind']} ({body['verdict']}, {body['detail']})"
-    return f"{body['utc']} ({body['t']:.3f} s)  {body['state']:<34} {what}{where}{how}{text}"
+    utc = body["utc"] or "UTC not known"
+    return f"{utc} ({body['t']:.3f} s)  {body['state']:<34} {what}{where}{how}{text}"

@@ -184,11 +184,8 @@ def params_fields(s: Sizes) -> list[Field]:
         ("friction_velocity", f8, (n,)),
         # the ledger
         ("form", i8, ()),
-        (
-            "gain_fast",
-            f8,
-            (GAIN_STEPS, n, 3, 2),
-        ),  # by Δt in periods; rows q, v, e; columns position, velocity
+        # by Δt in periods; rows q, v, e; columns position and velocity innovation
+        ("gain_fast", f8, (GAIN_STEPS, n, 3, 2)),
         ("gain_slow", f8, (GAIN_STEPS, n, 3, 2)),
         ("pole_fast", f8, ()),  # rad/s, momentum forms
         ("pole_slow", f8, ()),
@@ -209,11 +206,7 @@ def params_fields(s: Sizes) -> list[Field]:
         ("frozen_velocity", f8, (m,)),  # rad/s: a joint that reports more than this does move
         ("frozen_ns", i8, ()),
         ("base_position_max", f8, ()),  # m
-        (
-            "base_jump",
-            f8,
-            (),
-        ),  # m or rad: largest credible step of the base beyond what its velocity explains
+        ("base_jump", f8, ()),  # m or rad: as `jump`, for the pose of the base
         ("base_speed_max", f8, ()),  # m/s and rad/s
         ("brake_motion", f8, (m,)),  # rad a braked joint may move
         ("period_ns", i8, ()),

@@ -91,13 +91,8 @@ class Pipeline:
         self._silent = False  # called: no sample for too long
         self._first_tick_ns: int | None = None
         self._refused_ns = 0  # when another robot was last heard
-        self._second = (
-            0,
-            0,
-            0,
-            0,
-            0,
-        )  # a second ago: receive time, robot clock, samples, restarts, clock faults
+        # A second ago: receive time, robot clock, samples, restarts, clock faults.
+        self._second = (0, 0, 0, 0, 0)
         self._health_ns = 0
         self._last_bad: dict[Key, int] = {}  # alarms of single messages: cleared by quiet
         self._flagged: dict[Key, tuple[str, int]] = {}  # alarms of a joint that stand with a flag of the step
@@ -165,10 +160,10 @@ class Pipeline:
             self._misnumbered(
                 "numbering", f"{found}; expected a number that grows by 1 with every sample", now_ns
             )
-        elif last[0] and samples > 10 and not restarts and not clock_faults and ours > 0:
-            # A clock that was set, or a restart, is told elsewhere.
-            if ours < _PACE * robots < _PACE**2 * ours:
-                return
+            return
+        # A clock that was set, or a restart, is told elsewhere.
+        steady = last[0] and samples > 10 and ours > 0 and not restarts and not clock_faults
+        if steady and not ours < _PACE * robots < _PACE**2 * ours:
             found = f"joints t_ns: went on by {robots} in {ours} ns of ours"
             self._misnumbered("clock", f"{found}; expected nanoseconds of the robot's clock", now_ns)
 

@@ -21,21 +21,13 @@ OK, NON_FINITE, OUT_OF_RANGE, CLOCK, JUMP, FROZEN, CONTRADICTION, BASE_POSE = 0,
 
 @inlined
 def range_fault(
-    q: Floats,
-    qd: Floats,
-    tau: Floats,
-    tau_cmd: Floats,
-    q_min: Floats,
-    q_max: Floats,
-    qd_max: Floats,
-    tau_max: Floats,
-) -> tuple[int, int]:
+    q: Floats, qd: Floats, tau: Floats, tau_cmd: Floats,
+    q_min: Floats, q_max: Floats, qd_max: Floats, tau_max: Floats,
+) -> tuple[int, int]:  # fmt: skip
     """Return (fault, joint) of the first value that is not finite or outside its range, else (OK, -1)."""
     for i in range(q.shape[0]):
-        # tau_cmd is NaN where it was not sent.
-        if not (math.isfinite(q[i]) and math.isfinite(qd[i]) and math.isfinite(tau[i])) or math.isinf(
-            tau_cmd[i]
-        ):
+        measured = math.isfinite(q[i]) and math.isfinite(qd[i]) and math.isfinite(tau[i])
+        if not measured or math.isinf(tau_cmd[i]):  # NaN where it was not sent
             return NON_FINITE, i
         if q[i] < q_min[i] or q[i] > q_max[i] or abs(qd[i]) > qd_max[i] or abs(tau[i]) > tau_max[i]:
             return OUT_OF_RANGE, i

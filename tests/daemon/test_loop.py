@@ -5,7 +5,7 @@ from __future__ import annotations
 import gc
 from bisect import bisect_left
 from collections import deque
-from collections.abc import Callable, Iterator
+from collections.abc import Callable, Iterator, Sequence
 from typing import Any
 
 import msgpack
@@ -104,8 +104,8 @@ class Run:
         setup: Setup,
         clock: Clock,
         ticks: int,
-        messages: list[Message] = [],  # noqa: B006
-        control: list[Message] = [],  # noqa: B006
+        messages: Sequence[Message] = (),
+        control: Sequence[Message] = (),
         cost_ns: Callable[[], int] = lambda: 0,
         feed: Feed | None = None,
         config: Config | None = None,
@@ -116,8 +116,8 @@ class Run:
         loop = Loop(
             setup.pipeline("run", blocks),
             config or setup.config,
-            Source(clock, messages, cost_ns),
-            Source(clock, control),
+            Source(clock, list(messages), cost_ns),
+            Source(clock, list(control)),
             self.out,
             feed,
             figures,

@@ -120,7 +120,7 @@ def off_by(share: float) -> str:
 
 @pytest.mark.parametrize("form", FORMS)
 def test_residuals_are_the_outside_torque_of_the_engine_seen_through_the_filter(form: str) -> None:
-    # Measured: 0.01 to 0.05 % of rated torque rms, at most 0.4 %.
+    # Measured: 0.005 to 0.06 % of rated torque rms, at most 0.4 %.
     rig = Rig(rind(form))
     for slow, r in enumerate(rig.play(rows_of(pushed()))):
         error = (r - expected(pushed().tau_ext, form, bool(slow)))[600:] / RATED
