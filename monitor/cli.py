@@ -106,14 +106,19 @@ def check(
         _joint_row(setup, i, float(g[tree.joints.index(name)])) for i, name in enumerate(setup.facts.joints)
     ]
     links = [{"link": x.name, "mass": x.mass, "inertia": x.inertia} for x in tree.links]
+    calibration = setup.config.robot.calibration
     if as_json:
-        typer.echo(
-            json.dumps({"robot": setup.facts.robot, "base": tree.base, "joints": rows, "links": links})
-        )
+        head = {"robot": setup.facts.robot, "base": tree.base, "calibration": calibration or None}
+        typer.echo(json.dumps({**head, "joints": rows, "links": links, "notes": setup.notes}))
         return
     _print_table(f"{setup.facts.robot}, {tree.base} base: joints in the order of the wire", rows)
     _print_table("links", links)
     typer.echo(f"mass in all: {sum(x.mass for x in tree.links):.3f} kg; the model is physically consistent")
+    typer.echo(
+        f"model and band: {calibration or 'of the description; wide, because nothing was commissioned'}"
+    )
+    for note in setup.notes:
+        typer.echo(f"note: {note}")
 
 
 def _joint_row(setup: Any, i: int, gravity_nm: float) -> dict[str, Any]:
@@ -122,7 +127,7 @@ def _joint_row(setup: Any, i: int, gravity_nm: float) -> dict[str, Any]:
     limits = tree.limits
     low = limits.lower[k] if joint.position_min is None else joint.position_min
     high = limits.upper[k] if joint.position_max is None else joint.position_max
-    fast, slow = setup.config.bands[i]
+    row = setup.sizes.base + k
     return {
         "order": i,
         "joint": joint.name,
@@ -133,13 +138,19 @@ def _joint_row(setup: Any, i: int, gravity_nm: float) -> dict[str, Any]:
         "unit": "N" if tree.joint_kinds[k] == "prismatic" else "N m",
         "rated": joint.rated_torque,
         "tau_is": joint.torque_meaning,
-        "armature": joint.armature,
-        "coulomb": joint.coulomb_friction,
-        "viscous": joint.viscous_friction,
-        "band_fast": round(fast, 6),
-        "band_slow": round(slow, 6),
+        "armature": float(setup.model.armature[row]),
+        "coulomb": float(setup.model.coulomb[row]),
+        "viscous": float(setup.model.viscous[row]),
+        "least_band": round(_least_band(setup, row), 6),
         "gravity_at_zero": round(gravity_nm, 6),
     }
+
+
+def _least_band(setup: Any, row: int) -> float:
+    """Return the smallest residual of a row that may open an event: nothing moves and nothing is loaded."""
+    from monitor.kernels.band import FLOOR
+
+    return float(setup.band.row_limit * math.sqrt(setup.band.fast[row, FLOOR]))
 
 
 def _finite(value: float) -> float | None:

@@ -429,6 +429,8 @@ class Parent:
             f"watching {setup.facts.robot}: {len(setup.facts.joints)} joints at {config.input.address}, "
             f"{config.watch.loop_hz:g} ticks a second"
         )
+        for note in setup.notes:
+            self._say(f"note: {note}")
         self._say(f"alarms, verdicts and health: {config.output.address}")
         self._say(f"metrics: http://{desk.metrics_host}:{desk.metrics_port}/metrics")
         if config.record.enabled:

@@ -54,8 +54,12 @@ class Felt(NamedTuple):
     t_s: float  # since the robot's first sample
     peak_nm: float
     peak_joint: str
-    delay_ms: float | None
+    delay_ms: float | None  # until something was noticed
+    verdict: str | None  # the last word on it
     joint: str | None
+    link: str | None
+    probability: float | None
+    named_ms: float | None  # until that verdict was first given
 
 
 def command(
@@ -237,7 +241,11 @@ def _compare(
     for one in truth:
         start, end = one["start_ns"] / 1e9, one["end_ns"] / 1e9 + _MATCH_S
         own = [alarm for alarm in raised if start <= alarm["t"] <= end]
-        used.update(alarm["seq"] for alarm in own)
+        used.update(alarm["event"] for alarm in own)
+        # The first event of it, and what was said of that one from first to last.
+        said = [alarm for alarm in alarms if own and alarm["event"] == own[0]["event"]]
+        last = said[-1] if said else dict.fromkeys(("verdict", "joint", "link", "probability"))
+        named = [alarm for alarm in said if alarm["verdict"] == last["verdict"]]
         joint, peak = max(one["peak_nm"].items(), key=lambda item: abs(item[1]), default=("", 0.0))
         felt.append(
             Felt(
@@ -248,17 +256,21 @@ def _compare(
                 peak,
                 joint,
                 round(1e3 * (own[0]["t"] - start), 1) if own else None,
-                own[0]["joint"] if own else None,
+                last["verdict"],
+                last["joint"],
+                last["link"],
+                last["probability"],
+                round(1e3 * (named[0]["t"] - start), 1) if named else None,
             )
         )
-    return felt, [alarm for alarm in raised if alarm["seq"] not in used]
+    return felt, [alarm for alarm in raised if alarm["event"] not in used]
 
 
 def _print(
     felt: list[Felt], extra: list[dict[str, Any]], session: Path, config: Path, console: Console
 ) -> None:
     table = Table(title="What happened, and what was noticed", title_justify="left")
-    for name in ("happened", "where", "size", "peak effect", "noticed", "named first"):
+    for name in ("happened", "where", "size", "peak effect", "noticed", "held to be"):
         table.add_column(name)
     for one in felt:
         unit = {"push": "N", "torque-loss": "of torque", "stop": "s braked"}[one.kind]
@@ -274,16 +286,24 @@ def _print(
             f"{one.size:.3g} {unit}",
             f"{one.peak_nm:+.1f} N m, {one.peak_joint}" if one.peak_nm else "none",
             noticed,
-            one.joint or "",
+            _held(one),
         )
     console.print(table)
     console.print(f"Alarms about nothing that happened: {len(extra)}")
     for alarm in extra:
         console.print(f"  {alarm['kind']} {alarm['detail']} at {alarm['joint']}, t = {alarm['t']:.3f} s")
     console.print(
-        "Each verdict is `undecided`: a constant band tells that torque is unexplained, not yet by what.\n"
         f"Session: {session}\nConfiguration: {config}\n"
         f"Look at it again: {Path(sys.argv[0])} review {session} --out {config.parent / 'review'}",
         highlight=False,
         soft_wrap=True,
     )
+
+
+def _held(one: Felt) -> str:
+    """Return what it was held to be in the end, how surely, and how soon."""
+    if one.verdict is None:
+        return ""
+    where = one.joint or one.link
+    sure = "" if one.probability is None else f" ({one.probability:.3f}, after {one.named_ms:.0f} ms)"
+    return f"{one.verdict}{f' at {where}' if where else ''}{sure}"

@@ -25,7 +25,7 @@ from rich.progress import Progress, SpinnerColumn, TextColumn, TimeElapsedColumn
 from rich.table import Table
 
 from monitor.errors import SessionError, SystemFault
-from monitor.flow.alarms import UNACKNOWLEDGED
+from monitor.flow.alarms import UNACKNOWLEDGED, size_in_words
 from monitor.flow.layout import Coverage, Reason, Signal
 from monitor.session import UTC_UNKNOWN_NS, Session
 from monitor.setup.config import Config, load
@@ -43,14 +43,18 @@ _FIELDS = (
     "t", "utc", "run", "event", "state", "kind", "priority", "verdict", "detail", "joint", "link",
     "probability", "alternatives", "size", "onset_t", "seq", "text",
 )  # fmt: skip
-_STATED = ("kind", "priority", "verdict", "detail", "joint", "link", "onset_t", "size")
+_ALARMED = ("kind", "priority")
+_STATED = ("verdict", "detail", "joint", "link", "probability", "onset_t", "size")
+_STATED_ONLY = ("lasting", "continues", "contact")
+_SERIES = ("t", "open", "verdict", "joint", "link", "probability")
+_TOP = 5  # explanations per point of the series
 _PART = ".part"
 _OURS = {name + end for name in (ALARMS, SUMMARY) for end in ("", _PART)}
 _SHOWN_EVENTS = 20
 
 
 class Review(NamedTuple):
-    """A reviewed session: the bodies of its alarm messages in order, and its summary."""
+    """A reviewed session: the bodies of its alarm messages in their order, and its summary."""
 
     alarms: list[dict[str, Any]]
     summary: dict[str, Any]
@@ -123,18 +127,19 @@ def review(
         The configuration is refused.
     """
     replay = Replay(session, config, _number_of(session, from_s) if from_s else 0)
-    alarms: list[dict[str, Any]] = []
+    said: list[dict[str, Any]] = []
     damaged = None
     try:
         for message in replay:
-            if message.topic == "alarm":
-                alarms.append(message.body)
+            if message.topic in ("alarm", "verdict"):
+                said.append(message.body)
             progress((replay.end_ns - replay.start_ns) / 1e9)
     except SessionError as error:
         if not replay.begun:
             raise
         damaged = str(error)
-    return Review(alarms, _summary(replay, config, alarms, damaged))
+    alarms = [body for body in said if "state" in body]
+    return Review(alarms, _summary(replay, config, alarms, said, damaged))
 
 
 def write(found: Review, folder: Path) -> None:
@@ -214,7 +219,11 @@ def _number_of(session: Session, from_s: float) -> int:
 
 
 def _summary(
-    replay: Replay, config: Config | None, alarms: list[dict[str, Any]], damaged: str | None
+    replay: Replay,
+    config: Config | None,
+    alarms: list[dict[str, Any]],
+    said: list[dict[str, Any]],
+    damaged: str | None,
 ) -> dict[str, Any]:
     session = replay.session
     return {
@@ -231,7 +240,7 @@ def _summary(
         "samples": _samples(replay),
         "coverage_s": _coverage(replay),
         "alarms": _tally(alarms),
-        "events": _events(alarms),
+        "events": _events(said),
         "gaps": [asdict(gap) for gap in replay.gaps],
         "truncated": session.truncated,
         "damaged": damaged,
@@ -274,18 +283,36 @@ def _tally(alarms: list[dict[str, Any]]) -> dict[str, dict[str, int]]:
     return tally
 
 
-def _events(alarms: list[dict[str, Any]]) -> list[dict[str, Any]]:
-    """One entry for each event, as last stated; null where it came or went outside the reviewed stretch."""
+def _events(bodies: list[dict[str, Any]]) -> list[dict[str, Any]]:
+    """One entry for each event, as last stated, by number.
+
+    Null is what came or went outside the reviewed stretch, and the alarm of what was only stated. `series` is
+    how the probabilities of the likeliest explanations went.
+    """
     events: dict[int, dict[str, Any]] = {}
-    for alarm in alarms:
-        unseen = {"event": alarm["event"], "raised_t": None, "raised_utc": None}
-        event = events.setdefault(alarm["event"], unseen)
-        came = alarm["state"] == UNACKNOWLEDGED
-        event |= {"raised_t": alarm["t"], "raised_utc": alarm["utc"]} if came else {}
-        event["cleared_t"] = None if came else alarm["t"]
-        event["cleared_utc"] = None if came else alarm["utc"]
-        event |= {name: alarm[name] for name in _STATED}
-    return list(events.values())
+    for said in bodies:
+        event = events.setdefault(said["event"], _unseen(said["event"]))
+        event |= {name: said[name] for name in _STATED}
+        if "state" in said:
+            came = said["state"] == UNACKNOWLEDGED
+            if came and event["raised_t"] is None:
+                event |= {"raised_t": said["t"], "raised_utc": said["utc"]}
+            event |= {"cleared_t": None if came else said["t"], "cleared_utc": None if came else said["utc"]}
+            event |= {name: said[name] for name in _ALARMED}
+        else:
+            event |= {name: said[name] for name in _STATED_ONLY}
+            top = said["explanations"][:_TOP]
+            event["series"].append({name: said[name] for name in _SERIES} | {"explanations": top})
+    return [events[number] for number in sorted(events)]
+
+
+def _unseen(number: int) -> dict[str, Any]:
+    times = ("raised_t", "raised_utc", "cleared_t", "cleared_utc")
+    return (
+        {"event": number}
+        | dict.fromkeys((*times, *_ALARMED))
+        | {"lasting": False, "continues": None, "contact": None, "series": []}
+    )
 
 
 def _notes(replay: Replay, config: Config | None, damaged: str | None) -> list[str]:
@@ -352,7 +379,7 @@ def _show(console: Console, summary: Mapping[str, Any], folder: Path) -> None:
 def _when(event: Mapping[str, Any]) -> str:
     """Return when it was raised by both clocks: UTC, and seconds of the robot's own."""
     if event["raised_t"] is None:
-        return "before"
+        return "before" if event["kind"] else "no alarm"
     utc = event["raised_utc"] or "UTC not known"
     return f"{utc}\nrobot clock {event['raised_t']:.3f} s"
 
@@ -364,16 +391,17 @@ def _lasted(event: Mapping[str, Any]) -> str:
 
 
 def _event_table(events: Sequence[Mapping[str, Any]]) -> Table:
-    table = Table("event", "verdict", "joint", "raised", "lasted", "size")
+    table = Table("event", "verdict", "probability", "where", "raised", "lasted", "size")
     for event in events[:_SHOWN_EVENTS]:
-        size = event["size"]
+        size, probability = event["size"], event["probability"]
         table.add_row(
             str(event["event"]),
             f"{event['verdict']}: {event['detail']}",
-            escape(event["joint"] or ""),
+            "" if probability is None else f"{probability:.3f}",
+            escape(event["joint"] or event["link"] or ""),
             _when(event),
             _lasted(event),
-            "" if size is None else f"{size['value']:.3g} {size['unit']}",
+            "" if size is None else size_in_words(size),
         )
     if len(events) > _SHOWN_EVENTS:
         table.caption = f"The first {_SHOWN_EVENTS} of {len(events)}; all are in {SUMMARY}."

@@ -27,7 +27,7 @@ from prometheus_client.metrics_core import (
 from prometheus_client.utils import floatToGoString
 
 from monitor.errors import SystemFault
-from monitor.flow.layout import KINDS, LATENESS_EDGES_S, Coverage, Facts, Reason, Right, Signal
+from monitor.flow.layout import KINDS, LATENESS_EDGES_S, VERDICTS, Coverage, Facts, Reason, Right, Signal
 from monitor.setup.build import Setup
 from monitor.setup.shared import Shared
 
@@ -71,16 +71,24 @@ def _word(member: IntEnum) -> str:
     return member.name.lower().replace("_", "-")
 
 
+def _measured(s: Source, unit: str) -> Iterator[Row]:
+    return _rows_of(s, s.state["tau"], unit)
+
+
 def _joint_rows(s: Source, field: str, unit: str) -> Iterator[Row]:
+    return _rows_of(s, s.outputs[field], unit)
+
+
+def _rows_of(s: Source, values: Any, unit: str) -> Iterator[Row]:
     """Joint and value of the rows of v that belong to joints with this unit."""
     base = len(s.facts.rows) - len(s.facts.joints)
-    rows = zip(s.facts.rows, s.facts.units, s.outputs[field], strict=True)
+    rows = zip(s.facts.rows, s.facts.units, values, strict=True)
     return ((joint, value) for joint, its_unit, value in list(rows)[base:] if its_unit == unit)
 
 
-def _residuals(s: Source, unit: str) -> Iterator[Row]:
+def _both_bandwidths(s: Source, field: str, unit: str) -> Iterator[Row]:
     for bandwidth in ("fast", "slow"):
-        for joint, value in _joint_rows(s, f"r_{bandwidth}", unit):
+        for joint, value in _joint_rows(s, f"{field}_{bandwidth}", unit):
             yield joint, bandwidth, value
 
 
@@ -142,21 +150,69 @@ METRICS = (
         "limbtell_residual_newton_meters",
         "gauge",
         "Torque the model does not explain, by rotating joint and bandwidth of the residual.",
-        lambda s: _residuals(s, "N m"),
+        lambda s: _both_bandwidths(s, "r", "N m"),
         ("joint", "bandwidth"),
     ),
     Declared(
         "limbtell_residual_newtons",
         "gauge",
         "Force the model does not explain, by prismatic joint and bandwidth of the residual.",
-        lambda s: _residuals(s, "N"),
+        lambda s: _both_bandwidths(s, "r", "N"),
         ("joint", "bandwidth"),
+    ),
+    Declared(
+        "limbtell_band_newton_meters",
+        "gauge",
+        "Residual of a rotating joint from which on an event opens, as it stands now, by bandwidth.",
+        lambda s: _both_bandwidths(s, "band", "N m"),
+        ("joint", "bandwidth"),
+    ),
+    Declared(
+        "limbtell_band_newtons",
+        "gauge",
+        "Residual of a prismatic joint from which on an event opens, as it stands now, by bandwidth.",
+        lambda s: _both_bandwidths(s, "band", "N"),
+        ("joint", "bandwidth"),
+    ),
+    Declared(
+        "limbtell_explained_torque_newton_meters",
+        "gauge",
+        "Part of the fast residual of a rotating joint that tracked friction and lasting faults explain.",
+        lambda s: _joint_rows(s, "explained", "N m"),
+        ("joint",),
+    ),
+    Declared(
+        "limbtell_explained_force_newtons",
+        "gauge",
+        "Part of the fast residual of a prismatic joint that tracked friction and lasting faults explain.",
+        lambda s: _joint_rows(s, "explained", "N"),
+        ("joint",),
     ),
     Declared(
         "limbtell_band_ratio",
         "gauge",
-        "Largest residual of both bandwidths as a share of its band; above 1 it is outside.",
+        "Fast residual, less what is explained, as a share of its band; above 1 an event opens.",
         _ratios,
+        ("joint",),
+    ),
+    Declared(
+        "limbtell_body_ratio",
+        "gauge",
+        "The same for all joints together; above 1 an event opens though no joint alone stands out.",
+        lambda s: [(s.outputs["body_ratio"],)],
+    ),
+    Declared(
+        "limbtell_measured_torque_newton_meters",
+        "gauge",
+        "Torque of a rotating joint as its drive reports it, in terms of the model.",
+        lambda s: _measured(s, "N m"),
+        ("joint",),
+    ),
+    Declared(
+        "limbtell_measured_force_newtons",
+        "gauge",
+        "Force of a prismatic joint as its drive reports it, in terms of the model.",
+        lambda s: _measured(s, "N"),
         ("joint",),
     ),
     Declared(
@@ -173,11 +229,17 @@ METRICS = (
         lambda s: _joint_rows(s, "tau_model", "N"),
         ("joint",),
     ),
-    Declared("limbtell_events_total", "counter", "Events, numbered as in alarms.", _state("events")),
+    Declared(
+        "limbtell_events_total",
+        "counter",
+        "Events that are over or became a lasting fault, by what they were held to be in the end.",
+        lambda s: zip(VERDICTS, s.state["verdicts"], strict=True),
+        ("verdict",),
+    ),
     Declared(
         "limbtell_alarms_raised_total",
         "counter",
-        "Alarms raised.",
+        "Alarms raised, or stated anew as another kind.",
         lambda s: _by_kind(s, "alarms_raised"),
         ("kind", "priority"),
     ),

@@ -19,7 +19,8 @@ from monitor.robot.pseudo_inertia import moved, pseudo_inertia
 _START = 2
 # A change of one of these makes the torque balance start anew.
 _BALANCE = ("boot", "mode", "drive", "brake", "stop", "tool", "payload", "payload_known", "support")
-_MODE_REASON = {"guided": Reason.GUIDED, "calibrating": Reason.CALIBRATING}
+_GUIDED = "guided"
+_MODE_REASON = {_GUIDED: Reason.GUIDED, "calibrating": Reason.CALIBRATING}
 
 
 class Change(NamedTuple):
@@ -43,6 +44,7 @@ class ConditionKeeper:
         self._heard_ns: int | None = None
         self._stale = True
         self._refused = False
+        self._since_start = False  # something was there already when the judgement began
         self._settling, self._pending = outputs["settling"].data, state["pending"].data
         self._now = (Coverage.BLIND, Reason.NO_STREAM)
         self._accounted_ns: int | None = None
@@ -52,6 +54,17 @@ class ConditionKeeper:
     def refused(self) -> bool:
         """Whether the robot on the line is not the one this configuration is for."""
         return self._refused
+
+    @property
+    def guided(self) -> bool:
+        """Whether a hand guides the robot, so that contacts are to be expected."""
+        return self._condition is not None and self._condition.mode == _GUIDED
+
+    def loaded(self, since_start: bool) -> None:
+        """Take in whether an event is open that was there when the judgement began."""
+        if since_start != self._since_start:
+            self._since_start = since_start
+            self._evaluate()
 
     def heard(self, condition: Condition, received_ns: int) -> Change:
         """Take a message of topic `robot` in; WireError when its payload cannot be."""
@@ -127,15 +140,16 @@ class ConditionKeeper:
         # A row is judged when every joint on the wire that enters it is; base rows hold the feet's forces.
         x["judged"] = 0
         x["judged"][-m:] = np.all(judged | ~self._facts.row_needs, axis=1)
+        x["guided"] = known is not None and known.mode in _MODE_REASON
         self._whole = _whole(self._joints)
         self._show()
 
     def _may_judge(self) -> bool:
-        """Return whether unexplained torque means anything: no hand that guides, no foot on the ground."""
+        """Return whether unexplained torque means anything: not calibrating, no foot on the ground."""
         known = self._condition
         if self._facts.floating and (known is None or self._stale or known.support != "hoisted"):
             return False
-        return known is None or known.mode not in _MODE_REASON
+        return known is None or known.mode != "calibrating"
 
     def _joint(self, i: int) -> tuple[Coverage, Reason]:
         """Return coverage of joint i and the gravest reason for it."""
@@ -156,6 +170,8 @@ class ConditionKeeper:
             return Coverage.CONDITIONAL, Reason.NOT_HOISTED
         if not known.payload_known or (known.payload is not None and self._facts.tool is None):
             return Coverage.CONDITIONAL, Reason.PAYLOAD_UNKNOWN
+        if self._since_start:
+            return Coverage.CONDITIONAL, Reason.SINCE_START
         return Coverage.WATCHING, Reason.NONE
 
     def _with_payload(self, condition: Condition) -> NDArray[np.float64]:
@@ -178,6 +194,7 @@ class ConditionKeeper:
             "heard_ns": self._heard_ns,
             "stale": self._stale,
             "refused": self._refused,
+            "since_start": self._since_start,
             "now": list(self._now),
             "accounted_ns": self._accounted_ns,
         }
@@ -190,7 +207,7 @@ class ConditionKeeper:
             condition = Condition(*values)
             self._condition = condition._replace(payload=condition.payload and Payload(*condition.payload))
         self._heard_ns, self._stale = saved["heard_ns"], saved["stale"]
-        self._refused = saved["refused"]
+        self._refused, self._since_start = saved["refused"], saved["since_start"]
         self._now = (Coverage(saved["now"][0]), Reason(saved["now"][1]))
         self._accounted_ns = saved["accounted_ns"]
         rebase = int(self._inputs["rebase"])

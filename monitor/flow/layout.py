@@ -5,7 +5,8 @@ the counters of flow; `outputs` by the step. A block is a one-element structured
 `x["r"]` read the same compiled and interpreted. A snapshot of the data path holds all but `params`.
 
 Sizes: n degrees of freedom (a floating base counts six), nq numbers in q, m joints on the wire, N axes,
-D samples in the delay line.
+D samples in the delay line, B bodies and F feet that may be touched, X explanations, K constant and Q smooth
+candidates (ways an explanation may look).
 """
 
 from __future__ import annotations
@@ -17,6 +18,11 @@ from typing import Any, NamedTuple
 
 import numpy as np
 from numpy.typing import NDArray
+
+from monitor.explain.outline import Explanation
+from monitor.kernels.band import CAUSES
+from monitor.kernels.ledger import BENDS
+from monitor.robot.tree import Tree
 
 Block = NDArray[np.void]
 Floats = NDArray[np.float64]
@@ -30,11 +36,30 @@ class Sizes(NamedTuple):
     m: int
     N: int
     D: int
+    B: int
+    F: int
+    X: int
+    K: int
+    Q: int
+
+    @property
+    def most(self) -> int:
+        """States of the largest smooth candidate."""
+        return self.n + 3 * SMOOTH
 
     @property
     def base(self) -> int:
         """Degrees of freedom of the base: 6 or 0."""
         return self.n - self.m
+
+
+class Blocks(NamedTuple):
+    """The four blocks of one robot's data path."""
+
+    params: Block
+    inputs: Block
+    state: Block
+    outputs: Block
 
 
 class Tool(NamedTuple):
@@ -56,11 +81,16 @@ class Facts:
     floating: bool
     serial: str
     row_needs: NDArray[np.bool_]  # (m,m): which joints on the wire enter which joint row
+    tree: Tree
+    explanations: tuple[Explanation, ...]  # in the order of `outputs.probability`, after nothing and other
+    certainty: float  # probability from which on a verdict is given
     tool: Tool | None
     wait_ns: int  # longest wait for a missing sample
     stream_stale_ns: int
     condition_stale_ns: int
     quiet_ns: int
+    dropouts_ratio: float  # shares of samples within a second that raise an alarm
+    duplicates_ratio: float
 
 
 class Form(IntEnum):
@@ -82,6 +112,7 @@ class Signal(IntEnum):
     FROZEN = 5
     CONTRADICTION = 6
     BASE_POSE = 7
+    NOISE = 8
 
 
 class Coverage(IntEnum):
@@ -107,6 +138,7 @@ class Reason(IntEnum):
     STOPPED = 9  # a stop is in force: the drives may be braking or about to lose power
     NOT_HOISTED = 10  # floating base: forces of feet, hands or docks are not told apart from faults
     PAYLOAD_UNKNOWN = 11
+    SINCE_START = 12  # something was there already when the judgement began
 
 
 class Notice(IntEnum):
@@ -114,6 +146,9 @@ class Notice(IntEnum):
 
     EVENT_OPENED = 1
     EVENT_ENDED = 2
+    WEIGHED = 128
+    FAULT_CONFIRMED = 256
+    FAULT_CEASED = 512
     BAD_SAMPLE = 4
     BRAKE_MOVED = 8
     TORQUE_AT_LIMIT = 16
@@ -121,9 +156,19 @@ class Notice(IntEnum):
     GAP = 64
 
 
+# What an event may be held to be. These names are stable; programs read them.
+VERDICTS = (
+    "contact", "touchdown", "foothold-lost", "actuator", "position-sensor", "torque-sensor", "load", "signal",
+    "system", "undecided",
+)  # fmt: skip
+
 # Alarm kinds and their priorities; what they mean is documented in the README.
 KINDS = {
     "unexplained-torque": "high",
+    "contact": "high",
+    "actuator": "high",
+    "sensor": "medium",
+    "load": "medium",
     "brake": "high",
     "robot": "high",
     "drive": "medium",
@@ -135,6 +180,14 @@ KINDS = {
 # Upper edges [s] of the histogram of how late a tick began; one more bucket holds the rest.
 LATENESS_EDGES_S = (50e-6, 100e-6, 200e-6, 500e-6, 1e-3, 2e-3, 5e-3, 10e-3, 50e-3, 200e-3)
 
+
+# Residuals and what goes with them, kept for an event that is dated back: so many evidence steps.
+RING = 32
+# Columns of a smooth candidate, at most; a constant and the shapes of its rise; parameters of a lasting
+# fault, at most; filtered torque, tanh(v/v0), v.
+SMOOTH, RISE, LASTING, FEATURES = 6, 3, 4, 3
+# Lasting faults that can be part of the model at a time.
+FAULTS = 2
 
 # Gains of the joint-space form are kept for Δt of 1 to so many periods; a longer gap re-bases. The number is
 # fixed, since it is part of the blocks' type, for which the step is compiled.
@@ -180,6 +233,7 @@ def params_fields(s: Sizes) -> list[Field]:
         # friction of the model at the joint: viscous v + coulomb tanh(v / friction_velocity) + offset
         ("viscous", f8, (n,)),
         ("coulomb", f8, (n,)),
+        ("bend", f8, (n, BENDS)),
         ("friction_offset", f8, (n,)),
         ("friction_velocity", f8, (n,)),
         # the ledger
@@ -189,8 +243,71 @@ def params_fields(s: Sizes) -> list[Field]:
         ("gain_slow", f8, (GAIN_STEPS, n, 3, 2)),
         ("pole_fast", f8, ()),  # rad/s, momentum forms
         ("pole_slow", f8, ()),
-        ("band_fast", f8, (n,)),  # N m; infinite where a row is never judged
-        ("band_slow", f8, (n,)),
+        # the band
+        ("rated", f8, (n,)),  # N m: what shares of torque refer to
+        ("cause_fast", f8, (n, CAUSES)),  # weights of the causes of the squared residual
+        ("cause_slow", f8, (n, CAUSES)),
+        ("e_variance", f8, (n,)),  # (rad/s²)²: of e_fast by sensor noise alone
+        ("cause_pole", f8, ()),  # rad/s: the causes' low-pass
+        ("hold_s", f8, ()),  # how long standing or reversing counts on
+        ("rho", f8, (n, n)),  # correlation of the residuals
+        ("slow_share", f8, (n,)),  # share of the variance that is slow noise
+        ("slow_keep", f8, ()),  # its correlation over one evidence step
+        ("model_error", f8, ()),  # share of the residual itself
+        ("track_sd", f8, (n, 3)),  # prior of added Coulomb, viscous and constant friction
+        ("track_limit", f8, (n, 3)),  # beyond it the friction is a fault
+        ("track_keep", f8, ()),  # what is kept over one evidence step
+        ("track_noise", f8, ()),  # how many evidence steps count as one
+        ("track_clip", f8, ()),  # sd
+        # events
+        ("row_limit", f8, ()),  # |residual| / sd of one row that opens an event
+        ("body_limit", f8, ()),  # of all rows: r' R^-1 r
+        ("quiet_ratio", f8, ()),  # share of the limits below which the robot is quiet
+        ("onset_ratio", f8, ()),  # share of the limits below which an event has not begun
+        ("cusum_sd", f8, (n,)),  # N m: lasting error of the model; what is summed counts it beside noise
+        ("cusum_reference", f8, ()),
+        ("cusum_limit", f8, ()),
+        ("cusum_samples", i8, ()),  # samples in a block
+        # evidence
+        ("evidence_samples", i8, ()),  # samples between evidence steps
+        ("column_lag", i8, ()),  # evidence steps by which the residual lags the posture
+        ("evidence_stages", i8, ()),  # stages of one evidence step; and how many are done per sample
+        ("stages_at_once", i8, ()),
+        ("least", f8, ()),  # prior sd: a constant below is no fault
+        ("body_axis", i8, (s.B,)),
+        ("body_centre", f8, (s.B, 3)),  # m, body frame
+        ("foot_axis", i8, (s.F,)),
+        ("foot_point", f8, (s.F, 3)),
+        ("foot_sd", f8, ()),  # N: of a planned foot's force
+        ("load_axis", i8, ()),
+        ("load_centre", f8, (3,)),
+        ("other_sd", f8, (n,)),  # N m: of something else
+        ("of_family", i8, (s.X,)),  # of each explanation: family, index and prior sd of what may last
+        ("of_index", i8, (s.X,)),
+        ("of_sd", f8, (s.X, LASTING)),
+        ("sure", f8, ()),  # probability from which on an explanation is certain
+        ("sure_ns", i8, ()),  # and for how long, before it counts as lasting
+        ("log_rate", f8, (s.X + 2,)),  # of nothing, something else, then the explanations
+        # candidates: family and index as in monitor/explain, the explanation they belong to
+        ("constant_family", i8, (s.K,)),
+        ("constant_index", i8, (s.K,)),
+        ("constant_of", i8, (s.K,)),
+        ("constant_sd", f8, (s.K,)),
+        ("constant_one_sided", i8, (s.K,)),
+        ("constant_share", f8, (s.K,)),  # log share of the explanation's rate
+        ("constant_ends", f8, (s.K,)),  # log chance that it ends within an evidence step
+        ("smooth_family", i8, (s.Q,)),
+        ("smooth_index", i8, (s.Q,)),
+        ("smooth_of", i8, (s.Q,)),
+        ("smooth_columns", i8, (s.Q,)),
+        ("smooth_sd", f8, (s.Q, SMOOTH)),
+        ("smooth_share", f8, (s.Q,)),
+        ("smooth_ends", f8, (s.Q,)),
+        ("smooth_sized", i8, (s.Q,)),  # components that make up the size: a force's three, or the first
+        ("smooth_settles", i8, (s.Q,)),
+        ("smooth_settled", f8, (s.Q,)),
+        ("smooth_one_sided", i8, (s.Q,)),
+        ("smooth_dt_T", f8, (s.Q,)),  # evidence step over time constant
         # limits of credibility, in joint order of the wire
         ("q_min", f8, (m,)),
         ("q_max", f8, (m,)),
@@ -200,11 +317,20 @@ def params_fields(s: Sizes) -> list[Field]:
         ("command_error", f8, (m,)),  # largest credible difference of tau and tau_cmd
         ("command_error_ns", i8, ()),
         ("clock_jump_ns", i8, ()),  # how far Δt may leave Δseq times the period
-        ("jump", f8, (m,)),  # rad: largest credible step of position beyond what velocity explains
+        ("jump", f8, (m,)),  # rad: largest credible step of position beyond what the motion explains
+        ("acceleration_max", f8, ()),  # rad/s²: of the hardest blow
         ("drift", f8, (m,)),  # rad: largest credible difference of ∫v dt and Δq
+        ("velocity_lag", f8, ()),  # s: by which the velocity may be late
         ("drift_s", f8, ()),  # s: that difference is forgotten with this time constant
         ("frozen_velocity", f8, (m,)),  # rad/s: a joint that reports more than this does move
         ("frozen_ns", i8, ()),
+        ("bend_q", f8, (m,)),  # rad, rad/s: second differences of q and qd that noise does not reach
+        ("bend_qd", f8, (m,)),
+        ("noise_qd", f8, (m,)),  # rad/s: sd of the velocity
+        ("noise_tau", f8, (m,)),  # sd of the torque on the wire; infinite where none is configured
+        ("wire_row", i8, (m,)),  # row of v of the joint on the wire, -1 behind a coupling
+        ("push", f8, (m,)),  # N m beyond friction that nothing holds both ways
+        ("push_ns", i8, ()),  # ways that far apart belong together
         ("base_position_max", f8, ()),  # m
         ("base_jump", f8, ()),  # m or rad: as `jump`, for the pose of the base
         ("base_speed_max", f8, ()),  # m/s and rad/s
@@ -236,6 +362,7 @@ def inputs_fields(s: Sizes) -> list[Field]:
         ("rebase", i8, ()),  # 0 no, 1 gap or bad signal, 2 start, restart or change of condition
         ("brake", i8, (m,)),  # 1 closed
         ("drive", i8, (m,)),  # 1 powered
+        ("guided", i8, ()),  # 1: a person or a calibration moves the robot
         ("judged", i8, (s.n,)),  # 1 where the residual may open an event
         ("E", f8, (N, 4, 4)),  # pseudo-inertias, announced payload included
     ]
@@ -280,7 +407,7 @@ def state_fields(s: Sizes) -> list[Field]:
         ("q_at", f8, (nq,)),  # where the dynamics are taken
         ("v_at", f8, (n,)),
         ("known", f8, (n,)),  # N m: motor torque less friction and gravity
-        ("slope", f8, (n,)),  # N m s/rad: friction in proportion to velocity, at v_at
+        ("friction_slope", f8, (n,)),  # N m s/rad: friction in proportion to velocity, at v_at
         # joint-space form: fused state and unexplained acceleration per bandwidth
         ("q_fast", f8, (nq,)),
         ("v_fast", f8, (n,)),
@@ -308,17 +435,155 @@ def state_fields(s: Sizes) -> list[Field]:
         ("raw_seq", i8, ()),
         ("raw_held", i8, ()),
         ("still_ns", i8, (m,)),  # how long the position has not changed although velocity says so
-        ("drift", f8, (m,)),  # rad: leaky ∫v dt − Δq
+        ("drift", f8, (m,)),  # rad: leaky Δq − ∫v dt
+        ("swing", f8, (m,)),  # rad/s: change of the velocity reading, equally leaky
+        ("raw_tau", f8, (m,)),
+        ("raw_dt_ns", i8, ()),  # Δt of the last comparison
+        ("step_q", f8, (m,)),  # last changes of the readings
+        ("step_qd", f8, (m,)),
+        ("step_tau", f8, (m,)),
+        ("bend_q", f8, (m,)),  # last second differences
+        ("bend_qd", f8, (m,)),
+        ("score_q", f8, (m,)),  # how much too noisy the reading is
+        ("score_qd", f8, (m,)),
+        ("same_ns", i8, (m,)),  # how long position and velocity have repeated exactly
+        ("copy_ns", i8, ()),  # how long all readings have
+        ("run_qd", i8, (m,)),  # exact repetitions in a row at standstill
+        ("run_tau", i8, (m,)),
+        ("lively_qd", i8, (m,)),  # how surely the reading is noisy at standstill
+        ("lively_tau", i8, (m,)),
+        ("pushed_ns", i8, (m, 2)),  # same_ns when last pushed either way, -1 never
         ("brake_ns", i8, (m,)),  # since when the brake is closed; 0 open
         ("brake_q", f8, (m,)),
         ("brake_moved", i8, (m,)),
         ("disobeyed_ns", i8, (m,)),  # since when tau differs from tau_cmd; 0 not at all
         ("disobeyed", i8, (m,)),  # 1 once that lasted too long
         ("ratio_peak", f8, (n,)),  # largest band ratio since the last health message
+        # band: filters of the regressors (error of position, velocity, e per feature), causes, variances
+        ("respond", f8, (n, FEATURES, 3)),
+        ("feature", f8, (n, FEATURES)),  # tau, tanh(v/v0), v through the residual's filter
+        ("cause", f8, (n, CAUSES)),
+        ("held", f8, (n,)),
+        ("held_left_s", f8, (n,)),
+        ("var_fast", f8, (n,)),
+        ("var_slow", f8, (n,)),
+        ("var_stand", f8, (n,)),  # part of var_fast
+        ("track", f8, (n, 3)),
+        ("track_P", f8, (n, 3, 3)),
+        ("explained", f8, (n,)),  # N m that tracked friction and lasting faults explain
+        ("explained_var", f8, (n,)),
+        ("tracked", f8, (n,)),  # N m of it by tracked friction
+        ("left", f8, (n,)),  # N m: fast residual less what is explained
+        ("R", f8, (n, n)),
+        ("R_factor", f8, (n, n)),
+        ("white", f8, (n,)),
+        ("body_ratio", f8, ()),
+        ("cusum_sum", f8, (n,)),
+        ("cusum_count", i8, ()),
+        ("cusum", f8, (n, 2)),
+        ("cusum_since_ns", i8, (n, 2)),
+        ("step_due", i8, ()),  # 1: this sample went into the ring
+        ("sampled", i8, ()),  # samples since the last entry of the ring
+        # what an evidence step needs, kept for RING steps
+        ("ring_ns", i8, (RING,)),
+        ("ring_q", f8, (RING, nq)),
+        ("ring_v", f8, (RING, n)),
+        ("ring_a", f8, (RING, n)),
+        ("ring_r", f8, (RING, n)),
+        ("ring_var", f8, (RING, n)),
+        ("ring_stand", f8, (RING, n)),
+        ("ring_extra", f8, (RING, n)),
+        ("ring_feature", f8, (RING, n, FEATURES)),
+        ("ring_loud", i8, (RING,)),  # 1: something stood out
+        ("ring_head", i8, ()),  # entries written so far
+        ("ring_held", i8, ()),  # entries since the last re-base
+        ("weigh_next", i8, ()),  # next entry to weigh, and its next stage
+        ("weigh_stage", i8, ()),
+        ("weighed", i8, ()),  # evidence steps of this event
+        # work of one evidence step
+        ("x_R_W", f8, (N + 1, 3, 3)),
+        ("x_p_W", f8, (N + 1, 3)),
+        ("x_S", f8, (N, 6)),
+        ("x_Sd", f8, (N, 6)),
+        ("x_V", f8, (N + 1, 6)),
+        ("x_Vd", f8, (N + 1, 6)),
+        ("x_Ic", f8, (N, 10)),
+        ("x_Bc", f8, (N, 12)),
+        ("x_M", f8, (n, n)),
+        ("x_C", f8, (n, n)),
+        ("x_g", f8, (n,)),
+        ("x_p", f8, (n,)),
+        ("x_Ctv", f8, (n,)),
+        ("x_q", f8, (nq,)),
+        ("x_id", f8, (n,)),
+        ("slope", f8, (n, n)),
+        ("x_y", f8, (n,)),
+        ("x_d", f8, (n,)),
+        ("x_G", f8, (n, n)),
+        ("x_H", f8, (n, SMOOTH)),
+        ("x_gain", f8, (n, n)),
+        ("x_innovation", f8, (n,)),
+        ("x_spread", f8, (n,)),
+        ("x_spread_kept", f8, (n,)),
+        ("x_gain_kept", f8, (n, n)),
+        ("x_feature", f8, (n, FEATURES)),
+        ("x_L", f8, (RISE, RISE)),
+        ("x_u", f8, (s.most,)),
+        ("x_factor", f8, (n, n)),
+        # lasting faults
+        ("fault_of", i8, (FAULTS,)),  # 1 + number of the explanation; 0 free
+        ("fault_family", i8, (FAULTS,)),
+        ("fault_index", i8, (FAULTS,)),
+        ("fault_columns", i8, (FAULTS,)),
+        ("fault_theta", f8, (FAULTS, LASTING)),
+        ("fault_P", f8, (FAULTS, LASTING, LASTING)),
+        ("fault_H", f8, (FAULTS, n, SMOOTH)),
+        ("fault_idle_s", f8, (FAULTS,)),  # time it was not felt though it should have been
+        ("fault_event", i8, (FAULTS,)),
+        ("fault_ceased", i8, (FAULTS,)),  # event of the fault that was in the slot before
+        ("fault_gain", f8, (LASTING,)),
+        ("fault_before", f8, (LASTING,)),
+        ("sure_of", i8, ()),  # explanation that is certain, since when
+        ("sure_since_ns", i8, ()),
+        ("concluded", i8, ()),  # 1: certain for so long that weighing on would only grow stale
+        # evidence of this event: nothing, something else, candidates
+        ("null_s", f8, (n,)),
+        ("null_P", f8, (n, n)),
+        ("null_log", f8, ()),
+        ("quiet_s", f8, (n,)),  # slow noise since the residual was last loud
+        ("quiet_P", f8, (n, n)),
+        ("quiet_log", f8, ()),  # of this step: evidence of nothing, whatever was before
+        ("other_s", f8, (n,)),
+        ("other_P", f8, (n, n)),
+        ("other_log", f8, ()),
+        ("constant_s", f8, (s.K, RISE, n)),
+        ("constant_A", f8, (s.K, RISE, RISE)),
+        ("constant_b", f8, (s.K, RISE)),
+        ("constant_x", f8, (s.K, RISE)),  # estimate, in prior sd
+        ("constant_log", f8, (s.K,)),  # evidence, whether it still acts or has ended
+        ("constant_ended", f8, (s.K,)),  # evidence of having ended
+        ("constant_acts", f8, (s.K,)),
+        ("constant_size", f8, (s.K,)),  # estimate while it acted, and its sd
+        ("constant_size_sd", f8, (s.K,)),
+        ("smooth_x", f8, (s.Q, s.most)),
+        ("smooth_P", f8, (s.Q, s.most**2)),
+        ("smooth_log", f8, (s.Q,)),
+        ("smooth_ended", f8, (s.Q,)),
+        ("smooth_acts", f8, (s.Q,)),
+        ("smooth_misfit", f8, (s.Q,)),
+        ("smooth_peak", f8, (s.Q, SMOOTH)),  # estimate when its size was largest; a contact's in body axes
+        ("smooth_peak_sd", f8, (s.Q,)),  # of the size then
+        ("smooth_peak_size", f8, (s.Q,)),
         ("settled_ns", i8, ()),  # robot clock from which the judgement goes on
+        ("start_settled_ns", i8, ()),  # the same after the last start or change of condition
         ("event_open", i8, ()),
+        ("event_number", i8, ()),  # of the open event; written by flow
         ("event_onset_ns", i8, ()),
         ("event_over_ns", i8, ()),  # last time anything stood outside its band
+        ("event_quiet_ns", i8, ()),  # last time all was well inside
+        ("event_loud_ns", i8, ()),  # last time it was not
+        ("weigh_afresh", i8, ()),  # 1: all evidence so far is of no account
+        ("event_drifted", i8, ()),  # 1: opened by the sums, small and lasting
         ("event_row", i8, ()),  # row with the largest ratio so far
         ("event_ratio", f8, ()),
         ("event_size", f8, ()),  # N m at that row and ratio
@@ -339,6 +604,7 @@ def state_fields(s: Sizes) -> list[Field]:
         ("wire_errors", i8, ()),
         ("refused", i8, ()),
         ("events", i8, ()),
+        ("verdicts", i8, (len(VERDICTS),)),  # events by what they were last held to be, once they are over
         ("alarms_raised", i8, (len(KINDS),)),
         ("alarms_standing", i8, (len(KINDS),)),
         ("coverage_ns", i8, (len(Coverage), len(Reason))),
@@ -351,7 +617,12 @@ def outputs_fields(s: Sizes) -> list[Field]:
     return [
         ("r_fast", f8, (n,)),  # N m (N for prismatic rows): torque the model does not explain
         ("r_slow", f8, (n,)),
-        ("ratio", f8, (n,)),  # largest |residual| / band of both bandwidths
+        ("band_fast", f8, (n,)),  # N m: largest residual that is not an event, as it stands now
+        ("band_slow", f8, (n,)),
+        ("explained", f8, (n,)),  # N m of r_fast that tracked friction explains
+        ("ratio", f8, (n,)),  # |residual| / band; 1 opens an event
+        ("body_ratio", f8, ()),  # the same for all rows together
+        ("probability", f8, (s.X + 2,)),  # of nothing, something else, then the explanations
         ("tau_model", f8, (n,)),  # N m: what inverse dynamics expects of each joint
         ("notice", i8, ()),  # bits of `Notice`
         ("signal", i8, ()),  # `Signal` of this sample

@@ -14,12 +14,12 @@ import numpy as np
 from numpy.typing import NDArray
 
 from monitor.errors import WireError
-from monitor.flow import verdict as verdicts
 from monitor.flow import wire
 from monitor.flow.alarms import AlarmBoard, Key, Transition
 from monitor.flow.align import Aligner
 from monitor.flow.coverage import ConditionKeeper
-from monitor.flow.layout import KINDS, Block, Coverage, Facts, Notice, Reason, Signal
+from monitor.flow.events import Events, Statement
+from monitor.flow.layout import KINDS, VERDICTS, Blocks, Coverage, Facts, Notice, Reason, Signal
 from monitor.flow.step import step
 from monitor.flow.verdict import Verdict
 from monitor.kernels.jit import resolved
@@ -31,11 +31,15 @@ _PATIENCE_NS = 10_000_000_000  # a robot that has not sent anything for so long 
 _PACE = 10.0  # a robot's clock that runs so many times faster or slower than ours counts something else
 _MOST_RESTARTS = 3  # within a second; more are no restarts
 _WIRE_QUIET_NS = 5_000_000_000  # refused messages are called over when none came for so long
-_EVENT = Key("unexplained-torque", "outside-band")
 _STALE = Key("signal", "stale")
 _GAP = Key("signal", "gap")
+_DROPOUTS, _DUPLICATES = Key("signal", "dropouts"), Key("signal", "duplicates")
+_FEWEST = 3  # lost or doubled samples that are more than chance
 _OTHER_ROBOT = Key("robot", "other-serial")
 _STEP_NOTICES = ~int(Notice.TORQUE_AT_LIMIT)
+_EVENT_NOTICES = int(
+    Notice.EVENT_OPENED | Notice.EVENT_ENDED | Notice.WEIGHED | Notice.FAULT_CONFIRMED | Notice.FAULT_CEASED
+)
 _PER_JOINT = (
     # notice, state field, alarm kind, detail
     (Notice.BRAKE_MOVED, "brake_moved", "brake", "moved-while-closed"),
@@ -50,15 +54,6 @@ class Message(NamedTuple):
     topic: str
     payload: bytes
     body: dict[str, Any]
-
-
-class Blocks(NamedTuple):
-    """The four blocks of flow/layout."""
-
-    params: Block
-    inputs: Block
-    state: Block
-    outputs: Block
 
 
 class Pipeline:
@@ -86,13 +81,15 @@ class Pipeline:
         self._aligner = Aligner(self._state, facts.wait_ns)
         self._condition = ConditionKeeper(facts, *blocks)
         self._board = AlarmBoard()
+        self._events = Events(facts, blocks, self._board)
         self._out: list[Message] = []
         self._sample_ns = 0  # when the last sample that was stepped had been received
         self._silent = False  # called: no sample for too long
         self._first_tick_ns: int | None = None
         self._refused_ns = 0  # when another robot was last heard
-        # A second ago: receive time, robot clock, samples, restarts, clock faults.
-        self._second = (0, 0, 0, 0, 0)
+        # A second ago: receive time, robot clock, samples, restarts, clock faults, lost, doubled, gaps.
+        self._second = (0, 0, 0, 0, 0, 0, 0, 0)
+        self._gaps = 0  # many samples lost in a row
         self._health_ns = 0
         self._last_bad: dict[Key, int] = {}  # alarms of single messages: cleared by quiet
         self._flagged: dict[Key, tuple[str, int]] = {}  # alarms of a joint that stand with a flag of the step
@@ -147,25 +144,39 @@ class Pipeline:
         return out
 
     def _check_numbering(self, now_ns: int) -> None:
-        """Call, once a second, a clock in another unit and a `seq` that does not count."""
+        """Call, once a second, a clock in another unit, a `seq` that does not count, and a poor line."""
         s = self._state
         last, now = self._second, (
             self._sample_ns, int(self._inputs["t_ns"]), int(s["received"]), int(s["restarts"]),
-            int(s["bad"][Signal.CLOCK]),
+            int(s["bad"][Signal.CLOCK]), int(s["lost"]), int(s["duplicates"]), self._gaps,
         )  # fmt: skip
         self._second = now
-        ours, robots, samples, restarts, clock_faults = (b - a for a, b in zip(last, now, strict=True))
+        ours, robots, samples, restarts, clock_faults, lost, doubled, gaps = (
+            b - a for a, b in zip(last, now, strict=True)
+        )
         if restarts > _MOST_RESTARTS:
             found = f"joints seq: began anew {restarts} times within a second"
             self._misnumbered(
                 "numbering", f"{found}; expected a number that grows by 1 with every sample", now_ns
             )
             return
-        # A clock that was set, or a restart, is told elsewhere.
+        # A clock that was set, a restart, or many samples lost in a row is told elsewhere.
+        if last[0] and not restarts and not gaps:
+            sent = samples - doubled + lost
+            self._poor_line(_DROPOUTS, lost, sent, self.facts.dropouts_ratio, now_ns)
+            self._poor_line(_DUPLICATES, doubled, sent, self.facts.duplicates_ratio, now_ns)
         steady = last[0] and samples > 10 and ours > 0 and not restarts and not clock_faults
         if steady and not ours < _PACE * robots < _PACE**2 * ours:
             found = f"joints t_ns: went on by {robots} in {ours} ns of ours"
             self._misnumbered("clock", f"{found}; expected nanoseconds of the robot's clock", now_ns)
+
+    def _poor_line(self, key: Key, count: int, sent: int, ratio: float, now_ns: int) -> None:
+        """Raise or clear the alarm of samples that were lost or doubled within the last second."""
+        if count >= _FEWEST and count > ratio * sent:
+            text = f"{count} of {sent} samples within a second; expected at most {100.0 * ratio:g} %"
+            self._raise(key, Verdict("signal", key.detail), now_ns, text)
+        else:
+            self._clear(key, now_ns)
 
     def _misnumbered(self, detail: str, text: str, now_ns: int) -> None:
         key = Key("wire", detail)
@@ -195,6 +206,7 @@ class Pipeline:
     def _notices(self, notice: int, now_ns: int) -> None:
         s = self._state
         if notice & Notice.GAP:
+            self._gaps += 1
             self._raise(_GAP, Verdict("signal", "gap"), now_ns)
             self._last_bad[_GAP] = now_ns
         if notice & Notice.BAD_SAMPLE:
@@ -206,10 +218,10 @@ class Pipeline:
                         key = Key(kind, detail, joint)
                         self._raise(key, Verdict("actuator", detail, joint), now_ns)
                         self._flagged[key] = (field, i)
-        if notice & Notice.EVENT_OPENED:
-            self._event(raised=True, now_ns=now_ns)
-        if notice & Notice.EVENT_ENDED:
-            self._event(raised=False, now_ns=now_ns)
+        if notice & _EVENT_NOTICES:
+            for said in self._events.after_step(notice, self._condition.guided):
+                self._say(said, now_ns)
+            self._condition.loaded(self._events.since_start)
 
     def _bad_sample(self, now_ns: int) -> None:
         """A sample was not credible: an alarm per joint and reason, cleared by quiet."""
@@ -220,16 +232,19 @@ class Pipeline:
         self._raise(key, Verdict("signal", detail, joint), now_ns)
         self._last_bad[key] = now_ns
 
-    def _event(self, raised: bool, now_ns: int) -> None:
-        verdict = verdicts.of_event(self.facts, self._state)
-        if raised:
-            self._state["events"] += 1
-            transition = self._board.raised(_EVENT, verdict, int(self._state["events"]))
-        else:
-            transition = self._board.cleared(_EVENT, verdict)
-        if transition is not None:
-            self._send("verdict", self._statement(transition, now_ns, open_=raised))
-            self._announce(transition, now_ns)
+    def _say(self, said: Statement, now_ns: int) -> None:
+        """Send a statement on an event, and what it means for its alarm."""
+        body = self._times(now_ns) | {
+            "event": said.event,
+            "open": said.open,
+            "lasting": said.lasting,
+            "continues": said.continues,
+        }
+        body |= _fields(said.verdict)
+        body |= {"explanations": list(said.explanations), "contact": said.touch and said.touch._asdict()}
+        self._send("verdict", body)
+        if said.alarm is not None:
+            self._announce(said.alarm, now_ns)
 
     def _robot(self, payload: bytes, received_ns: int) -> None:
         condition = wire.decode_condition(payload, len(self.facts.joints))
@@ -280,6 +295,7 @@ class Pipeline:
         if self._board.stands(key):
             return
         self._state["events"] += 1
+        self._state["verdicts"][VERDICTS.index(verdict.verdict)] += 1
         transition = self._board.raised(key, verdict, int(self._state["events"]))
         if transition is not None:
             self._announce(transition, now_ns, text)
@@ -291,32 +307,14 @@ class Pipeline:
 
     def _announce(self, transition: Transition, now_ns: int, text: str = "") -> None:
         key, alarm = transition
-        body = self._statement(transition, now_ns)
-        kind = list(KINDS).index(key.kind)
-        self._state["alarms_raised"][kind] += self._board.stands(key)
-        self._state["alarms_standing"][kind] = sum(other.kind == key.kind for other in self._board.standing())
-        body["state"] = alarm.state
-        body["kind"], body["priority"] = key.kind, KINDS[key.kind]
+        kinds, standing = list(KINDS), [one.kind for one in self._board.standing()]
+        self._state["alarms_raised"][kinds.index(alarm.kind)] += self._board.stands(key)
+        self._state["alarms_standing"] = [standing.count(kind) for kind in kinds]
+        body = self._times(now_ns) | {"event": alarm.event} | _fields(alarm.verdict)
+        body |= {"state": alarm.state, "kind": alarm.kind, "priority": KINDS[alarm.kind]}
         if text:
             body["text"] = text
         self._send("alarm", body)
-
-    def _statement(self, transition: Transition, now_ns: int, open_: bool | None = None) -> dict[str, Any]:
-        """Return the fields that verdicts and alarms share, in their order."""
-        v = transition.alarm.verdict
-        body: dict[str, Any] = self._times(now_ns) | {"event": transition.alarm.event}
-        if open_ is not None:
-            body["open"] = open_
-        return body | {
-            "verdict": v.verdict,
-            "detail": v.detail,
-            "joint": v.joint,
-            "link": v.link,
-            "probability": v.probability,
-            "alternatives": list(v.alternatives),
-            "size": v.size and v.size._asdict(),
-            "onset_t": v.onset_t,
-        }
 
     def _times(self, now_ns: int) -> dict[str, Any]:
         """Return the time by the robot's clock [s], going on by ours while it is silent, and UTC."""
@@ -351,7 +349,9 @@ class Pipeline:
                 },
                 "band_ratio": dict(zip(self.facts.rows, map(float, s["ratio_peak"]), strict=True)),
                 "counts": {name: int(s[name]) for name in counts} | {"bad": int(s["bad"][1:].sum())},
-                "standing": [list(key) for key in self._board.standing()],
+                "standing": [
+                    [one.kind, one.verdict.detail, one.verdict.joint] for one in self._board.standing()
+                ],
                 "loop": self._host,
             },
         )
@@ -373,11 +373,13 @@ class Pipeline:
                 "align": self._aligner.snapshot(),
                 "condition": self._condition.snapshot(),
                 "alarms": self._board.snapshot(),
+                "events": self._events.snapshot(),
                 "sample_ns": self._sample_ns,
                 "silent": self._silent,
                 "first_tick_ns": self._first_tick_ns,
                 "refused_ns": self._refused_ns,
                 "second": list(self._second),
+                "gaps": self._gaps,
                 "health_ns": self._health_ns,
                 "last_bad": [[list(key), at] for key, at in self._last_bad.items()],
                 "flagged": [[list(key), *flag] for key, flag in self._flagged.items()],
@@ -408,9 +410,11 @@ class Pipeline:
         self._aligner.restore(saved["align"])
         self._condition.restore(saved["condition"])
         self._board.restore(saved["alarms"])
+        self._events.restore(saved["events"])
         self._sample_ns, self._silent = saved["sample_ns"], saved["silent"]
         self._first_tick_ns = saved["first_tick_ns"]
         self._refused_ns, self._second = saved["refused_ns"], tuple(saved["second"])
+        self._gaps = saved["gaps"]
         self._health_ns = saved["health_ns"]
         self._last_bad = {Key(*key): at for key, at in saved["last_bad"]}
         self._flagged = {Key(*key): (field, i) for key, field, i in saved["flagged"]}
@@ -420,3 +424,17 @@ class Pipeline:
 
 def _word(value: Coverage | Reason) -> str:
     return value.name.lower().replace("_", "-")
+
+
+def _fields(v: Verdict) -> dict[str, Any]:
+    """Return the fields that verdicts and alarms share, in their order."""
+    return {
+        "verdict": v.verdict,
+        "detail": v.detail,
+        "joint": v.joint,
+        "link": v.link,
+        "probability": v.probability,
+        "alternatives": list(v.alternatives),
+        "size": v.size and v.size._asdict(),
+        "onset_t": v.onset_t,
+    }

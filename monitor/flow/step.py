@@ -6,8 +6,10 @@ robot's own.
 
 from __future__ import annotations
 
+from monitor.flow import event, evidence
+from monitor.flow.credible import credible
 from monitor.flow.layout import Block, Form, Notice, Signal
-from monitor.kernels import band, ledger, signal
+from monitor.kernels import ledger
 from monitor.kernels.dynamics import dynamics, quaternion_matrix
 from monitor.kernels.filters import cholesky, cholesky_solve, multiply
 from monitor.kernels.jit import kernel
@@ -15,8 +17,7 @@ from monitor.kernels.jit import kernel
 _OK = int(Signal.OK)
 _CLOCK = int(Signal.CLOCK)
 _JOINT_SPACE, _FIRST_ORDER = int(Form.JOINT_SPACE), int(Form.FIRST_ORDER)
-_EVENT_OPENED, _EVENT_ENDED = int(Notice.EVENT_OPENED), int(Notice.EVENT_ENDED)
-_BAD_SAMPLE, _BRAKE_MOVED = int(Notice.BAD_SAMPLE), int(Notice.BRAKE_MOVED)
+_BRAKE_MOVED = int(Notice.BRAKE_MOVED)
 _TORQUE_AT_LIMIT, _DISOBEYED = int(Notice.TORQUE_AT_LIMIT), int(Notice.DISOBEYED)
 _GAP = int(Notice.GAP)
 # Reasons to re-base: after a gap or bad samples the residual is kept, after a start it begins at zero.
@@ -39,62 +40,17 @@ def step(params: Block, inputs: Block, state: Block, outputs: Block) -> None:
         rebase(params, inputs, state, outputs)
     else:
         advance(params, inputs, state)
-    residuals(params, state, outputs)
-    judge(params, inputs, state, outputs)
+    residuals(state, outputs)
+    event.into_band(params, inputs, state, outputs)
+    event.judge(params, inputs, state, outputs)
+    if state[0]["weigh_afresh"] != 0:
+        evidence.begin(params, inputs, state)
+    if state[0]["event_open"] != 0:
+        evidence.weigh(params, inputs, state, outputs)
+    if state[0]["step_due"] != 0:
+        evidence.follow(params, inputs, state, outputs)
     state[0]["t_ns"] = state[0]["at_ns"]
     state[0]["stepped"] += 1
-
-
-@kernel
-def credible(params: Block, inputs: Block, state: Block, outputs: Block) -> bool:
-    """Check the raw numbers; a sample that fails is counted and makes the next good one a re-base."""
-    c, x, s, out = params[0], inputs[0], state[0], outputs[0]
-    fault, joint = signal.range_fault(
-        x["q"], x["qd"], x["tau"], x["tau_cmd"], c["q_min"], c["q_max"], c["qd_max"], c["tau_max"]
-    )
-    floating = c["gravity_part"].shape[0] > x["q"].shape[0]
-    if fault == _OK and floating:
-        fault = signal.base_fault(
-            x["base_p"], x["base_quat"], x["base_v"], x["base_w"],
-            c["base_position_max"], c["base_speed_max"],
-        )  # fmt: skip
-    if x["rebase"] == _START:
-        s["raw_held"] = 0  # nothing to compare with, also where this very sample turns out bad
-    if fault == _OK:
-        dt_ns = x["t_ns"] - s["raw_t_ns"]
-        if s["raw_held"] == 0:
-            s["still_ns"][:] = 0
-            s["drift"][:] = 0.0
-            s["base_still_ns"] = 0
-        elif dt_ns <= 0 or abs(dt_ns - (x["seq"] - s["raw_seq"]) * c["period_ns"]) > c["clock_jump_ns"]:
-            fault = _CLOCK
-        elif dt_ns <= c["gap_ns"]:
-            fault, joint = signal.motion_fault(
-                x["q"], x["qd"], dt_ns, s["raw_q"], s["raw_qd"], c["jump"], c["drift"], c["drift_s"],
-                c["frozen_velocity"], c["frozen_ns"], s["still_ns"], s["drift"],
-            )  # fmt: skip
-            if floating and fault == _OK:
-                fault, s["base_still_ns"] = signal.base_motion_fault(
-                    x["base_p"], x["base_quat"], x["base_v"], x["base_w"], dt_ns,
-                    s["raw_base_p"], s["raw_base_quat"], s["raw_base_v"], s["raw_base_w"],
-                    c["base_jump"], c["frozen_velocity"][0], c["frozen_ns"], s["base_still_ns"],
-                )  # fmt: skip
-        # The next sample is compared with this one even when it is refused: a jump is reported once.
-        s["raw_q"][:] = x["q"]
-        s["raw_qd"][:] = x["qd"]
-        s["raw_base_p"][:] = x["base_p"]
-        s["raw_base_quat"][:] = x["base_quat"]
-        s["raw_base_v"][:] = x["base_v"]
-        s["raw_base_w"][:] = x["base_w"]
-        s["raw_t_ns"] = x["t_ns"]
-        s["raw_seq"] = x["seq"]
-        s["raw_held"] = 1
-    out["signal"] = fault
-    out["signal_joint"] = joint
-    s["bad"][fault] += 1
-    if fault != _OK:
-        out["notice"] |= _BAD_SAMPLE
-    return bool(fault == _OK)
 
 
 @kernel
@@ -227,7 +183,13 @@ def known_torque(params: Block, state: Block) -> None:
     for i in range(s["known"].shape[0]):
         s["known"][i] = s["tau"][i] - c["gravity_part"][i] * s["g"][i]
     ledger.friction(
-        s["v_at"], c["viscous"], c["coulomb"], c["friction_offset"], c["friction_velocity"], s["known"]
+        s["v_at"],
+        c["viscous"],
+        c["coulomb"],
+        c["bend"],
+        c["friction_offset"],
+        c["friction_velocity"],
+        s["known"],
     )
 
 
@@ -252,15 +214,17 @@ def mean_acceleration(params: Block, state: Block) -> None:
     """
     c, s = params[0], state[0]
     dt = s["dt_s"]
-    ledger.friction_slope(s["v_at"], c["viscous"], c["coulomb"], c["friction_velocity"], s["slope"])
+    ledger.friction_slope(
+        s["v_at"], c["viscous"], c["coulomb"], c["bend"], c["friction_velocity"], s["friction_slope"]
+    )
     for i in range(s["a"].shape[0]):
         free = s["v_fast"][i] + dt * s["e_fast"][i]
-        s["known"][i] = 0.5 * (s["u"][i] + s["u_last"][i]) - s["slope"][i] * free
+        s["known"][i] = 0.5 * (s["u"][i] + s["u_last"][i]) - s["friction_slope"][i] * free
         for j in range(s["a"].shape[0]):
             # The last torque met the last mass matrix.
             s["known"][i] += 0.5 * (s["M"][i, j] - s["M_last"][i, j]) * s["a"][j]
             s["L"][i, j] = s["M"][i, j]
-        s["L"][i, i] += dt * s["slope"][i]
+        s["L"][i, i] += dt * s["friction_slope"][i]
     cholesky(s["L"], s["L"])
     cholesky_solve(s["L"], s["known"], s["a"])
 
@@ -288,9 +252,9 @@ def rebase(params: Block, inputs: Block, state: Block, outputs: Block) -> None:
         s["r_fast"][:] = 0.0
         s["r_slow"][:] = 0.0
         s["settled_ns"] = t_ns + c["start_settle_ns"]
+        s["start_settled_ns"] = s["settled_ns"]
         if s["event_open"] != 0:
-            s["event_open"] = 0
-            outputs[0]["notice"] |= _EVENT_ENDED
+            event.end(state, outputs)
     else:
         s["settled_ns"] = max(s["settled_ns"], t_ns + c["settle_ns"])
     s["dt_s"] = 0.0
@@ -334,7 +298,7 @@ def advance_joint_space(params: Block, inputs: Block, state: Block) -> None:
     s["u_last"][:], s["M_last"][:] = s["u"], s["M"]
     smooth_torque(params, inputs, state)
     mean_acceleration(params, state)
-    k = min(max(round(dt * 1e9 / c["period_ns"]), 1), c["gain_fast"].shape[0]) - 1
+    k = ledger.gain_step(dt, c["period_ns"], c["gain_fast"].shape[0])
     ledger.joint_space(
         base, s["q"], s["v"], s["a"], dt, c["gain_fast"][k], s["q_fast"], s["v_fast"], s["e_fast"]
     )
@@ -361,37 +325,10 @@ def advance_momentum(params: Block, inputs: Block, state: Block) -> None:
 
 
 @kernel
-def residuals(params: Block, state: Block, outputs: Block) -> None:
-    """Show the residuals, how far they fill their bands, and the torque the model expects."""
-    c, s, out = params[0], state[0], outputs[0]
+def residuals(state: Block, outputs: Block) -> None:
+    """Show the residuals and the torque the model expects."""
+    s, out = state[0], outputs[0]
     out["r_fast"][:] = s["r_fast"]
     out["r_slow"][:] = s["r_slow"]
     for i in range(s["tau"].shape[0]):
         out["tau_model"][i] = s["tau"][i] + s["r_fast"][i]
-    band.band_ratio(s["r_fast"], s["r_slow"], c["band_fast"], c["band_slow"], out["ratio"])
-    for i in range(out["ratio"].shape[0]):
-        s["ratio_peak"][i] = max(s["ratio_peak"][i], out["ratio"][i])
-
-
-@kernel
-def judge(params: Block, inputs: Block, state: Block, outputs: Block) -> None:
-    """Open an event when a judged residual leaves its band; end it after a time of quiet."""
-    c, x, s, out = params[0], inputs[0], state[0], outputs[0]
-    t_ns = s["at_ns"]
-    out["settling"] = 1 if t_ns < s["settled_ns"] else 0
-    row = band.largest(out["ratio"], x["judged"])
-    if row >= 0 and out["settling"] == 0 and out["ratio"][row] > 1.0:
-        s["event_over_ns"] = t_ns
-        if s["event_open"] == 0:
-            s["event_open"] = 1
-            s["event_onset_ns"] = t_ns
-            s["event_ratio"] = 0.0
-            out["notice"] |= _EVENT_OPENED
-        if out["ratio"][row] > s["event_ratio"]:
-            s["event_ratio"] = out["ratio"][row]
-            s["event_row"] = row
-            fast = abs(s["r_fast"][row]) / c["band_fast"][row] >= abs(s["r_slow"][row]) / c["band_slow"][row]
-            s["event_size"] = s["r_fast"][row] if fast else s["r_slow"][row]
-    elif s["event_open"] != 0 and t_ns - s["event_over_ns"] > c["quiet_ns"]:
-        s["event_open"] = 0
-        out["notice"] |= _EVENT_ENDED

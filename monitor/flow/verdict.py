@@ -1,14 +1,28 @@
-"""What an event is held to be: today the honest minimum, *undecided*.
+"""What an event is held to be: the posterior of all explanations, put into one statement.
 
-A residual outside a constant band says that something is unexplained, not what. No probability is stated,
-because no explanations were weighed.
+Explanations are first added up by what they mean (a contact with any link, a fault of any actuator, ...).
+Where one meaning is certain enough it is the verdict, told by the likeliest of its explanations; else the
+verdict is *undecided* and names what competes.
 """
 
 from __future__ import annotations
 
 from typing import NamedTuple
 
-from monitor.flow.layout import Block, Facts
+import numpy as np
+
+from monitor.explain import actuator
+from monitor.explain.outline import Candidate, Explanation
+from monitor.flow.layout import Blocks, Facts
+from monitor.robot.shape import contact_point
+
+NOTHING, OTHER = 0, 1  # places in `outputs.probability` before the explanations
+# Evidence steps before more is said than "undecided"; what is less likely is left out of the alternatives,
+# and of the full table.
+LEAST_STEPS, _LEAST_PROBABILITY, _LEAST_SHOWN = 3, 0.01, 0.001
+TOLD_BY = 2.0  # how many times better the data must fit than under the next meaning
+_SUSPECTED = 5  # share of the time after which a position that stands is frozen
+_OPEN_CIRCUIT = 0.9  # lost share of torque from which on nothing is left
 
 
 class Size(NamedTuple):
@@ -17,6 +31,16 @@ class Size(NamedTuple):
     value: float
     unit: str
     sd: float | None
+
+
+class Touch(NamedTuple):
+    """Line of action of a contact when its force was largest, in axes and about the origin of the link."""
+
+    force: list[float]  # N, on the link
+    moment: list[float]  # N m
+    point: (
+        list[float] | None
+    )  # m: of the link's surface; None where its shape is not known or the line misses
 
 
 class Verdict(NamedTuple):
@@ -32,13 +56,168 @@ class Verdict(NamedTuple):
     onset_t: float | None = None  # s, robot clock
 
 
-def of_event(facts: Facts, state: Block) -> Verdict:
-    """Return the verdict on the event in `state`: the row that left its band furthest, and by what torque."""
-    row = int(state["event_row"])
+class Leading(NamedTuple):
+    """The verdict in short."""
+
+    verdict: str  # `undecided` where none is certain enough
+    joint: str | None
+    link: str | None
+    probability: float  # of the likeliest meaning
+    meaning: str  # a verdict, `nothing` or `something-else`
+    explanation: int  # number of the likeliest explanation of that meaning, -1 if it has none
+
+
+def leading(facts: Facts, blocks: Blocks) -> Leading:
+    """Return the likeliest meaning: explanations of one meaning are added up, the likeliest speaks for it."""
+    p = blocks.outputs[0]["probability"].tolist()
+    total = {"nothing": p[NOTHING], "something-else": p[OTHER]}
+    best = {"nothing": -1, "something-else": -1}
+    for i, explanation in enumerate(facts.explanations):
+        meaning = explanation.verdict
+        total[meaning] = total.get(meaning, 0.0) + p[2 + i]
+        if meaning not in best or p[2 + i] > p[2 + best[meaning]]:
+            best[meaning] = i
+    meaning = max(total, key=total.__getitem__)
+    k = best[meaning]
+    if k < 0 or total[meaning] < facts.certainty or _suspected(blocks) or not _told(facts, blocks, total):
+        return Leading("undecided", None, None, total[meaning], meaning, k)
+    one = facts.explanations[k]
+    return Leading(one.verdict, one.joint, one.link, total[meaning], meaning, k)
+
+
+def _suspected(blocks: Blocks) -> bool:
+    """Whether a position has stood for a while that its velocity says moves: soon it may be called frozen."""
+    return bool(blocks.state[0]["still_ns"].max() > blocks.params[0]["frozen_ns"] // _SUSPECTED)
+
+
+def _told(facts: Facts, blocks: Blocks, total: dict[str, float]) -> bool:
+    """Whether it is the data that tell the likeliest meaning from the next, not the rates alone.
+
+    Evidence for a meaning is its probability over its rate. A force on the first link and a fault of its
+    drive can be the very same data; that contacts are the commoner does not decide it.
+    """
+    rate = np.exp(blocks.params[0]["log_rate"])
+    rates = {"nothing": rate[NOTHING], "something-else": rate[OTHER]}
+    for i, explanation in enumerate(facts.explanations):
+        rates[explanation.verdict] = rates.get(explanation.verdict, 0.0) + rate[2 + i]
+    evidence = {meaning: probability / rates[meaning] for meaning, probability in total.items()}
+    meaning = max(total, key=total.__getitem__)
+    others = max(value for name, value in evidence.items() if name != meaning)
+    return bool(evidence[meaning] > TOLD_BY * others)
+
+
+def of_event(facts: Facts, blocks: Blocks) -> Verdict:
+    """Return the verdict on an event that was weighed, from the posterior as it stands."""
+    now = leading(facts, blocks)
+    if now.verdict == "undecided":
+        detail = {"nothing": "outside-band", "something-else": "none-fits"}.get(now.meaning, "several-fit")
+        others = alternatives(facts, blocks, None)
+        return undecided(facts, blocks, detail)._replace(probability=now.probability, alternatives=others)
+    number, one, smooth = best_candidate(blocks, facts, now.explanation)
+    size = size_of(blocks, number, one, smooth)
     return Verdict(
-        verdict="undecided",
-        detail="outside-band",
-        joint=facts.rows[row],
-        size=Size(float(state["event_size"]), facts.units[row], None),
-        onset_t=int(state["event_onset_ns"]) / 1e9,
+        now.verdict,
+        _detail(one, size),
+        now.joint,
+        now.link,
+        now.probability,
+        alternatives(facts, blocks, now.explanation),
+        size,
+        int(blocks.state[0]["event_onset_ns"]) / 1e9,
     )
+
+
+def undecided(facts: Facts, blocks: Blocks, detail: str) -> Verdict:
+    """Return the verdict on an event of which only the largest residual is known."""
+    s = blocks.state[0]
+    row = int(s["event_row"])
+    size = Size(float(s["event_size"]), facts.units[row], None)
+    return Verdict("undecided", detail, facts.rows[row], size=size, onset_t=int(s["event_onset_ns"]) / 1e9)
+
+
+def touch(facts: Facts, blocks: Blocks) -> Touch:
+    """Return where and how the contact acts that is held to be the cause.
+
+    The line may pass beside the shape by its own uncertainty: that of the force, relative, times the lever
+    arm its prior allows.
+    """
+    c, s = blocks.params[0], blocks.state[0]
+    k, one, _ = best_candidate(blocks, facts, leading(facts, blocks).explanation)
+    axis, centre = int(c["body_axis"][one.number]), c["body_centre"][one.number]
+    force, about_centre = s["smooth_peak"][k, :3], s["smooth_peak"][k, 3:]
+    moment = about_centre + np.cross(centre, force)
+    unsure = float(s["smooth_peak_sd"][k] / s["smooth_peak_size"][k])
+    radius = one.sd[3] / one.sd[0]
+    met = contact_point(facts.tree, axis, force, moment, radius * min(unsure, 1.0))
+    point = None if met is None or met.point is None else met.point.tolist()
+    return Touch(force.tolist(), moment.tolist(), point)
+
+
+def likeliest(blocks: Blocks) -> int:
+    """Return the number of the likeliest explanation."""
+    return int(np.argmax(blocks.outputs[0]["probability"][2:]))
+
+
+def alternatives(facts: Facts, blocks: Blocks, chosen: int | None) -> tuple[dict[str, object], ...]:
+    """Return the other explanations by falling probability, as they stand in alarms."""
+    p = blocks.outputs[0]["probability"]
+    return tuple(
+        _named(facts, int(place)) | {"probability": float(p[place])}
+        for place in np.argsort(-p, kind="stable")[:6]
+        if p[place] >= _LEAST_PROBABILITY and place - 2 != chosen
+    )
+
+
+def table(facts: Facts, blocks: Blocks) -> tuple[dict[str, object], ...]:
+    """Return every explanation that is worth a word, by falling probability, with its likeliest detail."""
+    p = blocks.outputs[0]["probability"]
+    rows: list[dict[str, object]] = []
+    for place in np.argsort(-p, kind="stable").tolist():
+        if p[place] < _LEAST_SHOWN:
+            break
+        detail = best_candidate(blocks, facts, place - 2)[1].detail if place >= 2 else None
+        rows.append(_named(facts, place) | {"detail": detail, "probability": float(p[place])})
+    return tuple(rows)
+
+
+def _named(facts: Facts, place: int) -> dict[str, object]:
+    """Return verdict, joint and link of a place in `outputs.probability`."""
+    if place < 2:
+        return {"verdict": ("nothing", "something-else")[place], "joint": None, "link": None}
+    one = facts.explanations[place - 2]
+    return {"verdict": one.verdict, "joint": one.joint, "link": one.link}
+
+
+def best_candidate(blocks: Blocks, facts: Facts, explanation: int) -> tuple[int, Candidate, bool]:
+    """Return number, declaration and kind (smooth or constant) of the likeliest way an explanation looks."""
+    c, s = blocks.params[0], blocks.state[0]
+    ways: list[tuple[float, int, bool]] = []
+    for smooth, name in ((False, "constant"), (True, "smooth")):
+        for k in np.flatnonzero(c[f"{name}_of"] == explanation).tolist():
+            ways.append((float(s[f"{name}_log"][k] + c[f"{name}_share"][k]), k, smooth))
+    _, best, smooth = max(ways)
+    return best, _declared(blocks, facts.explanations[explanation], best, smooth), smooth
+
+
+def _declared(blocks: Blocks, explanation: Explanation, k: int, smooth: bool) -> Candidate:
+    """Return what the explanation declared of candidate k: they stand in the blocks in its order."""
+    name = "smooth" if smooth else "constant"
+    of = blocks.params[0][f"{name}_of"]
+    place = int(np.count_nonzero(of[:k] == of[k]))
+    same = [one for one in explanation.candidates if (one.time_s is not None) == smooth]
+    return same[place]
+
+
+def size_of(blocks: Blocks, k: int, one: Candidate, smooth: bool) -> Size:
+    """Return the size of a candidate: what was largest of a smooth one, the mean of a constant."""
+    s = blocks.state[0]
+    if smooth:
+        return Size(float(s["smooth_peak_size"][k]), one.unit, float(s["smooth_peak_sd"][k]))
+    return Size(float(s["constant_size"][k]), one.unit, float(s["constant_size_sd"][k]))
+
+
+def _detail(one: Candidate, size: Size) -> str:
+    """Return the detail of a candidate; a drive that lost all its torque is an open circuit."""
+    if one.detail == actuator.DETAILS[actuator.TORQUE] and size.value > _OPEN_CIRCUIT:
+        return "open-circuit"
+    return one.detail

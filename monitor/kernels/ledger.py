@@ -23,23 +23,43 @@ from monitor.kernels.jit import inlined
 Floats = NDArray[np.float64]
 
 
+# Friction may bend: to Coulomb's tanh(v/v0) come terms that saturate at 10 and 50 times v0. A dip at low
+# speed (Stribeck) is a rise of the first with a fall of the others.
+BENDS = 2
+WIDTHS = (10.0, 50.0)
+
+
 @inlined
-def friction(v: Floats, viscous: Floats, coulomb: Floats, offset: Floats, v0: Floats, out: Floats) -> None:
-    """Subtract joint friction `viscous v + coulomb tanh(v/v0) + offset` from out (n)."""
+def friction(
+    v: Floats, viscous: Floats, coulomb: Floats, bend: Floats, offset: Floats, v0: Floats, out: Floats
+) -> None:
+    """Subtract joint friction from out (n): `viscous v + coulomb tanh(v/v0) + offset`, and what bends it.
+
+    bend (n,BENDS): N m of `tanh(v / (WIDTHS v0))`.
+    """
     for i in range(v.shape[0]):
         out[i] -= viscous[i] * v[i] + offset[i]
         if coulomb[i] != 0.0:
             out[i] -= coulomb[i] * math.tanh(v[i] / v0[i])
+        for k in range(BENDS):
+            if bend[i, k] != 0.0:
+                out[i] -= bend[i, k] * math.tanh(v[i] / (WIDTHS[k] * v0[i]))
 
 
 @inlined
-def friction_slope(v: Floats, viscous: Floats, coulomb: Floats, v0: Floats, slope: Floats) -> None:
+def friction_slope(
+    v: Floats, viscous: Floats, coulomb: Floats, bend: Floats, v0: Floats, slope: Floats
+) -> None:
     """Fill slope (n), N m s/rad, with `friction(v) / v`, the offset left out."""
     for i in range(v.shape[0]):
         slope[i] = viscous[i]
         if coulomb[i] != 0.0:
             x = v[i] / v0[i]
             slope[i] += coulomb[i] / v0[i] * (math.tanh(x) / x if abs(x) > 1e-6 else 1.0)
+        for k in range(BENDS):
+            if bend[i, k] != 0.0:
+                x = v[i] / (WIDTHS[k] * v0[i])
+                slope[i] += bend[i, k] / (WIDTHS[k] * v0[i]) * (math.tanh(x) / x if abs(x) > 1e-6 else 1.0)
 
 
 @inlined
@@ -189,3 +209,38 @@ def _correct_base(q: Floats, v: Floats, gain: Floats, q_hat: Floats, v_hat: Floa
     q_hat[1] += b1 + 2.0 * (w * c1 + z * c0 - x * c2)
     q_hat[2] += b2 + 2.0 * (w * c2 + x * c1 - y * c0)
     turn_quaternion(r0, r1, r2, q_hat)
+
+
+@inlined
+def gain_step(dt: float, period_ns: int, steps: int) -> int:
+    """Return which of `steps` gains belongs to dt [s]: gain k is that of k + 1 periods."""
+    return int(min(max(round(dt * 1e9 / period_ns), 1), steps) - 1)
+
+
+@inlined
+def respond_joint_space(w: float, dt: float, gain: Floats, x: Floats) -> None:
+    """Advance x (3): errors of position and velocity, and e, of `joint_space` under an acceleration w."""
+    free = w - x[2]
+    dq = x[0] + dt * (x[1] + 0.5 * dt * free)
+    dv = x[1] + dt * free
+    x[0] = dq - gain[0, 0] * dq - gain[0, 1] * dv
+    x[1] = dv - gain[1, 0] * dq - gain[1, 1] * dv
+    x[2] += gain[2, 0] * dq + gain[2, 1] * dv
+
+
+@inlined
+def respond_first_order(w: float, dt: float, pole: float, x: Floats) -> None:
+    """Advance x[2], the residual of `first_order` under a torque w."""
+    keep = math.exp(-pole * dt)
+    x[2] = keep * x[2] + (1.0 - keep) * w
+
+
+@inlined
+def respond_second_order(w: float, dt: float, pole: float, x: Floats) -> None:
+    """Advance x (momentum error, -, residual) of `second_order` under a torque w."""
+    y = pole * dt * math.sqrt(0.5)
+    gain_p = 1.0 - math.exp(-2.0 * y)
+    gain_r = (2.0 - gain_p - 2.0 * math.exp(-y) * math.cos(y)) / dt
+    innovation = x[0] + dt * (w - x[2])
+    x[0] = innovation * (1.0 - gain_p)
+    x[2] += gain_r * innovation

@@ -1,7 +1,7 @@
 """Is a sample credible? Checks on the numbers of one message before any physics.
 
-A bad sample never enters the ledger. None of the checks fires on a robot that merely stands still: a frozen
-position counts only while the joint's own velocity says it moves.
+A bad sample never enters the ledger. None of the checks fires on a robot that merely stands still; which of
+them are asked when is in flow/credible.py.
 """
 
 from __future__ import annotations
@@ -14,9 +14,13 @@ from numpy.typing import NDArray
 from monitor.kernels.jit import inlined
 
 Floats = NDArray[np.float64]
-Ints = NDArray[np.int64]
 
-OK, NON_FINITE, OUT_OF_RANGE, CLOCK, JUMP, FROZEN, CONTRADICTION, BASE_POSE = 0, 1, 2, 3, 4, 5, 6, 7
+OK, NON_FINITE, OUT_OF_RANGE, BASE_POSE = 0, 1, 2, 7
+
+NOISY = 6.0  # score from which on a reading is too noisy
+LIVELY = 1000  # noisy samples after which an exact repetition means something
+_RELIEF = 0.2
+_REPETITION = 10
 
 
 @inlined
@@ -80,29 +84,66 @@ def base_motion_fault(
 
 
 @inlined
-def motion_fault(
-    q: Floats, qd: Floats, dt_ns: int, q_last: Floats, qd_last: Floats,
-    jump: Floats, drift_max: Floats, drift_s: float, frozen_velocity: Floats, frozen_ns: int,
-    still_ns: Ints, drift: Floats,
-) -> tuple[int, int]:  # fmt: skip
-    """Return (fault, joint) of a position that jumps, freezes or contradicts its velocity, else (OK, -1).
+def bend(step: float, step_last: float, dt_ns: int, dt_last_ns: int) -> float:
+    """Return by how much a step Δq leaves the last one going on: acceleration times Δt², or a jump, or noise.
 
-    still_ns (m) and drift (m) are carried from sample to sample: the time a position has stood while its
-    velocity says it moves, and the leaky integral of the difference between Δq and velocity times Δt.
+    A robot's clock may truly be uneven, or only its stamps: of both readings the smaller one counts.
     """
-    dt = dt_ns * 1e-9
-    keep = math.exp(-dt / drift_s)
-    fault, joint = OK, -1
-    for i in range(q.shape[0]):
-        step = q[i] - q_last[i]
-        miss = step - 0.5 * dt * (qd[i] + qd_last[i])
-        drift[i] = keep * drift[i] + miss
-        still_ns[i] = still_ns[i] + dt_ns if step == 0.0 and abs(qd[i]) > frozen_velocity[i] else 0
-        if fault == OK:
-            if abs(miss) > jump[i]:
-                fault, joint = JUMP, i
-            elif still_ns[i] > frozen_ns:
-                fault, joint = FROZEN, i
-            elif abs(drift[i]) > drift_max[i]:
-                fault, joint = CONTRADICTION, i
-    return fault, joint
+    even, stamped = step - step_last, step - step_last * dt_ns / dt_last_ns
+    if even * stamped <= 0.0:
+        return 0.0
+    return even if abs(even) < abs(stamped) else stamped
+
+
+@inlined
+def differenced(
+    qd: float, step: float, step_last: float, dt_ns: int, period_ns: int, tolerance: float
+) -> bool:
+    """Whether a velocity is merely this or the last Δq over Δt, or over the nominal period."""
+    near = min(abs(1e-9 * qd * dt_ns - step), abs(1e-9 * qd * period_ns - step))
+    return min(near, abs(1e-9 * qd * period_ns - step_last)) < tolerance
+
+
+@inlined
+def noise_score(bend: float, bend_last: float, limit: float, score: float) -> float:
+    """Carry the score of a reading that is too noisy from `NOISY` on.
+
+    A hit is a pair of second differences beyond `limit` in opposite directions; it adds one, every other
+    sample takes `_RELIEF` off. Motion bends one way for many samples, a blow leaves one or two pairs, and the
+    ringing of a structure one per half period, which `_RELIEF` outweighs up to a twelfth of the sample rate;
+    white noise turns at almost every sample.
+
+    Cost, for `limit` at 3.5 standard deviations of the second difference (3.5 √6 of the reading's): on white
+    Gaussian noise as configured the score is at `NOISY` in about 2e-12 of all samples, once in 14 years at
+    1 kHz (5e8 simulated samples up to a score of 3; from there by the tail, 25 times rarer per unit); on 1.25
+    times that noise in about 2e-9. Delay for 8, 10 and 15 times the noise: median 20, 17, 13 samples, in nine
+    of ten cases at most 36, 29, 22.
+    """
+    if bend * bend_last < 0.0 and min(abs(bend), abs(bend_last)) > limit:
+        return min(score + 1.0, NOISY + 2.0)  # no more, to end soon after the noise
+    return max(score - _RELIEF, 0.0)
+
+
+@inlined
+def beyond_lag(drift: float, swing: float, lag: float) -> float:
+    """Return what of the drift Δq − ∫v dt a velocity that lags behind by 0 to `lag` [s] does not explain.
+
+    A first-order lag of L leaves a drift of exactly L times the change of the velocity reading (swing).
+    """
+    lagged = lag * swing
+    return abs(drift - min(max(drift, min(lagged, 0.0)), max(lagged, 0.0)))
+
+
+@inlined
+def liveliness(change: float, change_last: float, sd: float, run: int, lively: int) -> tuple[int, int]:
+    """Carry how many samples the reading has repeated itself exactly, and how often it has shown noise.
+
+    Noise is a second difference of at least the configured `sd`; a smooth signal without noise shows none. A
+    repetition outweighs `_REPETITION` noisy samples, so that a coarse reading never counts as lively.
+    """
+    if change == 0.0:
+        return run + 1, lively
+    lively = max(lively - _REPETITION * run, 0)
+    if abs(change - change_last) >= sd:
+        lively = min(lively + 1, 2 * LIVELY)
+    return 0, lively

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from functools import cache
 from typing import Any
 
@@ -12,8 +12,10 @@ from numpy.typing import NDArray
 from scipy.linalg import solve_discrete_are
 
 from monitor.errors import ConfigError
+from monitor.explain.outline import Explanation
 from monitor.flow.layout import (
     GAIN_STEPS,
+    Blocks,
     Facts,
     Form,
     Sizes,
@@ -24,11 +26,14 @@ from monitor.flow.layout import (
     state_fields,
     zeros,
 )
-from monitor.flow.pipeline import Blocks, Pipeline
+from monitor.flow.pipeline import Pipeline
 from monitor.flow.step import step
+from monitor.kernels.ledger import BENDS
 from monitor.robot.pseudo_inertia import transform
 from monitor.robot.tree import WORLD, Tree, build_tree
 from monitor.robot.urdf import parse_urdf
+from monitor.setup import weighing
+from monitor.setup.calibration import Band, Calibration, Model, default_band, read_calibration
 from monitor.setup.config import Config, JointConfig
 
 Floats = NDArray[np.float64]
@@ -48,13 +53,22 @@ class Setup:
     sizes: Sizes
     facts: Facts
     params: Any  # Block
-    bodies: Floats  # (N,4,4) pseudo-inertias without payload
+    model: Model
+    band: Band
+    notes: tuple[str, ...]  # what the sensors cannot tell
+
+    def with_band(self, band: Band) -> Setup:
+        """Return the same robot with another band."""
+        params = self.params.copy()
+        weighing.fill_band(params, band)
+        params.flags.writeable = False
+        return replace(self, params=params, band=band)
 
     def blocks(self) -> Blocks:
         """Return fresh blocks for a run."""
         s = self.sizes
         inputs = zeros(inputs_fields(s))
-        inputs["E"] = self.bodies
+        inputs["E"] = self.model.E
         inputs["tau_cmd"] = math.nan
         return Blocks(self.params, inputs, zeros(state_fields(s)), zeros(outputs_fields(s)))
 
@@ -70,13 +84,17 @@ class Setup:
         return Pipeline(self.facts, blocks or self.blocks(), run)
 
 
-def build(config: Config) -> Setup:
+def build(config: Config, calibration: Calibration | None = None) -> Setup:
     """Return the robot of a configuration, checked against its description.
+
+    The calibration is that of the configuration where none is given. Without one the model is that of the
+    description, and the band a wide default.
 
     Raises
     ------
     ConfigError
-        A joint, foot or tool link is not in the robot description, or the units cannot be told.
+        A joint, foot or tool link is not in the robot description, the units cannot be told, or the
+        calibration is not this robot's.
     ModelError
         The description itself is refused.
     """
@@ -87,15 +105,51 @@ def build(config: Config) -> Setup:
     armature = {joint.name: _rotor_inertia(joint) for joint in joints}
     tree = build_tree(description, config.robot.base, armature)
     lags, D = _lags(config)
-    sizes = Sizes(tree.n, tree.nq, len(joints), len(tree.arrays.parent), D)
+    rated = _rated(tree, config)
+    if calibration is None and config.calibration_text:
+        place = str(config.path.parent / config.robot.calibration)
+        calibration = read_calibration(config.calibration_text, place, tree, config)
+    model = calibration.model if calibration else configured_model(tree, config)
+    band = calibration.band if calibration else default_band(rated, model.coulomb, model.viscous)
+    outline = weighing.outline(tree, config, rated, model)
+    found = weighing.candidates(outline)
+    facts = _facts(where, tree, config, found.explanations)
+    sizes = weighing.sizes_of(found, tree, config, D)
     params = zeros(params_fields(sizes))
-    _fill_tree(params, tree, config)
+    params["rated"] = rated
+    _fill_tree(params, tree, config, model)
     _fill_wire(params, tree, config, lags)
-    _fill_friction(params, tree, config)
+    _fill_friction(params, tree, config, model)
     _fill_ledger(params, tree, config)
     _fill_limits(params, tree, config)
+    weighing.fill_band(params, band)
+    weighing.fill_evidence(params, tree, config, found)
     params.flags.writeable = False
-    return Setup(config, tree, sizes, _facts(where, tree, config), params, tree.arrays.E.copy())
+    notes = tuple(weighing.cannot_tell(tree, config))
+    return Setup(config, tree, sizes, facts, params, model, band, notes)
+
+
+def configured_model(tree: Tree, config: Config) -> Model:
+    """Return the model of the description and of the configuration's friction."""
+    base = tree.n - len(tree.joints)
+    viscous, coulomb, offset = friction = np.zeros((3, tree.n))
+    for row, i in enumerate(_order(tree, config), start=base):
+        joint = config.robot.joint[i]
+        if joint.torque_meaning != "link":
+            friction[:, row] = joint.viscous_friction, joint.coulomb_friction, joint.friction_offset
+    bend = np.zeros((tree.n, BENDS))
+    return Model(tree.arrays.E.copy(), tree.armature.copy(), viscous, coulomb, offset, bend)
+
+
+def _rated(tree: Tree, config: Config) -> Floats:
+    """Return what shares of torque refer to, by row: rated torque; for a base a third of the weight."""
+    base = tree.n - len(tree.joints)
+    weight = float(tree.arrays.E[:, 3, 3].sum() * np.linalg.norm(config.robot.gravity_vector))
+    rated = np.full(tree.n, 0.3 * max(weight, 1.0))
+    rated[: min(base, 3)] *= 0.3  # m: an arm typical for moments on a body
+    for row, i in enumerate(_order(tree, config), start=base):
+        rated[row] = config.robot.joint[i].rated_torque
+    return rated
 
 
 def _check_joints(where: str, joints: tuple[JointConfig, ...], moving: tuple[str, ...]) -> None:
@@ -129,12 +183,12 @@ def _lags(config: Config) -> tuple[list[int], int]:
     return [longest, *(longest - s for s in samples)], 1 + longest - min(0, *samples)
 
 
-def _fill_tree(params: Any, tree: Tree, config: Config) -> None:
+def _fill_tree(params: Any, tree: Tree, config: Config, model: Model) -> None:
     for name, value in tree.arrays._asdict().items():
         if name != "E":
             params[name] = value
     params["gravity"] = config.robot.gravity_vector
-    params["armature"] = tree.armature
+    params["armature"] = model.armature
     if config.robot.coupling:
         # Rotors turn with the motors: their kinetic energy is a full matrix in the joints' coordinates.
         to_motors = np.linalg.inv(_coupling(config))
@@ -180,16 +234,13 @@ def _fill_wire(params: Any, tree: Tree, config: Config, lags: list[int]) -> None
         )
 
 
-def _fill_friction(params: Any, tree: Tree, config: Config) -> None:
+def _fill_friction(params: Any, tree: Tree, config: Config, model: Model) -> None:
     base = tree.n - len(tree.joints)
     params["friction_velocity"] = 1.0
     for row, i in enumerate(_order(tree, config), start=base):
-        joint = config.robot.joint[i]
-        params["friction_velocity"][0, row] = joint.friction_velocity
-        if joint.torque_meaning != "link":
-            params["viscous"][0, row] = joint.viscous_friction
-            params["coulomb"][0, row] = joint.coulomb_friction
-            params["friction_offset"][0, row] = joint.friction_offset
+        params["friction_velocity"][0, row] = config.robot.joint[i].friction_velocity
+    params["viscous"], params["coulomb"], params["bend"] = model.viscous, model.coulomb, model.bend
+    params["friction_offset"] = model.offset
 
 
 def _fill_ledger(params: Any, tree: Tree, config: Config) -> None:
@@ -203,6 +254,13 @@ def _fill_ledger(params: Any, tree: Tree, config: Config) -> None:
             dt_s = (k + 1) * period_s
             params["gain_fast"][0, k, i] = riccati_gain(position_sd, velocity_sd, watch.fast_walk, dt_s)
             params["gain_slow"][0, k, i] = riccati_gain(position_sd, velocity_sd, watch.slow_walk, dt_s)
+    for i, noise in enumerate(noises):
+        params["e_variance"][0, i] = (
+            weighing.response_variance(params["gain_fast"][0, 0, i], *noise, period_s)
+            if watch.residual == "joint-space"
+            else weighing.momentum_variance(watch.residual, float(params["pole_fast"][0]), noise[1], period_s)
+        )
+    params["cause_pole"] = math.log(2.0) / 0.007
     params["period_ns"] = round(1e9 * period_s)
     params["gap_ns"] = round(1e9 * max(1.5 * period_s, min(watch.gap_limit_s, (GAIN_STEPS + 0.5) * period_s)))
     params["settle_ns"] = round(1e9 * watch.settle_s)
@@ -247,17 +305,16 @@ def riccati_gain(position_sd: float, velocity_sd: float, walk: float, dt_s: floa
 def _fill_limits(params: Any, tree: Tree, config: Config) -> None:
     """Set the limits of credibility, in units and order of the wire."""
     watch, joints = config.watch, config.robot.joint
-    base = tree.n - len(joints)
-    params["band_fast"], params["band_slow"] = math.inf, math.inf
-    for row, i in enumerate(_order(tree, config), start=base):
-        params["band_fast"][0, row], params["band_slow"][0, row] = config.bands[i]
     for i in range(len(joints)):
         low, high, speed = _travel(tree, config, i)
         params["q_min"][0, i], params["q_max"][0, i], params["qd_max"][0, i] = low, high, speed
         params["brake_motion"][0, i] = watch.brake_motion
-        params["jump"][0, i] = watch.position_jump
-        params["drift"][0, i] = watch.contradiction
+        params["jump"][0, i], params["drift"][0, i] = config.motion_limits[i]
         params["frozen_velocity"][0, i] = watch.frozen_velocity
+    _fill_noise(params, tree, config)
+    params["acceleration_max"] = watch.credible_acceleration
+    params["velocity_lag"] = watch.velocity_lag_s
+    params["push_ns"] = round(1e9 * watch.frozen_torque_s)
     params["drift_s"] = watch.contradiction_s
     params["frozen_ns"] = round(1e9 * watch.frozen_s)
     params["command_error_ns"] = round(1e9 * watch.command_error_s)
@@ -265,6 +322,21 @@ def _fill_limits(params: Any, tree: Tree, config: Config) -> None:
     params["base_position_max"] = _FARTHEST
     params["base_jump"] = watch.base_jump
     params["base_speed_max"] = _FASTEST
+
+
+def _fill_noise(params: Any, tree: Tree, config: Config) -> None:
+    """Set what the noise of each reading on the wire is, and what no friction of its joint holds."""
+    watch, base = config.watch, tree.n - len(tree.joints)
+    rows = {i: base + k for k, i in enumerate(_order(tree, config))}
+    for i, joint in enumerate(config.robot.joint):
+        position = math.hypot(joint.position_noise_sd, joint.encoder_step / math.sqrt(12.0))
+        # The second difference of white noise has six times its variance.
+        params["bend_q"][0, i] = watch.noise_ratio * math.sqrt(6.0) * position
+        params["bend_qd"][0, i] = watch.noise_ratio * math.sqrt(6.0) * joint.velocity_noise_sd
+        params["noise_qd"][0, i] = joint.velocity_noise_sd
+        params["noise_tau"][0, i] = joint.torque_noise_sd / joint.torque_scale or math.inf
+        params["wire_row"][0, i] = -1 if config.robot.coupling else rows[i]
+        params["push"][0, i] = watch.frozen_torque_ratio * joint.rated_torque
 
 
 def _travel(tree: Tree, config: Config, i: int) -> tuple[float, float, float]:
@@ -285,7 +357,7 @@ def _travel(tree: Tree, config: Config, i: int) -> tuple[float, float, float]:
     )
 
 
-def _facts(where: str, tree: Tree, config: Config) -> Facts:
+def _facts(where: str, tree: Tree, config: Config, explanations: tuple[Explanation, ...]) -> Facts:
     robot, watch = config.robot, config.watch
     base = tree.n - len(tree.joints)
     order = _order(tree, config)
@@ -303,12 +375,17 @@ def _facts(where: str, tree: Tree, config: Config) -> Facts:
         feet=tuple(foot.name for foot in robot.foot),
         floating=robot.base == "floating",
         serial=robot.serial,
+        tree=tree,
         row_needs=((coupling != 0.0) | (np.abs(np.linalg.inv(coupling).T) > 1e-12))[order],
+        explanations=explanations,
+        certainty=config.explain.certainty,
         tool=tool,
         wait_ns=round(1e9 * watch.wait_periods / config.input.rate_hz),
         stream_stale_ns=round(1e9 * watch.stream_stale_s),
         condition_stale_ns=round(1e9 * config.input.condition_stale_s),
         quiet_ns=round(1e9 * watch.quiet_s),
+        dropouts_ratio=watch.dropouts_ratio,
+        duplicates_ratio=watch.duplicates_ratio,
     )
 
 

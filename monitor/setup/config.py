@@ -126,7 +126,7 @@ class JointConfig(Table):
         description="v0 of the Coulomb friction tanh(v / v0), well below working speeds [rad/s].",
     )
     rated_torque: Positive = Field(
-        description="Torque the joint may give lastingly, on the joint side; bands are shares of it [N m]."
+        description="Torque the joint may give lastingly, on the joint side; sizes refer to it [N m]."
     )
     peak_torque: Positive = Field(
         default_factory=lambda earlier: earlier["rated_torque"],
@@ -158,16 +158,6 @@ class JointConfig(Table):
     )
     velocity_max: Positive | None = Field(
         default=None, examples=[2.0], description="Highest speed; default: the robot description's [rad/s]."
-    )
-    band_fast: Positive | None = Field(
-        default=None,
-        examples=[10.0],
-        description="Band of the fast residual; default: watch.band_fast_ratio * rated_torque [N m].",
-    )
-    band_slow: Positive | None = Field(
-        default=None,
-        examples=[5.0],
-        description="Band of the slow residual; default: watch.band_slow_ratio * rated_torque [N m].",
     )
 
     @property
@@ -235,6 +225,13 @@ class RobotConfig(Table):
         description=(
             "Attitude of a fixed base in the world: roll, pitch, yaw about the fixed x, y, z axes [rad]. "
             "Another way to say where gravity points; leave one of the two at its default."
+        ),
+    )
+    calibration: Text = Field(
+        default="",
+        description=(
+            "What commissioning found (JSON): a model this robot obeys, and how far it leaves it while all "
+            'is well; the path is relative to this file. "" for none: model of the description, wide band.'
         ),
     )
     serial: Text = Field(default="", description='Serial number the robot must announce; "" accepts any.')
@@ -419,11 +416,14 @@ class WatchConfig(Table):
     slow_bandwidth_hz: Positive = Field(
         default=3.0, description="Momentum forms: bandwidth of the slow residual [Hz]."
     )
-    band_fast_ratio: Positive = Field(
-        default=0.12, description="Band of the fast residual as a share of each joint's rated torque."
-    )
-    band_slow_ratio: Positive = Field(
-        default=0.08, description="Band of the slow residual as a share of each joint's rated torque."
+    false_alarm_s: float = Field(
+        default=2.6e6,
+        ge=60.0,
+        le=1e9,
+        description=(
+            "Wanted mean time between false alarms, in seconds of motion; commissioning sets the limits of "
+            "events by it, and says how far its recordings can support that. The default is a month [s]."
+        ),
     )
     quiet_s: Positive = Field(
         default=0.3, description="An event ends when the residual was inside its band this long [s]."
@@ -472,9 +472,34 @@ class WatchConfig(Table):
     frozen_velocity: Positive = Field(
         default=0.03, description="Velocity reading from which on the joint counts as moving [rad/s or m/s]."
     )
-    position_jump: Positive = Field(
-        default=0.02,
-        description="Largest credible change of position in one sample beyond velocity * time [rad or m].",
+    frozen_torque_ratio: Positive = Field(
+        default=0.5,
+        description=(
+            "A joint whose readings repeat exactly although torques beyond its friction and this share of "
+            "rated torque act on it, one way and then the other, has a frozen encoder."
+        ),
+    )
+    frozen_torque_s: Positive = Field(
+        default=0.5, description="Longest time between such torques that belong together [s]."
+    )
+    position_jump: Positive | None = Field(
+        default=None,
+        examples=[0.0005],
+        description=(
+            "Largest credible jump of a position, beyond what its velocity, its last positions and "
+            "credible_acceleration explain; default: encoder_step and 10 standard deviations of the joint's "
+            "noise [rad or m]."
+        ),
+    )
+    credible_acceleration: Positive = Field(
+        default=1000.0, description="Acceleration of a joint in the hardest blow [rad/s^2 or m/s^2]."
+    )
+    noise_ratio: Positive = Field(
+        default=3.5,
+        description=(
+            "Second differences of a position or velocity beyond so many standard deviations are too noisy "
+            "where they keep alternating. The default finds 10 times the configured noise within 30 samples."
+        ),
     )
     base_jump: Positive = Field(
         default=0.03,
@@ -483,12 +508,27 @@ class WatchConfig(Table):
             "velocity explains [m and rad]."
         ),
     )
-    contradiction: Positive = Field(
-        default=0.03,
-        description="Largest credible difference of integrated velocity and change of position [rad or m].",
+    contradiction: Positive | None = Field(
+        default=None,
+        examples=[0.03],
+        description=(
+            "Largest credible difference of integrated velocity and change of position, beyond what "
+            "velocity_lag_s explains; default: encoder_step, 10 standard deviations of the joint's noise, "
+            "and credible_acceleration * velocity_lag_s^2 for a blow that the velocity does not show yet "
+            "[rad or m]."
+        ),
+    )
+    velocity_lag_s: NotNegative = Field(
+        default=0.005, description="How late the velocity reading may be against the position [s]."
     )
     contradiction_s: Positive = Field(
         default=0.1, description="Time over which that difference is formed [s]."
+    )
+    dropouts_ratio: Positive = Field(
+        default=0.05, description="Share of scattered samples lost within a second that raises an alarm."
+    )
+    duplicates_ratio: Positive = Field(
+        default=0.05, description="Share of samples doubled within a second that raises an alarm."
     )
     command_error_ratio: Positive = Field(
         default=0.05,
@@ -518,6 +558,57 @@ class WatchConfig(Table):
             )
         if self.velocity_limit_ratio < 1.0:
             raise refusal("velocity_limit_ratio", f"{self.velocity_limit_ratio}", "at least 1")
+        return self
+
+
+Rate = Annotated[float, Field(gt=0, le=3600)]
+Probability = Annotated[float, Field(gt=0.5, lt=1)]
+
+
+class ExplainConfig(Table):
+    """`[explain]`: how often what happens to this robot, in its hours of motion, and when to believe it."""
+
+    contact_per_h: Rate = Field(default=100.0, description="Contacts with the world, on all links [1/h].")
+    actuator_per_h: Rate = Field(default=1.0, description="Faults of actuators, of all joints [1/h].")
+    position_sensor_per_h: Rate = Field(
+        default=0.3, description="Position readings that get an offset, of all joints [1/h]."
+    )
+    load_per_h: Rate = Field(
+        default=20.0, description="Loads taken up or lost without being announced [1/h]."
+    )
+    touchdown_per_h: Rate = Field(
+        default=100.0, description="Feet that meet ground where none is planned, all feet [1/h]."
+    )
+    other_per_h: Rate = Field(default=1.0, description="Whatever is none of these [1/h].")
+    nothing_per_h: Rate = Field(
+        default=3.0, description="Events that nothing caused: noise, friction, errors of the model [1/h]."
+    )
+    certainty: Probability = Field(
+        default=0.9,
+        description='Probability from which on a verdict is given; below, it is "undecided" and names all.',
+    )
+    lasting_probability: Probability = Field(
+        default=0.95,
+        description=(
+            "Probability from which on, held for lasting_s, a fault is lasting: the model takes it in, "
+            "so that what happens beside it can be told."
+        ),
+    )
+    lasting_s: Positive = Field(
+        default=2.0, description="How long that probability has to hold before the fault is taken in [s]."
+    )
+    largest_load_kg: Positive = Field(
+        default=1.0, description="Largest load that may be taken up unannounced, as expected [kg]."
+    )
+
+    @model_validator(mode="after")
+    def _check(self) -> Self:
+        if self.lasting_probability < self.certainty:
+            raise refusal(
+                "lasting_probability",
+                f"{self.lasting_probability}",
+                f"at least certainty, {self.certainty}: no fault is taken in that is not yet told",
+            )
         return self
 
 
@@ -615,6 +706,10 @@ class Config(Table):
     watch: WatchConfig = Field(
         default=WatchConfig(), description="How residuals are formed, and what counts as credible."
     )
+    explain: ExplainConfig = Field(
+        default=ExplainConfig(),
+        description="How often what happens, in hours of motion, and when an explanation is believed.",
+    )
     alarms: AlarmsConfig = Field(default=AlarmsConfig(), description="When people hear of it.")
     record: RecordConfig = Field(default=RecordConfig(), description="What is kept.")
     desk: DeskConfig = Field(default=DeskConfig(), description="Metrics for dashboards.")
@@ -625,7 +720,7 @@ class Config(Table):
 
     _path: Path = PrivateAttr(default=Path())
     _source_toml: str = PrivateAttr(default="")
-    _urdf_text: str = PrivateAttr(default="")
+    _files: Mapping[str, str] = PrivateAttr(default_factory=dict)
 
     @property
     def path(self) -> Path:
@@ -640,11 +735,16 @@ class Config(Table):
     @property
     def urdf_text(self) -> str:
         """The robot description as it was read."""
-        return self._urdf_text
+        return self._files[self.robot.urdf]
+
+    @property
+    def calibration_text(self) -> str:
+        """What commissioning wrote, as it was read; empty if the configuration names none."""
+        return self._files[self.robot.calibration] if self.robot.calibration else ""
 
     def model_files(self) -> dict[str, str]:
         """Name (as the configuration writes it) → text of every model file; a session carries these."""
-        return {self.robot.urdf: self._urdf_text}
+        return dict(self._files)
 
     @property
     def record_folder(self) -> Path:
@@ -652,26 +752,25 @@ class Config(Table):
         return self._path.parent / self.record.folder
 
     @property
-    def bands(self) -> tuple[tuple[float, float], ...]:
-        """(fast, slow) band of each joint, in wire order [N m, N]."""
-        watch = self.watch
-        return tuple(
-            (
-                joint.band_fast or watch.band_fast_ratio * joint.rated_torque,
-                joint.band_slow or watch.band_slow_ratio * joint.rated_torque,
-            )
-            for joint in self.robot.joint
-        )
+    def motion_limits(self) -> tuple[tuple[float, float], ...]:
+        """(position_jump, contradiction) of each joint, in wire order [rad or m]."""
+        watch, found = self.watch, []
+        blow = watch.credible_acceleration * watch.velocity_lag_s**2
+        for joint in self.robot.joint:
+            jump, drift = _motion_limits(joint, watch, 1.0 / self.input.rate_hz, 10.0)
+            found.append((watch.position_jump or jump, watch.contradiction or drift + blow))
+        return tuple(found)
 
     @model_validator(mode="after")
     def _check(self) -> Self:
         self._check_rates()
         self._check_sockets()
         for key, (floor, why) in standstill_floors(self.robot, self.input, self.watch).items():
-            if getattr(self.watch, key) < floor:
+            limit = getattr(self.watch, key)
+            if limit is not None and limit < floor:
                 raise refusal(
                     ("watch", key),
-                    f"{getattr(self.watch, key)}",
+                    f"{limit}",
                     f"at least {floor:.4g}, or it fires while the robot stands still ({why})",
                 )
         return self
@@ -715,11 +814,11 @@ def standstill_floors(
     """
     period = 1.0 / input_.rate_hz
     joints = robot.joint
+    motion = [_motion_limits(joint, watch, period, 8.0) for joint in joints]
     step = max(joint.encoder_step for joint in joints)
     position = max(joint.position_noise_sd for joint in joints) * sqrt(2.0)
     velocity = max(joint.velocity_noise_sd for joint in joints)
     torque = max(joint.torque_noise_sd / joint.rated_torque for joint in joints)
-    drift = velocity * sqrt(watch.contradiction_s * period)
     waiting = f"{watch.wait_periods + 1} periods of waiting"
     base = (
         max(robot.base_noise.position_sd, robot.base_noise.attitude_sd) if robot.base == "floating" else 0.0
@@ -728,13 +827,23 @@ def standstill_floors(
         "base_jump": (8.0 * sqrt(2.0) * base, "base_noise"),
         "frozen_velocity": (4.0 * velocity, "velocity_noise_sd"),
         "frozen_s": (max(2.0 * step / watch.frozen_velocity, 3.0 * period), "encoder_step and input.rate_hz"),
-        "position_jump": (step + 8.0 * hypot(position, velocity * period), "position and velocity noise"),
-        "contradiction": (step + 8.0 * hypot(position, drift), "position and velocity noise"),
+        "frozen_torque_ratio": (8.0 * torque, "torque_noise_sd"),
+        "position_jump": (max(jump for jump, _ in motion), "position and velocity noise"),
+        "noise_ratio": (3.5, "noise as configured"),
+        "contradiction": (max(drift for _, drift in motion), "position and velocity noise"),
         "contradiction_s": (3.0 * period, "input.rate_hz"),
         "brake_motion": (step + 8.0 * position, "position noise"),
         "command_error_ratio": (4.0 * torque, "torque_noise_sd"),
         "stream_stale_s": ((watch.wait_periods + 1) * period, waiting),
     }
+
+
+def _motion_limits(joint: JointConfig, watch: WatchConfig, period: float, sds: float) -> tuple[float, float]:
+    """Position jump and contradiction [rad or m] which the noise of a joint reaches at so many sds."""
+    position, velocity = sqrt(2.0) * joint.position_noise_sd, sqrt(2.0) * joint.velocity_noise_sd
+    jump = hypot(position, 0.5 * velocity * period)
+    drift = hypot(position, velocity * sqrt(watch.contradiction_s * period))
+    return joint.encoder_step + sds * jump, joint.encoder_step + sds * drift
 
 
 def load(path: Path) -> Config:
@@ -747,8 +856,8 @@ def load(path: Path) -> Config:
     """
     text = read_text(path, str(path))
     config = _validated(text, str(path))
-    urdf = path.parent / config.robot.urdf
-    return _completed(config, path, text, read_text(urdf, f"{path}: robot.urdf"))
+    files = {name: read_text(path.parent / name, f"{path}: {key}") for key, name in _named_files(config)}
+    return _completed(config, path, text, files)
 
 
 def loads(text: str, where: str, files: Mapping[str, str]) -> Config:
@@ -764,11 +873,11 @@ def loads(text: str, where: str, files: Mapping[str, str]) -> Config:
         Texts of the model files by the names the configuration uses (see `Config.model_files`).
     """
     config = _validated(text, where)
-    if config.robot.urdf not in files:
-        raise ConfigError(
-            f"{where}: robot.urdf", f"{config.robot.urdf!r}", f"one of the files at hand: {sorted(files)}"
-        )
-    return _completed(config, Path(where), text, files[config.robot.urdf])
+    named = _named_files(config)
+    for key, name in named:
+        if name not in files:
+            raise ConfigError(f"{where}: {key}", f"{name!r}", f"one of the files at hand: {sorted(files)}")
+    return _completed(config, Path(where), text, {name: files[name] for _, name in named})
 
 
 def read_text(path: Path, where: str) -> str:
@@ -781,8 +890,14 @@ def read_text(path: Path, where: str) -> str:
         raise ConfigError(where, f"{path}: byte {error.start} is not UTF-8", "text in UTF-8") from error
 
 
-def _completed(config: Config, path: Path, text: str, urdf_text: str) -> Config:
-    config._path, config._source_toml, config._urdf_text = path, text, urdf_text
+def _named_files(config: Config) -> list[tuple[str, str]]:
+    """Return key and name of every model file."""
+    named = [("robot.urdf", config.robot.urdf), ("robot.calibration", config.robot.calibration)]
+    return [(key, name) for key, name in named if name]
+
+
+def _completed(config: Config, path: Path, text: str, files: Mapping[str, str]) -> Config:
+    config._path, config._source_toml, config._files = path, text, files
     return config
 
 

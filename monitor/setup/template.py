@@ -142,7 +142,7 @@ def _joint(name: str, tree: Tree, given: Mapping[str, Any], urdf: Path) -> dict[
         raise ConfigError(
             f"{urdf}: joint '{name}' <limit> effort",
             "0" if effort == 0.0 else "nothing",
-            "the torque of the joint, because every band is a share of it",
+            "the torque of the joint, because sizes refer to it",
             "Give effort in N m, or rated_torque in a datasheet: --datasheet FILE.json with "
             f'{{"joints": [{{"name": "{name}", "rated_torque": ...}}]}}.',
         )
@@ -161,7 +161,12 @@ def _watch(robot: RobotConfig) -> dict[str, float]:
     """Limits of `[watch]` to widen because this robot's noise could fire their defaults at standstill."""
     watch = WatchConfig()
     floors = standstill_floors(robot, InputConfig(), watch)
-    return {key: _rounded_up(least) for key, (least, _) in floors.items() if least > getattr(watch, key)}
+    defaults = {key: getattr(watch, key) for key in floors}  # None: follows from the noise by itself
+    return {
+        key: _rounded_up(least)
+        for key, (least, _) in floors.items()
+        if defaults[key] is not None and least > defaults[key]
+    }
 
 
 def _rounded_up(value: float) -> float:
@@ -178,14 +183,12 @@ Hints = Mapping[tuple[str, str], float]
 def _hints(config: Config, tree: Tree) -> Hints:
     """What keys without a value stand for: (name of the joint, key) → number."""
     hints: dict[tuple[str, str], float] = {}
-    for joint, (fast, slow) in zip(config.robot.joint, config.bands, strict=True):
+    for joint in config.robot.joint:
         index = tree.joints.index(joint.name)
         values = {
             "position_min": float(tree.limits.lower[index]),
             "position_max": float(tree.limits.upper[index]),
             "velocity_max": float(tree.limits.velocity[index]),
-            "band_fast": fast,
-            "band_slow": slow,
         }
         hints |= {(joint.name, key): value for key, value in values.items() if isfinite(value)}
     return hints

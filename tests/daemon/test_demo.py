@@ -68,8 +68,12 @@ def test_the_demo_feels_pushes_and_the_loss_and_leaves_the_stop_quiet(
     assert "\x1b" not in out + err
     said = json.loads(out)
     assert {one["kind"] for one in said["felt"]} == {"push", "torque-loss", "stop"}
+    wanted = {"push": "contact", "torque-loss": "actuator", "stop": None}
     for one in said["felt"]:
         assert (one["delay_ms"] is None) == (one["kind"] == "stop"), one
+        assert one["verdict"] == wanted[one["kind"]], one
+        if one["kind"] == "torque-loss":
+            assert one["joint"] == one["where"], one
     assert said["other_alarms"] == []
 
     alarms = review(tmp_path / said["session"], tmp_path / "review")
@@ -79,7 +83,10 @@ def test_the_demo_feels_pushes_and_the_loss_and_leaves_the_stop_quiet(
         start_s = happened["start_ns"] / 1e9
         if one["delay_ms"] is not None:
             first = next(a for a in raised if a["t"] >= start_s)
-            assert first["joint"] == one["joint"]
+            last = [a for a in alarms if a["event"] == first["event"]][-1]
+            assert [last[name] for name in ("verdict", "joint", "link", "probability")] == [
+                one[name] for name in ("verdict", "joint", "link", "probability")
+            ]
             assert round(1e3 * (first["t"] - start_s), 1) == one["delay_ms"]
 
 

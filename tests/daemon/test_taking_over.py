@@ -72,7 +72,7 @@ def test_the_standby_takes_over_from_a_loop_that(start: Start, blow: signal.Sign
 
         # It sees the robot again, and feels the pushes.
         speaker.play((p.at_ns, p.topic, p.payload) for p in clean())
-        pushed = listener.alarm("unexplained-torque", "outside-band", since=alarm["seq"])
+        pushed = listener.alarm("unexplained-torque", "not-yet-weighed", since=alarm["seq"])
         assert pushed["event"] > alarm["event"]
         check_numbers_go_on(listener)
         after = {p.pid for p in daemon.workers()}

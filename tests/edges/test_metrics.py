@@ -27,7 +27,7 @@ from prometheus_client.parser import text_string_to_metric_families as parse
 
 from monitor.edges.metrics import METRICS, Collector, serve, table
 from monitor.errors import SystemFault
-from monitor.flow.layout import KINDS, LATENESS_EDGES_S, Coverage, Reason, Right, Signal
+from monitor.flow.layout import KINDS, LATENESS_EDGES_S, VERDICTS, Coverage, Reason, Right, Signal
 from monitor.flow.pipeline import Message, Pipeline
 from monitor.setup.build import Setup, build
 from monitor.setup.config import loads
@@ -188,6 +188,9 @@ def test_all_labels_are_there_before_the_loop_has_started(rind: Desk, rind_setup
     )
     assert seen("samples_bad_total", "reason") == words(Signal) - {"ok"}
     assert seen("alarms_raised_total", "kind") == seen("alarms_standing", "kind") == set(KINDS)
+    assert seen("events_total", "verdict") == set(VERDICTS)
+    assert seen("band_newton_meters", "joint") == seen("explained_torque_newton_meters", "joint") == joints
+    assert seen("measured_torque_newton_meters", "joint") == joints
     assert seen("right", "answer") == words(Right)
     assert seen("right", "right") == {"priority", "cpu", "memory"}
     counters = {metric: value for (metric, _), value in values.items() if metric.endswith("_total")}
@@ -227,11 +230,17 @@ def test_the_counters_agree_with_the_messages_sent_out(rind: Desk) -> None:
     alarms = [message.body for message in sent if message.topic == "alarm"]
     raised = Counter(body["kind"] for body in alarms if body["state"] == "unacknowledged")
     standing = Counter(kind for kind, _, _ in health["standing"])
-    assert raised["unexplained-torque"] == 1
+    assert raised["unexplained-torque"] == raised["contact"] == 1
     for kind, priority in KINDS.items():
         assert values[of("alarms_raised_total", kind=kind, priority=priority)] == raised[kind]
         assert values[of("alarms_standing", kind=kind, priority=priority)] == standing[kind]
-    assert values[of("events_total")] == max(body["event"] for body in alarms)
+    over = {body["event"]: body for body in alarms if body["kind"] not in ("unexplained-torque", "contact")}
+    over |= {m.body["event"]: m.body for m in sent if m.topic == "verdict" and not m.body["open"]}
+    held = Counter(body["verdict"] for body in over.values())
+    assert held["contact"] == 1
+    for verdict in VERDICTS:
+        assert values[of("events_total", verdict=verdict)] == held[verdict]
+    assert held.total() == max(body["event"] for body in alarms)
 
 
 def test_a_push_stands_outside_its_band_and_the_robot_time_goes_on(rind: Desk) -> None:
@@ -283,17 +292,30 @@ def test_residuals_carry_the_unit_and_the_name_of_their_own_row(tmp_path: Path) 
     # Rows: six of the base, then in order of the description rail and hinge; on the wire hinge is first.
     out["r_fast"], out["r_slow"] = [0, 0, 0, 0, 0, 0, 1.5, -2.5], [0, 0, 0, 0, 0, 0, 3.5, -4.5]
     out["tau_model"], out["ratio"] = [9, 9, 9, 9, 9, 9, 5.5, -6.5], [9, 9, 9, 9, 9, 9, 0.25, 0.75]
+    out["band_fast"], out["band_slow"] = [0, 0, 0, 0, 0, 0, 7.5, 8.5], [0, 0, 0, 0, 0, 0, 9.5, 10.5]
+    out["explained"], shared.state["tau"] = [9, 9, 9, 9, 9, 9, 0.5, -0.5], [9, 9, 9, 9, 9, 9, 11.5, -12.5]
+    out["body_ratio"] = 0.125
     values = scrape(Collector(setup, shared, "4f2a", "0.1.0"))
+    assert values[of("body_ratio")] == 0.125
+    words = ("residual", "model", "band", "explained", "measured")
     found = {
         (name, dict(labels)["joint"], dict(labels).get("bandwidth")): value
         for (name, labels), value in values.items()
-        if name.startswith(("limbtell_residual", "limbtell_model", "limbtell_band"))
+        if any(name.startswith(f"limbtell_{word}_") for word in words)
     }
     assert found == {
         ("limbtell_residual_newtons", "rail", "fast"): 1.5,
         ("limbtell_residual_newtons", "rail", "slow"): 3.5,
         ("limbtell_residual_newton_meters", "hinge", "fast"): -2.5,
         ("limbtell_residual_newton_meters", "hinge", "slow"): -4.5,
+        ("limbtell_band_newtons", "rail", "fast"): 7.5,
+        ("limbtell_band_newtons", "rail", "slow"): 9.5,
+        ("limbtell_band_newton_meters", "hinge", "fast"): 8.5,
+        ("limbtell_band_newton_meters", "hinge", "slow"): 10.5,
+        ("limbtell_explained_force_newtons", "rail", None): 0.5,
+        ("limbtell_explained_torque_newton_meters", "hinge", None): -0.5,
+        ("limbtell_measured_force_newtons", "rail", None): 11.5,
+        ("limbtell_measured_torque_newton_meters", "hinge", None): -12.5,
         ("limbtell_model_force_newtons", "rail", None): 5.5,
         ("limbtell_model_torque_newton_meters", "hinge", None): -6.5,
         ("limbtell_band_ratio", "rail", None): 0.25,

@@ -286,11 +286,12 @@ class Rig:
 
     def standing(self) -> set[tuple[str, str, str | None]]:
         """Return (kind, detail, joint) of what stands, as the alarms tell it."""
-        found: set[tuple[str, str, str | None]] = set()
-        for body in self.alarms():
-            key = body["kind"], body["detail"], body["joint"]
-            (found.add if body["state"] == "unacknowledged" else found.discard)(key)
-        return found
+        last = {body["event"]: body for body in self.alarms()}
+        return {
+            (body["kind"], body["detail"], body["joint"])
+            for body in last.values()
+            if body["state"] == "unacknowledged"
+        }
 
 
 def low_passed(x: Floats, pole: float, dt: float) -> Floats:

@@ -30,7 +30,7 @@ class Bench:
     """An aligner fed as the data path feeds it: each arrival, then a tick every period."""
 
     def __init__(self, wait_ns: int = WAIT) -> None:
-        self.counts: Block = zeros(state_fields(Sizes(1, 1, 1, 1, 1)))
+        self.counts: Block = zeros(state_fields(Sizes(1, 1, 1, 1, 1, 1, 1, 1, 1, 1)))
         self.aligner = Aligner(self.counts[0], wait_ns)
         self.released: list[Released] = []
 

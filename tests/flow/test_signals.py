@@ -7,9 +7,13 @@ from collections.abc import Callable
 from typing import Any
 
 import numpy as np
+import pinocchio
 import pytest
+from hypothesis import HealthCheck, given, settings
+from hypothesis import strategies as st
 from numpy.typing import NDArray
 
+from monitor.flow.credible import credible
 from monitor.flow.layout import Signal
 from monitor.setup.build import Setup
 from tests.flow.rig import (
@@ -50,8 +54,6 @@ class Turning:
         self, change: Callable[[dict[str, Any]], None] | None = None, step_ns: int = PERIOD_NS, skip: int = 0
     ) -> None:
         """Send the next sample, changed; `skip` so many before it."""
-        import pinocchio
-
         self.k += 1 + skip
         self.rig.seq += skip
         q, qd = turning(self.k)
@@ -107,6 +109,7 @@ def moved(i: int, by: float) -> Callable[[dict[str, Any]], None]:
         (at("tau", 1, -91.0), Signal.OUT_OF_RANGE, 1),
         (moved(0, 0.021), Signal.JUMP, 0),
         (moved(1, -0.021), Signal.JUMP, 1),
+        (moved(1, 0.002), Signal.JUMP, 1),  # forty steps of the encoder
     ],
 )
 def test_a_bad_sample_is_named_and_never_enters_the_ledger(
@@ -141,17 +144,15 @@ def test_a_bad_sample_is_named_and_never_enters_the_ledger(
 
 
 def test_a_position_that_stays_while_its_velocity_says_otherwise_is_frozen(arm: Turning) -> None:
-    stuck = turning(arm.k)[0][1]
-    for _ in range(48):
+    stuck, seen = turning(arm.k)[0][1], []
+    for _ in range(100):
         arm.send(at("q", 1, stuck))
-        assert arm.signal()[0] in (Signal.OK, Signal.CONTRADICTION)
-    arm.run(0)
-    seen = set()
-    for _ in range(10):
-        arm.send(at("q", 1, stuck))
-        seen.add(arm.signal())
-    assert seen <= {(Signal.FROZEN, 1), (Signal.CONTRADICTION, 1), (Signal.OK, -1)}
-    assert any(fault in (Signal.FROZEN, Signal.CONTRADICTION) for fault, _ in seen)
+        seen.append(arm.signal())
+    # At .8 rad/s velocity and position are apart by more than is credible before frozen_s is over.
+    first = seen.index((Signal.FROZEN, 1))
+    assert 10 < first < 51
+    assert set(seen[:first]) == {(Signal.OK, -1)}
+    assert set(seen[first:]) == {(Signal.FROZEN, 1)}
 
 
 def test_a_slowly_turning_joint_that_freezes_is_called_frozen_after_the_stated_time(
@@ -182,9 +183,11 @@ def test_a_position_that_moves_otherwise_than_its_velocity_contradicts_it(pair_s
         # Drifts at 1 rad/s while the velocity says nothing.
         rig.sample([0.1, 0.2 + 1e-3 * k], [0.0, 0.0], weight)
         seen.append((Signal(int(rig.outputs["signal"])), int(rig.outputs["signal_joint"])))
-    # d' = 1 - d / .1 s: .03 after -.1 ln(1 - .3) = 35.7 ms.
+    # d' = 1 - d / .1 s reaches a limit d after -.1 ln(1 - d / .1) s: here .0258 after 29.8 ms.
+    limit = pair_setup.params["drift"][0, 1]
+    assert limit == pytest.approx(0.0258, abs=1e-4)
     first = seen.index((Signal.CONTRADICTION, 1))
-    assert first == pytest.approx(36, abs=2)
+    assert first == pytest.approx(-100.0 * math.log(1.0 - limit / 0.1), abs=2)
     assert set(seen[first:]) == {(Signal.CONTRADICTION, 1)}
     assert ("signal", "contradiction", "lower") in rig.standing()
     assert {b["verdict"] for b in rig.alarms()} <= {"signal", "undecided"}
@@ -422,3 +425,292 @@ def test_the_time_of_alarms_goes_on_while_all_samples_are_bad(arm: Turning) -> N
     arm.rig.elapse(1000, b"\xc1")
     (alarm,) = arm.rig.alarms("wire")
     assert alarm["t"] == pytest.approx(arm.rig.t_ns / 1e9, abs=2e-3)
+
+
+# --- readings against their own past --------------------------------------------------------------
+
+
+def verdicts(
+    setup: Setup, q: Floats, qd: Floats, tau: Floats, t_ns: NDArray[np.int64] | None = None
+) -> list[tuple[Signal, int]]:
+    """Return (fault, joint) of each row (T,2) of readings of a powered arm, by the signal checks alone."""
+    blocks = setup.blocks()
+    x, out = blocks.inputs[0], blocks.outputs[0]
+    x["drive"], x["rebase"] = 1, 2
+    found = []
+    for k in range(len(q)):
+        x["seq"], x["t_ns"] = k + 1, 10**9 + PERIOD_NS * k if t_ns is None else t_ns[k]
+        x["q"], x["qd"], x["tau"] = q[k], qd[k], tau[k]
+        credible(*blocks)
+        x["rebase"] = 0
+        found.append((Signal(int(out["signal"])), int(out["signal_joint"])))
+    return found
+
+
+def faults(found: list[tuple[Signal, int]]) -> set[tuple[Signal, int]]:
+    return set(found) - {(Signal.OK, -1)}
+
+
+STEP = 5e-5  # rad: the default encoder step
+VELOCITY_SD, TORQUE_SD = 0.005, np.array([0.2, 0.1])  # configured
+
+
+def encoded(q: Floats) -> Floats:
+    return STEP * np.round(q / STEP)
+
+
+def sensed(q: Floats, qd: Floats, rng: np.random.Generator, kind: str = "noisy") -> Floats:
+    """Return the velocity reading of a kind of sensor."""
+    if kind == "exact":
+        return qd
+    if kind in ("differenced", "differenced late"):
+        read = encoded(q)
+        late = kind == "differenced late"
+        steps = np.diff(read, axis=0, prepend=read[:1])
+        steps[0] = steps[1]
+        return np.vstack([steps[:1], steps[:-1]])[: len(q)] / 1e-3 if late else steps / 1e-3
+    if kind == "lagging":
+        shown, keep = qd.copy(), math.exp(-1.0 / 5.0)
+        for k in range(1, len(qd)):
+            shown[k] = keep * shown[k - 1] + (1.0 - keep) * qd[k]
+        qd = shown
+    elif kind == "late":
+        qd = np.vstack([np.repeat(qd[:1], 5, axis=0), qd[:-5]])
+    noisy = qd + VELOCITY_SD * rng.standard_normal(qd.shape)
+    return 0.004 * np.round(noisy / 0.004) if kind == "coarse" else noisy
+
+
+KINDS_OF_VELOCITY = ("noisy", "coarse", "lagging", "late", "differenced", "differenced late", "exact")
+
+
+def swaying(samples: int, speed: float = 1.0) -> tuple[Floats, Floats]:
+    """Return q and qd (T,2) of two joints that turn to and fro, at rest to begin with."""
+    t = 1e-3 * np.arange(samples)[:, None]
+    w, size = 2.0 * math.pi * np.array([0.5, 0.8]), speed * np.array([1.0, 0.6])
+    return size / w * (1.0 - np.cos(w * t)), size * np.sin(w * t)
+
+
+def torques(samples: int, rng: np.random.Generator) -> Floats:
+    return 5.0 + TORQUE_SD * rng.standard_normal((samples, 2))
+
+
+@given(
+    kind=st.sampled_from(KINDS_OF_VELOCITY),
+    speed=st.floats(0.0, 3.0),
+    blow=st.floats(-3.0, 3.0),
+    width_ms=st.floats(3.0, 30.0),
+    back_ms=st.floats(4.0, 300.0),
+    uneven=st.booleans(),
+    seed=st.integers(0, 2**32 - 1),
+)
+@settings(
+    deadline=None, max_examples=150, suppress_health_check=[HealthCheck.function_scoped_fixture]
+)  # the setup is shared, and never written
+def test_no_motion_and_no_blow_makes_a_healthy_reading_incredible(
+    pair_setup: Setup,
+    kind: str,
+    speed: float,
+    blow: float,
+    width_ms: float,
+    back_ms: float,
+    uneven: bool,
+    seed: int,
+) -> None:
+    # At its own rate and ten times finer, for a blow of up to 1000 rad/s² that begins between two samples.
+    rng, samples = np.random.default_rng(seed), 900
+    q, qd = swaying(samples, speed)
+    t = 0.1 * np.arange(10 * samples)
+    push = np.clip((t - 500.4) / width_ms, 0.0, 1.0) - np.clip(
+        (t - 500.4 - width_ms - 20.0) / back_ms, 0.0, 1.0
+    )
+    fast = blow * push * min(1.0, back_ms / 4.0)
+    moved_by = 1e-4 * (np.cumsum(fast) - 0.5 * fast)
+    qd[:, 0] += fast[::10]
+    q[:, 0] += moved_by[::10]
+    t_ns = 10**9 + PERIOD_NS * np.arange(samples)
+    if uneven:
+        t_ns += rng.integers(-20_000, 20_001, samples)
+    read = q if kind == "exact" else encoded(q)
+    found = verdicts(pair_setup, read, sensed(q, qd, rng, kind), torques(samples, rng), t_ns)
+    assert faults(found) == set()
+
+
+@pytest.mark.parametrize("kind", KINDS_OF_VELOCITY)
+def test_a_robot_at_rest_is_credible_with_every_kind_of_velocity(pair_setup: Setup, kind: str) -> None:
+    # Servo-held on the edge between two steps, then perfectly still, as with the brakes closed.
+    rng, samples = np.random.default_rng(9), 6000
+    q = np.full((samples, 2), 0.3 + 0.5 * STEP)
+    q[:3000] += 1e-6 * rng.standard_normal((3000, 2))
+    qd, tau = sensed(q, np.zeros_like(q), rng, kind), torques(samples, rng)
+    assert faults(verdicts(pair_setup, encoded(q), qd, tau)) == set()
+    if kind in ("differenced", "differenced late", "exact"):
+        tau[3000:] = tau[3000]  # not even the torque is measured any more
+        still = np.where(np.arange(samples)[:, None] < 3000, qd, 0.0)
+        tau[3000:] = 0.0
+        assert faults(verdicts(pair_setup, encoded(q), still, tau)) == set()
+
+
+def test_closed_brakes_and_unpowered_drives_may_repeat_everything(pair_setup: Setup) -> None:
+    rig, rng = Rig(pair_setup), np.random.default_rng(10)
+    q = np.array([0.3, -0.5])
+    weight = Mover(PAIR, (0.3, 0.1)).gravity_torque(q)
+    for _ in range(1700):
+        rig.sample(q, VELOCITY_SD * rng.standard_normal(2), weight + TORQUE_SD * rng.standard_normal(2))
+    rig.condition(brake=[1, 1], drive=[0, 0])
+    for _ in range(500):
+        rig.sample(q, [0.0011, -0.0003], [0.02, -0.01])
+    assert rig.alarms() == []
+
+
+@pytest.mark.parametrize("moving", [True, False])
+def test_an_old_sample_that_is_sent_again_and_again_is_a_frozen_robot(
+    pair_setup: Setup, moving: bool
+) -> None:
+    rng, samples = np.random.default_rng(11), 3000
+    q, qd = swaying(samples) if moving else (np.full((samples, 2), 0.3), np.zeros((samples, 2)))
+    read, speed, tau = encoded(q), sensed(q, qd, rng), torques(samples, rng)
+    for reading in (read, speed, tau):
+        reading[2200:2400] = reading[2200]
+    found = verdicts(pair_setup, read, speed, tau)
+    assert faults(found[:2200]) == set()
+    assert set(found[2252:2400]) == {(Signal.FROZEN, -1)}
+    # What moved on meanwhile jumps once, and all is well again.
+    assert faults(found[2401:]) == set()
+    assert faults(found[2200:2252]) <= {(Signal.FROZEN, 0), (Signal.FROZEN, 1), (Signal.FROZEN, -1)}
+
+
+def test_a_simulator_without_noise_may_stand_and_repeat_itself(pair_setup: Setup) -> None:
+    samples = 5000
+    q, qd = swaying(samples)
+    q[2000:], qd[2000:] = q[2000], 0.0  # a full period: at rest there
+    found = verdicts(pair_setup, q, qd, np.full((samples, 2), 5.0))
+    assert faults(found) == set()
+
+
+def test_a_joint_whose_noise_vanishes_is_frozen_and_named(pair_setup: Setup) -> None:
+    rng, samples = np.random.default_rng(12), 3000
+    q = np.full((samples, 2), 0.3)
+    speed = sensed(q, np.zeros_like(q), rng)
+    speed[2500:2700, 1] = speed[2500, 1]
+    found = verdicts(pair_setup, encoded(q), speed, torques(samples, rng))
+    assert faults(found) == {(Signal.FROZEN, 1)}
+    assert found.index((Signal.FROZEN, 1)) == 2551
+    assert faults(found[2700:]) == set()
+
+
+@pytest.mark.parametrize(
+    ("case", "frozen"),
+    [
+        ("both ways", True),
+        ("one way", False),
+        ("weak", False),
+        ("slow", False),
+        ("flickers", False),
+        ("braked", False),
+        ("guided", False),
+    ],
+)
+def test_a_joint_that_repeats_itself_while_torque_must_move_it_either_way_is_frozen(
+    pair_setup: Setup, case: str, frozen: bool
+) -> None:
+    # Rated torque 40 N m: half of it cannot be held one way and the other.
+    rig, q = Rig(pair_setup), np.array([0.3, -0.5])
+    rig.condition(mode="guided" if case == "guided" else "work", brake=[int(case == "braked"), 0])
+    weight = Mover(PAIR, (0.3, 0.1)).gravity_torque(q)
+    size = {"weak": 18.0}.get(case, 30.0)
+    period = {"slow": 4.0}.get(case, 0.5)
+    seen = set()
+    for k in range(2500):
+        swing = size * math.sin(2.0 * math.pi * 1e-3 * (k - 500) / period) if k > 500 else 0.0
+        swing = abs(swing) if case == "one way" else swing
+        read = q + both(STEP * (k % 40 == 0), 0.0) if case == "flickers" else q
+        rig.sample(read, [0.0, 0.0], weight + both(swing, 0.0))
+        seen.add((Signal(int(rig.outputs["signal"])), int(rig.outputs["signal_joint"])))
+    assert faults(list(seen)) == ({(Signal.FROZEN, 0)} if frozen else set())
+    assert (("signal", "frozen", "upper") in rig.standing()) == frozen
+    if frozen:  # it ends when the reading moves
+        for k in range(400):
+            rig.sample(q + both(STEP * (1 + k % 2), 0.0), [0.0, 0.0], weight)
+        assert ("signal", "frozen", "upper") not in rig.standing()
+
+
+@pytest.mark.parametrize("reading", ["position", "velocity"])
+def test_a_burst_of_noise_is_named_with_its_joint_and_ends_with_it(pair_setup: Setup, reading: str) -> None:
+    rng = np.random.default_rng(13)
+    rig, (q, qd) = Rig(pair_setup), swaying(2500)
+    mover = Mover(PAIR, (0.3, 0.1))
+    for k in range(1, 2499):
+        tau = pinocchio.rnea(
+            mover.model, mover.data, q[k], qd[k], np.gradient(qd[k - 1 : k + 2], 1e-3, axis=0)[1]
+        )
+        speed, place = qd[k] + VELOCITY_SD * rng.standard_normal(2), q[k].copy()
+        if 1500 <= k < 1530:
+            if reading == "velocity":
+                speed[1] += 15.0 * VELOCITY_SD * rng.standard_normal()
+            else:
+                place[1] += 15.0 * STEP / math.sqrt(12.0) * rng.standard_normal()
+        rig.sample(encoded(place), speed, tau)
+    assert {(b["kind"], b["detail"], b["joint"]) for b in rig.alarms()} == {("signal", "noise", "lower")}
+    assert 1 <= int(rig.state["bad"][Signal.NOISE]) < 30
+    assert rig.standing() == set()
+
+
+@pytest.mark.parametrize(("size", "found"), [(0.0003, False), (0.002, True), (-0.003, True)])
+def test_small_jumps_are_found_as_far_as_no_blow_explains_them(
+    pair_setup: Setup, size: float, found: bool
+) -> None:
+    rng, samples = np.random.default_rng(14), 1200
+    q, qd = swaying(samples)
+    shifted = q.copy()
+    shifted[1000:, 0] += size
+    seen = verdicts(pair_setup, encoded(shifted), sensed(q, qd, rng, "lagging"), torques(samples, rng))
+    assert faults(seen) == ({(Signal.JUMP, 0)} if found else set())
+    assert seen.count((Signal.JUMP, 0)) == int(found)
+
+
+@pytest.mark.parametrize(("scale", "offset"), [(0.6, 0.0), (-1.0, 0.0), (1.0, 0.4)])
+def test_a_velocity_that_is_wrong_contradicts_the_position(
+    pair_setup: Setup, scale: float, offset: float
+) -> None:
+    rng, samples = np.random.default_rng(15), 1500
+    q, qd = swaying(samples)
+    wrong = qd * [1.0, 1.0]
+    wrong[500:, 0] = scale * wrong[500:, 0] + offset
+    seen = faults(verdicts(pair_setup, encoded(q), sensed(q, wrong, rng), torques(samples, rng)))
+    assert seen == {(Signal.CONTRADICTION, 0)}
+
+
+@pytest.mark.parametrize(
+    ("case", "detail"),
+    [("lost 4 %", ""), ("lost 10 %", "dropouts"), ("doubled 10 %", "duplicates"), ("gaps", "")],
+)
+def test_scattered_losses_and_doubled_samples_are_called_while_they_last(
+    pair: Rig, case: str, detail: str
+) -> None:
+    q = np.array([0.3, -0.5])
+    weight = Mover(PAIR, (0.3, 0.1)).gravity_torque(q)
+
+    def send(samples: int, case: str = "") -> None:
+        for k in range(samples):
+            lost = {"lost 4 %": k % 25 == 0, "lost 10 %": k % 10 == 0, "gaps": 80 * (k % 400 == 200)}.get(
+                case, 0
+            )
+            pair.seq += int(lost)
+            pair.t_ns += PERIOD_NS * int(lost)
+            pair.elapse(PERIOD_NS * int(lost))
+            pair.sample(q, [0.0, 0.0], weight)
+            if case == "doubled 10 %" and k % 10 == 0:
+                pair.seq -= 1
+                pair.sample(q, [0.0, 0.0], weight, step_ns=0)
+
+    send(1500)
+    send(3000, case)
+    assert {b["detail"] for b in pair.alarms()} - {"gap"} == ({detail} - {""})
+    if detail:
+        (alarm,) = pair.alarms()
+        assert (alarm["kind"], alarm["verdict"], alarm["joint"]) == ("signal", "signal", None)
+        assert "samples within a second" in alarm["text"]
+        assert pair.standing() == {("signal", detail, None)}
+        send(2100)
+        assert pair.standing() == set()
+        assert int(pair.state["bad"][1:].sum()) == 0

@@ -36,14 +36,19 @@ FIELDS = (
     "known",
     "q_fast",
     "drift",
+    "left",
+    "R",
+    "track",
 )
+WEIGHED = ("null_log", "constant_log", "smooth_log", "smooth_x", "fault_theta")
 
 
 def robots() -> Iterator[tuple[str, Setup]]:
-    """Yield a fixed and a floating robot with each form of the residual."""
+    """Yield a fixed and a floating robot with each form of the residual; they are judged almost at once."""
     for form in FORMS:
-        yield f"fixed {form}", made(PAIR, PAIR_JOINTS, watch={"residual": form})
-        yield f"floating {form}", made(SLED, SLED_JOINTS, {"base": "floating"}, {"residual": form})
+        watch = {"residual": form, "settle_s": 0.002, "start_settle_s": 0.005}
+        yield f"fixed {form}", made(PAIR, PAIR_JOINTS, watch=watch)
+        yield f"floating {form}", made(SLED, SLED_JOINTS, {"base": "floating"}, watch)
 
 
 def put(inputs: Any, k: int) -> None:
@@ -63,17 +68,18 @@ def put(inputs: Any, k: int) -> None:
     x["base_w"][:] = (0.0, 2.0, 0.0)
     if k % 37 == 36:
         x["q"][0] = np.nan
+    x["judged"][:] = 1
     x["brake"][m - 1] = 1 if k % 400 > 300 else 0
 
 
 def rows(setup: Setup, count: int) -> dict[str, Floats]:
     """Return the fields of `state` after each of so many samples."""
     blocks = setup.blocks()
-    found: dict[str, list[Any]] = {name: [] for name in FIELDS}
+    found: dict[str, list[Any]] = {name: [] for name in FIELDS + WEIGHED}
     for k in range(count):
         put(blocks.inputs, k)
         step(*blocks)
-        for name in FIELDS:
+        for name in FIELDS + WEIGHED:
             found[name].append(blocks.state[0][name].copy())
     return {name: np.array(values) for name, values in found.items()}
 

@@ -59,14 +59,6 @@ def test_the_smallest_file_is_accepted_and_its_defaults_are_derived() -> None:
     # The error of rounding is uniform over one step; its standard deviation, numerically.
     error = joint.encoder_step * (np.arange(0.5, 10_000) / 10_000 - 0.5)
     assert joint.position_noise_sd == pytest.approx(error.std(), rel=1e-6)
-    assert config.bands == (
-        (pytest.approx(1.2), pytest.approx(0.8)),
-        (pytest.approx(2.4), pytest.approx(1.6)),
-    )
-
-
-def test_a_band_of_a_joint_replaces_the_share_of_rated_torque() -> None:
-    assert read(SMALLEST + "band_fast = 7.0\n").bands[1] == (7.0, pytest.approx(1.6))
 
 
 def test_load_reads_the_description_beside_the_file(tmp_path: Path) -> None:
@@ -79,7 +71,33 @@ def test_load_reads_the_description_beside_the_file(tmp_path: Path) -> None:
     assert config.path == path
     assert config.source_toml == text
     assert config.model_files() == {"models/r.urdf": URDF}
+    assert config.calibration_text == ""
     assert config.record_folder == tmp_path / "sessions"
+
+
+def test_a_calibration_is_read_beside_the_file_and_goes_with_it(tmp_path: Path) -> None:
+    (tmp_path / "rind.urdf").write_text(URDF, encoding="utf-8")
+    (tmp_path / "rind.calibration.json").write_text("{}", encoding="utf-8")
+    path = tmp_path / "robot.toml"
+    path.write_text(robot('calibration = "rind.calibration.json"'), encoding="utf-8")
+    config = load(path)
+    assert config.calibration_text == "{}"
+    assert config.model_files() == {"rind.urdf": URDF, "rind.calibration.json": "{}"}
+    again = loads(config.source_toml, str(path), config.model_files())
+    assert again == config
+    assert again.calibration_text == "{}"
+
+
+def test_a_calibration_that_is_named_but_not_there_is_refused(tmp_path: Path) -> None:
+    (tmp_path / "rind.urdf").write_text(URDF, encoding="utf-8")
+    path = tmp_path / "robot.toml"
+    path.write_text(robot('calibration = "none.json"'), encoding="utf-8")
+    with pytest.raises(ConfigError, match="No such file") as caught:
+        load(path)
+    assert caught.value.where == f"{path}: robot.calibration"
+    error = refused(robot('calibration = "none.json"'))
+    assert error.where == "robot.toml: robot.calibration"
+    assert (error.found, error.expected) == ("'none.json'", "one of the files at hand: ['rind.urdf']")
 
 
 def test_a_session_reads_the_same_configuration_from_memory(tmp_path: Path) -> None:
@@ -214,6 +232,18 @@ MISTAKES = {
         "1e-06",
         "fires while the robot stands still",
     ),
+    "noise as configured": (
+        "[watch]\nnoise_ratio = 3.0 #!",
+        "watch.noise_ratio",
+        "3.0",
+        "at least 3.5, or it fires while the robot stands still",
+    ),
+    "contradicts at standstill": (
+        "[watch]\ncontradiction = 1e-5 #!",
+        "watch.contradiction",
+        "1e-05",
+        "fires while the robot stands still",
+    ),
     "credible torque": (
         "[watch]\ntorque_credible_ratio = 1.0 #!",
         "watch.torque_credible_ratio",
@@ -232,6 +262,18 @@ MISTAKES = {
         "5",
         "at least 10",
     ),
+    "no rate at all": ("[explain]\nactuator_per_h = 0 #!", "explain.actuator_per_h", "0", "greater than 0"),
+    "always": ("[explain]\ncontact_per_h = 4000 #!", "explain.contact_per_h", "4000", "less than or equal"),
+    "as good as a coin": ("[explain]\ncertainty = 0.5 #!", "explain.certainty", "0.5", "greater than 0.5"),
+    "more than certain": ("[explain]\ncertainty = 1.0 #!", "explain.certainty", "1.0", "less than 1"),
+    "taken in untold": (
+        "[explain]\nlasting_probability = 0.85 #!",
+        "explain.lasting_probability",
+        "0.85",
+        "at least certainty, 0.9",
+    ),
+    "no load": ("[explain]\nlargest_load_kg = 0 #!", "explain.largest_load_kg", "0", "greater than 0"),
+    "always false": ("[watch]\nfalse_alarm_s = 10 #!", "watch.false_alarm_s", "10", "or equal to 60"),
     "address": ('[input]\naddress = "here" #!', "input.address", '"here"', "tcp://HOST:PORT"),
     "port": ('[input]\naddress = "tcp://10.0.0.1:70000" #!', "input.address", "70000", "tcp://HOST:PORT"),
     "open output": ('[output]\naddress = "tcp://*:5556" #!', "output.address", "tcp://*:5556", "loopback"),
@@ -376,6 +418,19 @@ def test_an_output_open_to_others_is_accepted_where_it_is_allowed() -> None:
 
 
 # --- limits which cannot fire at standstill ------------------------------------------------------
+
+
+def test_limits_of_motion_follow_from_the_noise_of_each_joint_unless_they_are_given() -> None:
+    config = read(SMALLEST + "encoder_step = 1e-4\nposition_noise_sd = 2e-5\nvelocity_noise_sd = 0.007\n")
+    (fine, _), (jump, drift) = config.motion_limits
+    # 10 sds of Δq - dt (v + v_last) / 2: two positions, and at 1 kHz two velocities of 3.5e-6 rad each.
+    assert jump == pytest.approx(1e-4 + 10.0 * math.sqrt(2.0 * 2e-5**2 + 2.0 * 3.5e-6**2), rel=1e-12)
+    # 10 sds of two positions and of velocities over 0.1 s; a blow of 1000 rad/s² that shows 5 ms late.
+    noise = math.sqrt(2.0 * 2e-5**2 + 2.0 * 0.007**2 * 0.1 * 1e-3)
+    assert drift == pytest.approx(1e-4 + 10.0 * noise + 1000.0 * 0.005**2, rel=1e-12)
+    assert fine == pytest.approx(5e-5 * (1.0 + 10.0 * math.sqrt(2.0 / 12.0 + 2.0 * 0.05**2)), rel=1e-12)
+    given = read(SMALLEST + "[watch]\nposition_jump = 0.01\ncontradiction = 0.05\n")
+    assert given.motion_limits == 2 * ((0.01, 0.05),)
 
 
 def test_limits_at_their_floor_stay_silent_on_a_joint_that_stands_still() -> None:

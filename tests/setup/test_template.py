@@ -89,7 +89,7 @@ def test_every_key_of_the_schema_is_written_with_its_description(
 
 
 def test_what_stands_behind_a_hash_is_accepted_when_it_is_put_in_force(urdf: Path) -> None:
-    text, config = written(urdf)
+    text, _ = written(urdf)
     opened = re.sub(r"^# (?!torque_constant)((?:\w+ = .*|\[\[.*\]\]))$", r"\1", text, flags=re.MULTILINE)
     path = urdf.parent.parent / "opened.toml"
     path.write_text(opened, encoding="utf-8")
@@ -98,7 +98,6 @@ def test_what_stands_behind_a_hash_is_accepted_when_it_is_put_in_force(urdf: Pat
         (-2.5, 2.25, 1.5),
         (0.0, 0.4, 0.5),
     ]
-    assert [(j.band_fast, j.band_slow) for j in joints] == [pytest.approx(band) for band in config.bands]
 
 
 def test_joints_come_in_the_order_of_the_description_without_followers(urdf: Path) -> None:
@@ -158,8 +157,11 @@ def test_limits_are_widened_for_a_coarse_encoder_and_a_noisy_velocity(urdf: Path
     sheet = [{"name": "turn_1", "encoder_step": 0.02, "velocity_noise_sd": 0.5, "torque_noise_sd": 2.0}]
     _, config = written(urdf, sheet=sheet)
     _, plain = written(urdf)
-    for key in ("position_jump", "contradiction", "brake_motion", "frozen_velocity", "command_error_ratio"):
+    for key in ("brake_motion", "frozen_velocity", "command_error_ratio"):
         assert getattr(config.watch, key) > getattr(plain.watch, key), key
+    # These follow from the noise by themselves.
+    for index in range(2):
+        assert max(limits[index] for limits in config.motion_limits) > plain.motion_limits[0][index]
 
 
 def weaken(urdf: Path, limit: str) -> None:

@@ -1,0 +1,1 @@
+"""Commissioning: fit the robot that stands there, from recordings of fault-free work."""

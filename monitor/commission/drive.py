@@ -1,0 +1,192 @@
+"""Recordings through the very step of the live loop, many samples a call: what a fit of the band looks at."""
+
+from __future__ import annotations
+
+from typing import Any, NamedTuple
+
+import numpy as np
+from numpy.typing import NDArray
+from scipy.ndimage import binary_dilation
+
+from monitor.errors import SessionError
+from monitor.flow.layout import FEATURES, Block, Blocks
+from monitor.flow.step import step
+from monitor.kernels.jit import kernel
+from monitor.setup.build import Setup
+
+Floats = NDArray[np.float64]
+Ints = NDArray[np.int64]
+
+# How far from what is planned a foot may meet or leave the ground [s].
+_PLAN_S = 0.1
+
+
+class Samples(NamedTuple):
+    """A recording as the wire would bring it.
+
+    Attributes
+    ----------
+    t_ns : (T,)
+        Robot clock [ns].
+    q, qd, tau : (T,m)
+        As reported, joints in the order of the wire.
+    base : (T,13)
+        Position, quaternion w-x-y-z, velocity (world), angular velocity (body); no columns without a base.
+    feet : (T,F), optional
+        1 where a foot is planned to stand; a floating base needs them.
+    """
+
+    t_ns: Ints
+    q: Floats
+    qd: Floats
+    tau: Floats
+    base: Floats
+    feet: Ints | None = None
+
+
+class Trace(NamedTuple):
+    """What the step made of it, by sample: residuals (T,n), causes (T,n,C), features, variances, ratios.
+
+    judged (T,n) is 1 where a row feels no force that is not known.
+    """
+
+    r_fast: Floats
+    r_slow: Floats
+    explained: Floats
+    cause: Floats
+    feature: Floats
+    variance: Floats
+    ratio: Floats
+    body_ratio: Floats
+    cusum: Floats
+    open: Ints
+    settling: Ints
+    judged: Ints
+
+
+def free_rows(setup: Setup, samples: Samples) -> Ints:
+    """Return 1 for each sample and row (T,n) that feels no force of a foot on the ground, else 0.
+
+    Raises
+    ------
+    SessionError
+        If a floating base comes without planned feet, or with another number of them.
+    """
+    sizes, params = setup.sizes, setup.params[0]
+    free = np.ones((len(samples.t_ns), sizes.n), np.int64)
+    if not sizes.base:
+        return free
+    if samples.feet is None or samples.feet.shape != (len(free), sizes.F):
+        raise SessionError(
+            "recording of a walking robot",
+            "no planned feet" if samples.feet is None else f"planned feet of shape {samples.feet.shape}",
+            f"one column for each of {sizes.F} feet, one row for each of {len(free)} samples",
+            "Without them nobody knows which legs carry load.",
+        )
+    early = round(_PLAN_S * 1e9 / float(params["period_ns"]))
+    for foot in range(sizes.F):
+        planned = samples.feet[:, foot] != 0
+        stands = binary_dilation(planned, iterations=early) if early else planned
+        axis = int(params["foot_axis"][foot])
+        while axis >= 0:  # up to the base, which feels every foot
+            free[stands, params["dof"][axis]] = 0
+            axis = int(params["parent"][axis])
+    return free
+
+
+@kernel
+def _take(inputs: Block, k: int, t_ns: Ints, q: Floats, qd: Floats, tau: Floats, base: Floats) -> None:
+    """Put sample k where the step expects it."""
+    x = inputs[0]
+    x["seq"] = x["seq"] + 1
+    x["t_ns"] = t_ns[k]
+    x["q"][:] = q[k]
+    x["qd"][:] = qd[k]
+    x["tau"][:] = tau[k]
+    if base.shape[1] == 13:
+        x["base_p"][:] = base[k, :3]
+        x["base_quat"][:] = base[k, 3:7]
+        x["base_v"][:] = base[k, 7:10]
+        x["base_w"][:] = base[k, 10:13]
+
+
+@kernel
+def _run(
+    params: Block, inputs: Block, state: Block, outputs: Block,
+    t_ns: Ints, q: Floats, qd: Floats, tau: Floats, base: Floats,
+    r_fast: Floats, r_slow: Floats, explained: Floats, cause: Floats, feature: Floats, variance: Floats,
+    ratio: Floats, body: Floats, cusum: Floats, is_open: Ints, settling: Ints, judged: Ints,
+) -> None:  # fmt: skip
+    s, out = state[0], outputs[0]
+    for k in range(t_ns.shape[0]):
+        _take(inputs, k, t_ns, q, qd, tau, base)
+        inputs[0]["judged"][:] = judged[k]
+        step(params, inputs, state, outputs)
+        r_fast[k] = out["r_fast"]
+        r_slow[k] = out["r_slow"]
+        explained[k] = s["explained"]
+        cause[k] = s["cause"]
+        feature[k] = s["feature"]
+        variance[k, 0] = s["var_fast"]
+        variance[k, 1] = s["var_slow"]
+        variance[k, 2] = s["explained_var"]
+        ratio[k] = out["ratio"]
+        body[k] = out["body_ratio"]
+        for i in range(ratio.shape[1]):
+            cusum[k] = max(cusum[k], s["cusum"][i, 0], s["cusum"][i, 1])
+        is_open[k] = s["event_open"]
+        settling[k] = out["settling"]
+
+
+def run(setup: Setup, samples: Samples) -> Trace:
+    """Return what the step makes of a recording, from a fresh start, all rows judged that are free.
+
+    Raises
+    ------
+    SessionError
+        As `free_rows`.
+    """
+    blocks = setup.blocks()
+    blocks.inputs["drive"] = 1
+    T, n, causes = len(samples.t_ns), setup.sizes.n, setup.params["cause_fast"].shape[-1]
+    trace = Trace(
+        r_fast=np.zeros((T, n)),
+        r_slow=np.zeros((T, n)),
+        explained=np.zeros((T, n)),
+        cause=np.zeros((T, n, causes)),
+        feature=np.zeros((T, n, FEATURES)),
+        variance=np.zeros((T, 3, n)),
+        ratio=np.zeros((T, n)),
+        body_ratio=np.zeros(T),
+        cusum=np.zeros(T),
+        open=np.zeros(T, np.int64),
+        settling=np.zeros(T, np.int64),
+        judged=free_rows(setup, samples),
+    )
+    arrays: tuple[Any, ...] = (*samples[:5], *trace)
+    _run(*blocks, *arrays)
+    return trace
+
+
+@kernel
+def _until(
+    params: Block, inputs: Block, state: Block, outputs: Block, k: int, looked_for: int,
+    t_ns: Ints, q: Floats, qd: Floats, tau: Floats, base: Floats,
+) -> int:  # fmt: skip
+    while k < t_ns.shape[0]:
+        _take(inputs, k, t_ns, q, qd, tau, base)
+        step(params, inputs, state, outputs)
+        k += 1
+        if outputs[0]["notice"] & looked_for:
+            break
+    return k
+
+
+def until(blocks: Blocks, samples: Samples, k: int, looked_for: int) -> int:
+    """Step from sample k on until the step takes notice of what is looked for (bits of `Notice`).
+
+    Which rows are judged is left to the caller (`inputs.judged`). Returns the number of samples stepped since
+    the beginning: the last one is that of the notice.
+    """
+    arrays: tuple[Any, ...] = samples[:5]
+    return int(_until(*blocks, k, looked_for, *arrays))

@@ -1,0 +1,88 @@
+"""What explanations have to know of a robot, and what each declares of its candidates."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from typing import NamedTuple
+
+import numpy as np
+from numpy.typing import NDArray
+
+Floats = NDArray[np.float64]
+Ints = NDArray[np.int64]
+
+
+@dataclass(frozen=True, eq=False)
+class Outline:
+    """A robot as explanations see it; rows are those of v.
+
+    Attributes
+    ----------
+    joints : tuple of str
+        Names of the joint rows, after the `base` rows of the base (6 or 0).
+    units : tuple of str
+        N m or N, by joint row.
+    rated, coulomb, viscous : (joints,)
+        Rated torque, normal friction [N m, N m, N m s/rad].
+    bodies : tuple of str
+        Links a contact may be on.
+    radius : (bodies,)
+        Distance of the surface from the body's centre, root mean square [m].
+    telling : (bodies,)
+        Force that loads some joint with its rated torque, arm outstretched [N].
+    feet : tuple of str
+        Names of the feet.
+    weight : float
+        Of the whole robot [N].
+    carrier, payload : str, float
+        Link that carries loads ("" for none), largest expected load [kg].
+    rates : mapping of str to float
+        How often things of each family happen, per hour of motion.
+    """
+
+    joints: tuple[str, ...]
+    units: tuple[str, ...]
+    base: int
+    rated: Floats
+    coulomb: Floats
+    viscous: Floats
+    bodies: tuple[str, ...]
+    radius: Floats
+    telling: Floats
+    feet: tuple[str, ...]
+    weight: float
+    carrier: str
+    payload: float
+    rates: dict[str, float]
+
+
+class Candidate(NamedTuple):
+    """One way an explanation may look: so many columns, their prior standard deviations, how they move.
+
+    `number` is what `rows` of the family gets; `time_s` is None for constants, else the time of a Matérn 3/2
+    process about zero or, for the first `settles` columns, about a value of their own, with the share
+    `settled` of the prior's variance. `share` is the part of the explanation's rate; it ends by chance within
+    `lasts_s` or so. A `one_sided` constant cannot be negative.
+    """
+
+    family: str
+    number: int
+    detail: str
+    sd: tuple[float, ...]
+    unit: str
+    share: float
+    time_s: float | None = None
+    settles: int = 0
+    settled: float = 0.003
+    lasts_s: float = 60.0
+    one_sided: bool = False
+
+
+class Explanation(NamedTuple):
+    """One thing that may have happened, told in as many ways as it has candidates."""
+
+    verdict: str
+    joint: str | None
+    link: str | None
+    rate_per_h: float
+    candidates: tuple[Candidate, ...]
