@@ -1,8 +1,8 @@
 """How friction bends at low speed: what is left of the slow residual, against velocity, joint by joint.
 
 The fit of the model knows Coulomb and viscous friction only, and leaves out the windows in which a joint is
-slow. Here `r = -(c0 tanh(v/v0) + c1 tanh(v/(w1 v0)) + c2 tanh(v/(w2 v0)) + d v)` is fitted to the slow residual
-of all moving samples, by least squares with large residuals held back.
+slow. Here `r = -(c0 tanh(v/v0) + c1 tanh(v/(w1 v0)) + c2 tanh(v/(w2 v0)) + d v)` is fitted to the slow
+residual of all moving samples, by least squares with large residuals held back.
 """
 
 from __future__ import annotations
