@@ -11,8 +11,6 @@ from monitor.kernels.jit import kernel
 
 _JOINT_SPACE, _FIRST_ORDER = int(Form.JOINT_SPACE), int(Form.FIRST_ORDER)
 _EVENT_OPENED, _EVENT_ENDED = int(Notice.EVENT_OPENED), int(Notice.EVENT_ENDED)
-# Variance of a row that must not count, in squares of its rated torque.
-_BLIND = 1e4
 _STANDING = 0.1
 _STUCK = 10.0  # the torque that a standing joint hides does not average out
 # A single block counts at most so many sd: the sums are for what lasts.
@@ -39,7 +37,7 @@ def into_band(params: Block, inputs: Block, state: Block, outputs: Block) -> Non
         s["left"][i] = s["r_fast"][i] - s["explained"][i]
         s["white"][i] = s["explained_var"][i]
         if x["judged"][i] == 0:
-            s["white"][i] += _BLIND * c["rated"][i] ** 2
+            s["white"][i] += band.BLIND * c["rated"][i] ** 2
     band.covariance(s["var_fast"], c["rho"], s["white"], s["R"])
     lasting.widen(state, s["R"])
     evidence.factor(s["R"], s["R_factor"])

@@ -17,7 +17,6 @@ from monitor.kernels.dynamics import dynamics
 from monitor.kernels.jit import kernel
 
 _WEIGHED = int(Notice.WEIGHED)
-_BLIND = 1e4
 _STEP = 1e-5  # rad or m: for the slope of inverse dynamics
 _IMPOSSIBLE = -1e9  # a log evidence
 _RISE_S = 0.005  # of the fast residual
@@ -248,7 +247,7 @@ def _noise(params: Block, inputs: Block, state: Block, entry: int) -> None:
         s["x_y"][i] = (1.0 - c["slow_share"][i]) * var + 0.01 * stands
         s["x_spread"][i] = rough / 16.0
         if x["judged"][i] == 0:
-            s["x_spread"][i] += _BLIND * c["rated"][i] ** 2
+            s["x_spread"][i] += band.BLIND * c["rated"][i] ** 2
     band.covariance(s["x_y"], c["rho"], s["x_spread"], s["R"])
     lasting.widen(state, s["R"])
 

@@ -255,7 +255,6 @@ def params_fields(s: Sizes) -> list[Field]:
         ("slow_keep", f8, ()),  # its correlation over one evidence step
         ("model_error", f8, ()),  # share of the residual itself
         ("track_sd", f8, (n, 3)),  # prior of added Coulomb, viscous and constant friction
-        ("track_limit", f8, (n, 3)),  # beyond it the friction is a fault
         ("track_keep", f8, ()),  # what is kept over one evidence step
         ("track_noise", f8, ()),  # how many evidence steps count as one
         ("track_clip", f8, ()),  # sd
@@ -278,7 +277,6 @@ def params_fields(s: Sizes) -> list[Field]:
         ("body_centre", f8, (s.B, 3)),  # m, body frame
         ("foot_axis", i8, (s.F,)),
         ("foot_point", f8, (s.F, 3)),
-        ("foot_sd", f8, ()),  # N: of a planned foot's force
         ("load_axis", i8, ()),
         ("load_centre", f8, (3,)),
         ("other_sd", f8, (n,)),  # N m: of something else

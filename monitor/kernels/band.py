@@ -22,6 +22,9 @@ Ints = NDArray[np.int64]
 FLOOR, NOISE, STANDS, STANDS_SQUARED, TORQUE, VELOCITY, INERTIA, CREEPS, CRAWLS = range(9)
 CAUSES = 9
 
+# Variance of a row that must not count, in squares of its rated torque.
+BLIND = 1e4
+
 
 @kernel
 def causes(

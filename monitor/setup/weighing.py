@@ -168,7 +168,6 @@ def fill_band(params: Any, band: Band) -> None:
     params["cause_fast"], params["cause_slow"] = band.fast, band.slow
     params["rho"], params["slow_share"] = band.rho, band.slow_share
     params["track_sd"] = band.track_sd
-    params["track_limit"] = 4.0 * band.track_sd
     params["row_limit"], params["body_limit"] = band.row_limit, band.body_limit
     params["cusum_sd"], params["cusum_limit"] = band.cusum_sd, band.cusum_limit
     params["cusum_reference"] = 2.0
