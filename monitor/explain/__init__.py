@@ -48,7 +48,7 @@ def fill(
     elif family == ACTUATOR:
         actuator.rows(index, feature, H)
     elif family == SENSOR:
-        position_sensor.rows(index, slope, M, H)
+        position_sensor.rows(index, slope, M, feature, H)
     elif family == LOAD:
         load.rows(load_axis, load_centre, parent, dof, S, V, Vd, R, p, H)
     else:

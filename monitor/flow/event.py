@@ -13,6 +13,7 @@ _JOINT_SPACE, _FIRST_ORDER = int(Form.JOINT_SPACE), int(Form.FIRST_ORDER)
 _EVENT_OPENED, _EVENT_ENDED = int(Notice.EVENT_OPENED), int(Notice.EVENT_ENDED)
 _STANDING = 0.1
 _STUCK = 10.0  # the torque that a standing joint hides does not average out
+_HIDES = 0.5  # of Coulomb friction
 # A single block counts at most so many sd: the sums are for what lasts.
 _CLIP = 6.0
 
@@ -197,6 +198,8 @@ def _remember(params: Block, state: Block) -> bool:
     s["ring_stand"][k] = s["var_stand"]
     for i in range(s["left"].shape[0]):
         s["ring_extra"][k, i] = s["explained_var"][i]
+        # Whatever acts on the robot may also turn the friction that a standing joint hides.
+        s["ring_hidden"][k, i] = (_HIDES * c["coulomb"][i] * s["cause"][i, band.STANDS]) ** 2
     s["ring_feature"][k] = s["feature"]
     s["ring_head"] += 1
     s["ring_held"] = min(s["ring_held"] + 1, RING)

@@ -11,6 +11,7 @@ candidates (ways an explanation may look).
 
 from __future__ import annotations
 
+from collections.abc import Mapping
 from dataclasses import dataclass
 from enum import IntEnum
 from functools import cache
@@ -83,6 +84,7 @@ class Facts:
     row_needs: NDArray[np.bool_]  # (m,m): which joints on the wire enter which joint row
     tree: Tree
     explanations: tuple[Explanation, ...]  # in the order of `outputs.probability`, after nothing and other
+    twins: Mapping[str, str]  # by link: the only joint that forces on it load
     certainty: float  # probability from which on a verdict is given
     tool: Tool | None
     wait_ns: int  # longest wait for a missing sample
@@ -303,9 +305,9 @@ def params_fields(s: Sizes) -> list[Field]:
         ("smooth_ends", f8, (s.Q,)),
         ("smooth_sized", i8, (s.Q,)),  # components that make up the size: a force's three, or the first
         ("smooth_settles", i8, (s.Q,)),
-        ("smooth_settled", f8, (s.Q,)),
         ("smooth_one_sided", i8, (s.Q,)),
-        ("smooth_dt_T", f8, (s.Q,)),  # evidence step over time constant
+        ("smooth_dt_T", f8, (s.Q, SMOOTH)),  # evidence step over time constant
+        ("smooth_moves", f8, (s.Q, SMOOTH)),  # share of the prior's variance with which a component goes on
         # limits of credibility, in joint order of the wire
         ("q_min", f8, (m,)),
         ("q_max", f8, (m,)),
@@ -491,6 +493,7 @@ def state_fields(s: Sizes) -> list[Field]:
         ("ring_var", f8, (RING, n)),
         ("ring_stand", f8, (RING, n)),
         ("ring_extra", f8, (RING, n)),
+        ("ring_hidden", f8, (RING, n)),  # (N m)²: friction that a standing joint may hide
         ("ring_feature", f8, (RING, n, FEATURES)),
         ("ring_loud", i8, (RING,)),  # 1: something stood out
         ("ring_head", i8, ()),  # entries written so far
@@ -534,6 +537,7 @@ def state_fields(s: Sizes) -> list[Field]:
         ("fault_index", i8, (FAULTS,)),
         ("fault_columns", i8, (FAULTS,)),
         ("fault_theta", f8, (FAULTS, LASTING)),
+        ("fault_free", f8, (FAULTS,)),  # (N m)²: variance of torque that varies freely
         ("fault_P", f8, (FAULTS, LASTING, LASTING)),
         ("fault_H", f8, (FAULTS, n, SMOOTH)),
         ("fault_idle_s", f8, (FAULTS,)),  # time it was not felt though it should have been
@@ -550,6 +554,8 @@ def state_fields(s: Sizes) -> list[Field]:
         ("null_log", f8, ()),
         ("quiet_s", f8, (n,)),  # slow noise since the residual was last loud
         ("quiet_P", f8, (n, n)),
+        ("x_quiet_s", f8, (n,)),
+        ("x_quiet_P", f8, (n, n)),
         ("quiet_log", f8, ()),  # of this step: evidence of nothing, whatever was before
         ("other_s", f8, (n,)),
         ("other_P", f8, (n, n)),

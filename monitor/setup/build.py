@@ -378,6 +378,7 @@ def _facts(where: str, tree: Tree, config: Config, explanations: tuple[Explanati
         tree=tree,
         row_needs=((coupling != 0.0) | (np.abs(np.linalg.inv(coupling).T) > 1e-12))[order],
         explanations=explanations,
+        twins=weighing.twins(tree),
         certainty=config.explain.certainty,
         tool=tool,
         wait_ns=round(1e9 * watch.wait_periods / config.input.rate_hz),

@@ -56,6 +56,7 @@ def outline(tree: Tree, config: Config, rated: Floats, model: Any) -> Outline:
         rated=rated[base:],
         coulomb=model.coulomb[base:],
         viscous=model.viscous[base:],
+        silent=tuple(silent(tree, config)),
         bodies=body.names,
         radius=body.radius,
         telling=np.array(
@@ -74,10 +75,10 @@ def cannot_tell(tree: Tree, config: Config) -> list[str]:
     return [*_like_an_actuator(tree), *_without_effect(tree, config), *_behind_the_gear(config)]
 
 
-def _like_an_actuator(tree: Tree) -> list[str]:
-    """Say which joints are the only ones that any force on some link loads: its Jacobian has a single row."""
+def twins(tree: Tree) -> dict[str, str]:
+    """Return by link the only joint that forces on it load: its Jacobian has a single row."""
     base = tree.n - len(tree.joints)
-    links: dict[int, list[str]] = {}
+    found = {}
     body = bodies(tree)
     for name, axis in zip(body.names, body.axis.tolist(), strict=True):
         rows = set()
@@ -85,17 +86,25 @@ def _like_an_actuator(tree: Tree) -> list[str]:
             rows.add(int(tree.arrays.dof[axis]))
             axis = int(tree.arrays.parent[axis])
         if len(rows) == 1:
-            links.setdefault(rows.pop(), []).append(name)
+            found[name] = tree.joints[rows.pop() - base]
+    return found
+
+
+def _like_an_actuator(tree: Tree) -> list[str]:
+    """Say which faults of an actuator cannot be told from a force on some link."""
+    links: dict[str, list[str]] = {}
+    for link, joint in twins(tree).items():
+        links.setdefault(joint, []).append(link)
     return [
-        f"a force that loads only joint {tree.joints[row - base]!r}, as any on {_listed(names)} does, cannot "
+        f"a force that loads only joint {joint!r}, as any on {_listed(names)} does, cannot "
         "be told from a fault of its actuator; a torque sensor at the joint's link side or a force sensor at "
         "the base would settle it"
-        for row, names in sorted(links.items())
+        for joint, names in links.items()
     ]
 
 
-def _without_effect(tree: Tree, config: Config) -> list[str]:
-    """Say which joints may be anywhere: gravity and inertia do not depend on them, as on a vertical axis."""
+def silent(tree: Tree, config: Config) -> list[str]:
+    """Return the joints on which neither gravity nor inertia depends, as on one with a vertical axis."""
     robot = Robot(tree, config.robot.gravity_vector)
     rng = np.random.default_rng(0)
     base = tree.n - len(tree.joints)
@@ -109,7 +118,12 @@ def _without_effect(tree: Tree, config: Config) -> list[str]:
             moved[i] |= any(
                 np.abs(b - a).max() > _UNCHANGED * np.abs(a).max() for a, b in zip(here, there, strict=True)
             )
-    names = [joint for joint, once in zip(tree.joints, moved, strict=True) if not once]
+    return [joint for joint, once in zip(tree.joints, moved, strict=True) if not once]
+
+
+def _without_effect(tree: Tree, config: Config) -> list[str]:
+    """Say of which joints an offset of the position is not noticed."""
+    names = silent(tree, config)
     if not names:
         return []
     return [
@@ -248,10 +262,11 @@ def _fill_candidates(params: Any, found: Candidates, dt: float) -> None:
                 params["constant_sd"][0, k] = one.sd[0]
             else:
                 params["smooth_columns"][0, k] = len(one.sd)
-                params["smooth_sd"][0, k] = one.sd + (0.0,) * (SMOOTH - len(one.sd))
-                params["smooth_dt_T"][0, k] = dt / one.time_s
+                unused = (0.0,) * (SMOOTH - len(one.sd))
+                params["smooth_sd"][0, k] = one.sd + unused
+                params["smooth_dt_T"][0, k] = dt / np.array(one.times_s + (1.0,) * len(unused))
+                params["smooth_moves"][0, k] = one.moves + unused
                 params["smooth_settles"][0, k] = one.settles
-                params["smooth_settled"][0, k] = one.settled
                 params["smooth_sized"][0, k] = 3 if one.family in ("contact", "touchdown") else 1
 
 
