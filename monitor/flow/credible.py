@@ -25,6 +25,7 @@ _OK, _CLOCK = int(Signal.OK), int(Signal.CLOCK)
 _JUMP, _FROZEN, _CONTRADICTION = int(Signal.JUMP), int(Signal.FROZEN), int(Signal.CONTRADICTION)
 _NOISE = int(Signal.NOISE)
 _BAD_SAMPLE = int(Notice.BAD_SAMPLE)
+_BEGINS_NS = 100_000_000  # noise so early in an event may be all there is to it
 _START = 2  # value of `inputs.rebase` after a start or restart
 
 
@@ -143,6 +144,8 @@ def motion_fault(params: Block, inputs: Block, state: Block, dt_ns: int) -> tupl
             s["swing"][i] = keep * s["swing"][i] + step_qd
         noisy = score_noise(params, inputs, state, i, step, bend, step_qd - s["step_qd"][i], dt_ns)
         noisy = score_torque(params, inputs, state, i, step_tau - s["step_tau"][i], dt_ns) or noisy
+        if max(s["score_q"][i], s["score_qd"][i], s["score_tau"][i]) > signal.SUSPECT:
+            s["event_noisy"] |= int(x["t_ns"] - s["event_onset_ns"] < _BEGINS_NS)
         s["step_q"][i], s["step_qd"][i], s["step_tau"][i] = step, step_qd, step_tau
         if fault == _OK:
             if jumps:

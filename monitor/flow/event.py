@@ -128,7 +128,7 @@ def _open(state: Block, outputs: Block, row: int, onset_ns: int) -> None:
     s = state[0]
     if s["event_open"] == 0:
         outputs[0]["notice"] |= _EVENT_OPENED
-    s["event_open"], s["weigh_afresh"] = 1, 1
+    s["event_open"], s["weigh_afresh"], s["event_noisy"] = 1, 1, 0
     s["event_onset_ns"] = onset_ns
     s["event_loud_ns"], s["event_over_ns"] = s["at_ns"], s["at_ns"]
     s["event_row"], s["event_ratio"], s["event_size"] = row, 0.0, s["left"][row]

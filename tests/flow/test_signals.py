@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import math
 from collections.abc import Callable
+from dataclasses import replace
 from typing import Any
 
 import numpy as np
@@ -15,6 +16,7 @@ from numpy.typing import NDArray
 
 from monitor.flow.credible import credible
 from monitor.flow.layout import Signal
+from monitor.kernels import band
 from monitor.setup.build import Setup
 from tests.flow.rig import (
     PAIR,
@@ -654,6 +656,24 @@ def test_a_burst_of_noise_is_named_with_its_joint_and_ends_with_it(pair_setup: S
         rig.sample(encoded(place), speed, tau)
     assert {(b["kind"], b["detail"], b["joint"]) for b in rig.alarms()} == {("signal", "noise", "lower")}
     assert 1 <= int(rig.state["bad"][Signal.NOISE]) < 40
+    assert rig.standing() == set()
+
+
+def test_an_event_that_begins_with_noise_is_held_to_be_nothing_else(pair_setup: Setup) -> None:
+    # In a narrow band the noise stands out before it is named.
+    rng, fast = np.random.default_rng(22), pair_setup.band.fast.copy()
+    fast[:, band.FLOOR] *= 0.1
+    rig, q = Rig(pair_setup.with_band(replace(pair_setup.band, fast=fast))), np.full(2, 0.3)
+    weight = Mover(PAIR, (0.3, 0.1)).gravity_torque(q)
+    for k in range(3500):
+        louder = 20.0 if 2000 <= k < 2400 else 1.0
+        rig.sample(
+            encoded(q), louder * VELOCITY_SD * rng.standard_normal(2), weight + 0.1 * rng.standard_normal(2)
+        )
+    said = [m.body for m in rig.messages if m.topic == "verdict"]
+    assert {body["verdict"] for body in said} == {"undecided"}
+    assert not said[-1]["open"]
+    assert {b["kind"] for b in rig.alarms()} == {"unexplained-torque", "signal"}
     assert rig.standing() == set()
 
 

@@ -72,7 +72,7 @@ def test_a_blow_however_hard_is_no_noise(
     k = np.arange(200.0)
     readings = velocity + height * np.clip((k - 80.3) / width, 0.0, 1.0)
     readings += bounce * height * np.clip((k - 80.3 - width - pause) / width, 0.0, 1.0)
-    assert scores(readings, 1e-3).max() < signal.NOISY
+    assert scores(readings, 1e-3).max() < signal.SUSPECT
 
 
 def test_ringing_of_a_structure_is_no_noise_but_at_a_third_of_the_sample_rate_it_is() -> None:
