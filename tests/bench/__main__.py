@@ -1,4 +1,4 @@
-"""All benchmarks, side by side in one run, as ratios:  python -m tests.bench [dynamics|evidence|sample|replay|minute]
+"""All benchmarks, side by side in one run, as ratios:  python -m tests.bench [dynamics|evidence|sample|…]
 
 Speed is reported here and asserted nowhere: a shared machine makes times, not ratios, wander.
 """
