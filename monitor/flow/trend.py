@@ -16,11 +16,7 @@ from monitor.flow.verdict import Size, Verdict
 from monitor.kernels import band, tracking
 from monitor.kernels.jit import kernel
 
-DETAILS = (
-    actuator.DETAILS[actuator.COULOMB],
-    actuator.DETAILS[actuator.VISCOUS],
-    actuator.DETAILS[actuator.OFFSET],
-)
+DETAILS = actuator.DETAILS[actuator.COULOMB :]
 _DRIFTED = int(Notice.DRIFTED)
 _STANDING = 0.1  # what a joint hides while it stands is not told from an offset
 _CALM = 0.8  # share of the limit below which a drift is over
@@ -70,8 +66,5 @@ def verdict(facts: Facts, blocks: Blocks, place: int) -> Verdict:
     s, limit = blocks.state[0], float(blocks.params[0]["trend_limit"][row, a])
     share, sd = float(s["trend"][row, a]), float(s["trend_sd"][row, a])
     probability = 0.5 * math.erfc((1.0 - abs(share)) / (math.sqrt(2.0) * sd))
-    unit = facts.units[row]
-    if DETAILS[a] == "viscous-friction":
-        unit = "N m s/rad" if unit == "N m" else "N s/m"
-    size = Size(share * limit, unit, sd * limit)
+    size = Size(share * limit, actuator.units(facts.units[row])[actuator.COULOMB + a], sd * limit)
     return Verdict("actuator", DETAILS[a], facts.rows[row], probability=probability, size=size)

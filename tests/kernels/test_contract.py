@@ -52,7 +52,7 @@ def setup_of(base: str, form: str) -> Setup:
 
 
 def test_no_kernel_allocates() -> None:
-    figures = json.loads(driven("allocations", NUMBA_NRT_STATS="1"))
+    figures = json.loads(driven("allocations"))
     once, often = figures.pop("control")
     assert (once, often) == (1, 1001)
     assert len(figures) == 12
