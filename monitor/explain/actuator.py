@@ -37,7 +37,6 @@ def explanations(outline: Outline) -> list[Explanation]:
     found = []
     for i, joint in enumerate(outline.joints):
         rated, unit = float(outline.rated[i]), outline.units[i]
-        friction = "N m s/rad" if unit == "N m" else "N s/m"
         sds = (
             LOSS_SD,
             FRICTION_SD * max(float(outline.coulomb[i]), COULOMB_FLOOR * rated),
@@ -46,9 +45,7 @@ def explanations(outline: Outline) -> list[Explanation]:
         )
         row = outline.base + i
         candidates = []
-        for kind, (detail, sd, unit_) in enumerate(
-            zip(DETAILS, sds, ("1", unit, friction, unit), strict=True)
-        ):
+        for kind, (detail, sd, unit_) in enumerate(zip(DETAILS, sds, units(unit), strict=True)):
             index = 8 * row + kind
             one_sided = kind != OFFSET
             candidates += [
@@ -61,6 +58,11 @@ def explanations(outline: Outline) -> list[Explanation]:
         ]
         found.append(Explanation("actuator", joint, None, rate, tuple(candidates)))
     return found
+
+
+def units(unit: str) -> tuple[str, str, str, str]:
+    """Return the units of the four constants for a joint whose torque (force) is in `unit`."""
+    return "1", unit, "N m s/rad" if unit == "N m" else "N s/m", unit
 
 
 @kernel

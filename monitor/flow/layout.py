@@ -156,6 +156,7 @@ class Notice(IntEnum):
     TORQUE_AT_LIMIT = 16
     DISOBEYED = 32
     GAP = 64
+    DRIFTED = 1024
 
 
 # What an event may be held to be. These names are stable; programs read them.
@@ -174,6 +175,7 @@ KINDS = {
     "brake": "high",
     "robot": "high",
     "drive": "medium",
+    "drift": "medium",
     "signal": "medium",
     "wire": "medium",
     "system": "medium",
@@ -260,6 +262,11 @@ def params_fields(s: Sizes) -> list[Field]:
         ("track_keep", f8, ()),  # what is kept over one evidence step
         ("track_noise", f8, ()),  # how many evidence steps count as one
         ("track_clip", f8, ()),  # sd
+        # the trend of friction over hours: limits of added Coulomb, viscous and constant friction
+        ("trend_limit", f8, (n, 3)),
+        ("trend_keep", f8, ()),  # what is kept over one evidence step
+        ("trend_sure", f8, ()),  # sd beyond the limit that make it certain
+        ("trend_s", f8, ()),  # for how long, before it counts
         # events
         ("row_limit", f8, ()),  # |residual| / sd of one row that opens an event
         ("body_limit", f8, ()),  # of all rows: r' R^-1 r
@@ -326,6 +333,7 @@ def params_fields(s: Sizes) -> list[Field]:
         ("frozen_ns", i8, ()),
         ("bend_q", f8, (m,)),  # rad, rad/s: second differences of q and qd that noise does not reach
         ("bend_qd", f8, (m,)),
+        ("bend_ratio", f8, ()),  # standard deviations in these limits
         ("noise_qd", f8, (m,)),  # rad/s: sd of the velocity
         ("noise_tau", f8, (m,)),  # sd of the torque on the wire; infinite where none is configured
         ("wire_row", i8, (m,)),  # row of v of the joint on the wire, -1 behind a coupling
@@ -444,8 +452,14 @@ def state_fields(s: Sizes) -> list[Field]:
         ("step_tau", f8, (m,)),
         ("bend_q", f8, (m,)),  # last second differences
         ("bend_qd", f8, (m,)),
+        ("bend_tau", f8, (m,)),
         ("score_q", f8, (m,)),  # how much too noisy the reading is
         ("score_qd", f8, (m,)),
+        ("score_tau", f8, (m,)),
+        # second differences of the torque: the largest mean square of some time, and the mean now
+        ("rough_tau", f8, (m,)),
+        ("rough_sum", f8, (m,)),
+        ("rough_count", i8, (m,)),
         ("same_ns", i8, (m,)),  # how long position and velocity have repeated exactly
         ("copy_ns", i8, ()),  # how long all readings have
         ("run_qd", i8, (m,)),  # exact repetitions in a row at standstill
@@ -470,6 +484,13 @@ def state_fields(s: Sizes) -> list[Field]:
         ("var_stand", f8, (n,)),  # part of var_fast
         ("track", f8, (n, 3)),
         ("track_P", f8, (n, 3, 3)),
+        # all in shares of the limits: what was seen in the memory of the trend, its estimate and sd
+        ("trend_info", f8, (n, 3, 3)),
+        ("trend_sum", f8, (n, 3)),
+        ("trend", f8, (n, 3)),
+        ("trend_sd", f8, (n, 3)),
+        ("trend_beyond_s", f8, (n, 3)),  # time seen since it is certainly beyond its limit
+        ("drifted", i8, (3 * n,)),  # 1: for so long that it is said; 3 row + parameter
         ("explained", f8, (n,)),  # N m that tracked friction and lasting faults explain
         ("explained_var", f8, (n,)),
         ("tracked", f8, (n,)),  # N m of it by tracked friction
@@ -587,6 +608,7 @@ def state_fields(s: Sizes) -> list[Field]:
         ("event_quiet_ns", i8, ()),  # last time all was well inside
         ("event_loud_ns", i8, ()),  # last time it was not
         ("weigh_afresh", i8, ()),  # 1: all evidence so far is of no account
+        ("event_noisy", i8, ()),  # 1: a reading was suspiciously noisy when it began
         ("event_drifted", i8, ()),  # 1: opened by the sums, small and lasting
         ("event_row", i8, ()),  # row with the largest ratio so far
         ("event_ratio", f8, ()),

@@ -89,8 +89,11 @@ def leading(facts: Facts, blocks: Blocks) -> Leading:
 
 
 def _suspected(blocks: Blocks) -> bool:
-    """Whether a position has stood for a while that its velocity says moves: soon it may be called frozen."""
-    return bool(blocks.state[0]["still_ns"].max() > blocks.params[0]["frozen_ns"] // _SUSPECTED)
+    """Whether the signal itself may be all there is: a reading that was noisy when the event began, or a
+    position that has stood for a while although its velocity says it moves, and may soon be called frozen."""
+    s = blocks.state[0]
+    stands = s["still_ns"].max() > blocks.params[0]["frozen_ns"] // _SUSPECTED
+    return bool(s["event_noisy"] or stands)
 
 
 def _has_a_twin(facts: Facts, blocks: Blocks, k: int) -> bool:

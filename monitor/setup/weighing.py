@@ -3,12 +3,14 @@
 from __future__ import annotations
 
 import math
+from statistics import NormalDist
 from typing import Any, NamedTuple
 
 import numpy as np
 from numpy.typing import NDArray
 
 from monitor import explain
+from monitor.explain import actuator
 from monitor.explain.outline import Candidate, Explanation, Outline
 from monitor.flow.layout import LASTING, SMOOTH, Form, Sizes
 from monitor.kernels import ledger
@@ -200,6 +202,7 @@ def fill_evidence(params: Any, tree: Tree, config: Config, found: Candidates) ->
     params["slow_keep"] = math.exp(-dt / SLOW_S)
     params["track_keep"] = math.exp(-dt / TRACK_S)
     params["track_noise"], params["track_clip"] = TRACK_NOISE, TRACK_CLIP
+    _fill_trend(params, config, dt)
     params["least"] = LEAST
     params["cusum_samples"] = max(1, round(BLOCK_S / period_s))
     params["other_sd"] = OTHER * params["rated"]
@@ -214,6 +217,19 @@ def fill_evidence(params: Any, tree: Tree, config: Config, found: Candidates) ->
         params["of_sd"][0, number] = _lasting_sd(explanation)
     rates = [settings.nothing_per_h, settings.other_per_h, *(x.rate_per_h for x in found.explanations)]
     params["log_rate"] = np.log(rates)
+
+
+def _fill_trend(params: Any, config: Config, dt: float) -> None:
+    """Set how far friction may leave the commissioned one, and how certainly and for how long."""
+    settings, rated = config.explain, params["rated"][0]
+    for a, (name, floor) in enumerate(
+        (("coulomb", actuator.COULOMB_FLOOR), ("viscous", actuator.VISCOUS_FLOOR))
+    ):
+        params["trend_limit"][0, :, a] = settings.friction_drift * np.maximum(params[name][0], floor * rated)
+    params["trend_limit"][0, :, 2] = settings.offset_drift * rated
+    params["trend_keep"] = math.exp(-dt / settings.drift_memory_s)
+    params["trend_sure"] = NormalDist().inv_cdf(settings.certainty)
+    params["trend_s"] = settings.drift_s
 
 
 def _load_centre(tree: Tree, config: Config, axis: int) -> Floats:
