@@ -25,7 +25,8 @@ _OK, _CLOCK = int(Signal.OK), int(Signal.CLOCK)
 _JUMP, _FROZEN, _CONTRADICTION = int(Signal.JUMP), int(Signal.FROZEN), int(Signal.CONTRADICTION)
 _NOISE = int(Signal.NOISE)
 _BAD_SAMPLE = int(Notice.BAD_SAMPLE)
-_BEGINS_NS = 100_000_000  # noise so early in an event may be all there is to it
+# Noise so early in an event, or a fault of a signal that shows so soon, may be all there is to it.
+_BEGINS_NS, _SHOWS_NS = 100_000_000, 1_000_000_000
 _START = 2  # value of `inputs.rebase` after a start or restart
 
 
@@ -78,6 +79,7 @@ def credible(params: Block, inputs: Block, state: Block, outputs: Block) -> bool
     s["bad"][fault] += 1
     if fault != _OK:
         out["notice"] |= _BAD_SAMPLE
+        s["event_doubtful"] |= int(fault != _CLOCK and x["t_ns"] - s["event_onset_ns"] < _SHOWS_NS)
     return bool(fault == _OK)
 
 
@@ -145,7 +147,7 @@ def motion_fault(params: Block, inputs: Block, state: Block, dt_ns: int) -> tupl
         noisy = score_noise(params, inputs, state, i, step, bend, step_qd - s["step_qd"][i], dt_ns)
         noisy = score_torque(params, inputs, state, i, step_tau - s["step_tau"][i], dt_ns) or noisy
         if max(s["score_q"][i], s["score_qd"][i], s["score_tau"][i]) > signal.SUSPECT:
-            s["event_noisy"] |= int(x["t_ns"] - s["event_onset_ns"] < _BEGINS_NS)
+            s["event_doubtful"] |= int(x["t_ns"] - s["event_onset_ns"] < _BEGINS_NS)
         s["step_q"][i], s["step_qd"][i], s["step_tau"][i] = step, step_qd, step_tau
         if fault == _OK:
             if jumps:

@@ -121,7 +121,9 @@ def judge(params: Block, inputs: Block, state: Block, outputs: Block) -> None:
     if drifts or ratio > c["quiet_ratio"]:
         s["event_over_ns"] = t_ns
     elif t_ns - s["event_over_ns"] > c["quiet_ns"]:
-        end(state, outputs)
+        stays = lasting.outlasts(params, state) and lasting.confirm(params, state, outputs, s["sure_of"])
+        if not stays:
+            end(params, state, outputs)
 
 
 @kernel
@@ -129,16 +131,17 @@ def _open(state: Block, outputs: Block, row: int, onset_ns: int) -> None:
     s = state[0]
     if s["event_open"] == 0:
         outputs[0]["notice"] |= _EVENT_OPENED
-    s["event_open"], s["weigh_afresh"], s["event_noisy"] = 1, 1, 0
+    s["event_open"], s["weigh_afresh"], s["event_doubtful"] = 1, 1, 0
     s["event_onset_ns"] = onset_ns
     s["event_loud_ns"], s["event_over_ns"] = s["at_ns"], s["at_ns"]
     s["event_row"], s["event_ratio"], s["event_size"] = row, 0.0, s["left"][row]
 
 
 @kernel
-def end(state: Block, outputs: Block) -> None:
-    """Close the event and begin the sums anew."""
+def end(params: Block, state: Block, outputs: Block) -> None:
+    """Close the event and begin the sums anew, and the tracking of friction: it may have learnt of the cause."""
     s = state[0]
+    tracking.forget(params[0]["track_sd"], s["track"], s["track_P"])
     s["event_open"] = 0
     s["weighed"] = 0
     s["cusum"][:] = 0.0

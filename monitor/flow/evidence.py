@@ -105,9 +105,10 @@ def weigh(params: Block, inputs: Block, state: Block, outputs: Block) -> None:
     behind = s["ring_head"] - s["weigh_next"] > 1
     # While nothing stands out there is nothing to explain: the cause may have ended.
     passed = s["weigh_stage"] == 0 and s["at_ns"] - s["event_loud_ns"] > _PAUSE_NS
-    if passed and s["sure_of"] >= 0 and not lasting.may_last(c["of_family"][s["sure_of"]]):
+    lasts = s["sure_of"] >= 0 and lasting.may_last(c["of_family"][s["sure_of"]])
+    if passed and s["sure_of"] >= 0 and not lasts:
         s["concluded"] = 1
-    if s["concluded"] != 0 or passed:
+    if s["concluded"] != 0 or (passed and not lasts):
         s["weigh_next"] = s["ring_head"]
         return
     for _ in range(c["stages_at_once"] * (2 if behind else 1)):
@@ -143,7 +144,7 @@ def _conclude(params: Block, inputs: Block, state: Block, outputs: Block) -> boo
     for i in range(3, p.shape[0]):
         if p[i] > p[best]:
             best = i
-    if p[best] < c["sure"]:
+    if p[best] < c["sure"] or s["event_doubtful"] != 0:
         s["sure_of"] = -1
         return False
     best -= 2

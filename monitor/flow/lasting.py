@@ -12,6 +12,7 @@ import math
 
 from monitor.explain import ACTUATOR, LOAD, SENSOR, actuator, fill
 from monitor.flow.layout import FAULTS, LASTING, Block, Notice
+from monitor.kernels import tracking
 from monitor.kernels.jit import kernel
 
 _CONFIRMED, _CEASED = int(Notice.FAULT_CONFIRMED), int(Notice.FAULT_CEASED)
@@ -67,6 +68,7 @@ def confirm(params: Block, state: Block, outputs: Block, explanation: int) -> bo
     refresh(params, state)  # its columns are those of the evidence step just taken
     s["event_open"] = 0
     s["cusum"][:] = 0.0
+    tracking.forget(c["track_sd"], s["track"], s["track_P"])
     return True
 
 
@@ -83,13 +85,7 @@ def _learn(params: Block, state: Block, slot: int, explanation: int, fresh: bool
     if not fresh:
         return
     s["fault_free"][slot] = 0.0
-    best, smooth, log = -1, False, -math.inf
-    for k in range(c["constant_of"].shape[0]):
-        if c["constant_of"][k] == explanation and s["constant_log"][k] + c["constant_share"][k] > log:
-            best, smooth, log = k, False, s["constant_log"][k] + c["constant_share"][k]
-    for k in range(c["smooth_of"].shape[0]):
-        if c["smooth_of"][k] == explanation and s["smooth_log"][k] + c["smooth_share"][k] > log:
-            best, smooth, log = k, True, s["smooth_log"][k] + c["smooth_share"][k]
+    best, smooth = _likeliest(params, state, explanation)
     if not smooth:
         _know(
             params,
@@ -115,6 +111,36 @@ def _learn(params: Block, state: Block, slot: int, explanation: int, fresh: bool
             params, state, slot, explanation, kind, sd * s["smooth_x"][best, value],
             sd * math.sqrt(s["smooth_P"][best, value * m + value]),
         )  # fmt: skip
+
+
+@kernel
+def _likeliest(params: Block, state: Block, explanation: int) -> tuple[int, bool]:
+    """Return the candidate of an explanation with the most evidence, and whether it is a smooth one."""
+    c, s = params[0], state[0]
+    best, smooth, log = -1, False, -math.inf
+    for k in range(c["constant_of"].shape[0]):
+        if c["constant_of"][k] == explanation and s["constant_log"][k] + c["constant_share"][k] > log:
+            best, smooth, log = k, False, s["constant_log"][k] + c["constant_share"][k]
+    for k in range(c["smooth_of"].shape[0]):
+        if c["smooth_of"][k] == explanation and s["smooth_log"][k] + c["smooth_share"][k] > log:
+            best, smooth, log = k, True, s["smooth_log"][k] + c["smooth_share"][k]
+    return best, smooth
+
+
+@kernel
+def outlasts(params: Block, state: Block) -> bool:
+    """Whether the event that is about to end by quiet is a sure fault and, by its evidence, still there.
+
+    A lost share of torque is not felt while the joint bears nothing.
+    """
+    c, s = params[0], state[0]
+    e = s["sure_of"]
+    if e < 0 or not may_last(c["of_family"][e]):
+        return False
+    k, smooth = _likeliest(params, state, e)
+    if smooth:
+        return c["smooth_settles"][k] > 0 and s["smooth_acts"][k] > s["smooth_ended"][k]
+    return bool(s["constant_acts"][k] > s["constant_ended"][k])
 
 
 @kernel
@@ -198,6 +224,7 @@ def track(params: Block, state: Block, outputs: Block, dt_s: float) -> None:
         if s["fault_idle_s"][f] > _CEASED_S:
             s["fault_of"][f] = 0
             s["fault_ceased"][f] = s["fault_event"][f]
+            tracking.forget(c["track_sd"], s["track"], s["track_P"])
             outputs[0]["notice"] |= _CEASED
 
 

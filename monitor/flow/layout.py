@@ -608,7 +608,7 @@ def state_fields(s: Sizes) -> list[Field]:
         ("event_quiet_ns", i8, ()),  # last time all was well inside
         ("event_loud_ns", i8, ()),  # last time it was not
         ("weigh_afresh", i8, ()),  # 1: all evidence so far is of no account
-        ("event_noisy", i8, ()),  # 1: a reading was suspiciously noisy when it began
+        ("event_doubtful", i8, ()),  # 1: a reading was not credible when it began, or soon after
         ("event_drifted", i8, ()),  # 1: opened by the sums, small and lasting
         ("event_row", i8, ()),  # row with the largest ratio so far
         ("event_ratio", f8, ()),

@@ -254,7 +254,7 @@ def rebase(params: Block, inputs: Block, state: Block, outputs: Block) -> None:
         s["settled_ns"] = t_ns + c["start_settle_ns"]
         s["start_settled_ns"] = s["settled_ns"]
         if s["event_open"] != 0:
-            event.end(state, outputs)
+            event.end(params, state, outputs)
     else:
         s["settled_ns"] = max(s["settled_ns"], t_ns + c["settle_ns"])
     s["dt_s"] = 0.0

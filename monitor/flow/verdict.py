@@ -89,11 +89,14 @@ def leading(facts: Facts, blocks: Blocks) -> Leading:
 
 
 def _suspected(blocks: Blocks) -> bool:
-    """Whether the signal itself may be all there is: a reading that was noisy when the event began, or a
-    position that has stood for a while although its velocity says it moves, and may soon be called frozen."""
+    """Whether the signal itself may be all there is to it.
+
+    A reading was not credible when the event began or soon after, or a position has stood for a while
+    although its velocity says it moves, and may soon be called frozen.
+    """
     s = blocks.state[0]
     stands = s["still_ns"].max() > blocks.params[0]["frozen_ns"] // _SUSPECTED
-    return bool(s["event_noisy"] or stands)
+    return bool(s["event_doubtful"] or stands)
 
 
 def _has_a_twin(facts: Facts, blocks: Blocks, k: int) -> bool:
@@ -141,6 +144,8 @@ def of_event(facts: Facts, blocks: Blocks) -> Verdict:
     now = leading(facts, blocks)
     if now.verdict == "undecided":
         detail = {"nothing": "outside-band", "something-else": "none-fits"}.get(now.meaning, "several-fit")
+        if _suspected(blocks):
+            detail = "bad-signal"
         others = alternatives(facts, blocks, None)
         return undecided(facts, blocks, detail)._replace(probability=now.probability, alternatives=others)
     number, one, smooth = best_candidate(blocks, facts, now.explanation)

@@ -38,6 +38,16 @@ def explained(feature: Floats, theta: Floats, P: Floats, torque: Floats, varianc
 
 
 @kernel
+def forget(sd: Floats, theta: Floats, P: Floats) -> None:
+    """Set the parameters theta (n,3) and P (n,3,3) back to their prior: zero with standard deviations sd (n,3)."""
+    for i in range(theta.shape[0]):
+        for a in range(3):
+            theta[i, a] = 0.0
+            for b in range(3):
+                P[i, a, b] = sd[i, a] * sd[i, a] if a == b else 0.0
+
+
+@kernel
 def track(
     row: int, r: float, variance: float, feature: Floats, sd: Floats, keep: float, clip: float,
     theta: Floats, P: Floats,
