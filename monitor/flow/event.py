@@ -139,7 +139,7 @@ def _open(state: Block, outputs: Block, row: int, onset_ns: int) -> None:
 
 @kernel
 def end(params: Block, state: Block, outputs: Block) -> None:
-    """Close the event and begin the sums anew, and the tracking of friction: it may have learnt of the cause."""
+    """Close the event; begin the sums anew, and the tracking of friction, which may have learnt of the cause."""
     s = state[0]
     tracking.forget(params[0]["track_sd"], s["track"], s["track_P"])
     s["event_open"] = 0

@@ -39,7 +39,7 @@ def explained(feature: Floats, theta: Floats, P: Floats, torque: Floats, varianc
 
 @kernel
 def forget(sd: Floats, theta: Floats, P: Floats) -> None:
-    """Set the parameters theta (n,3) and P (n,3,3) back to their prior: zero with standard deviations sd (n,3)."""
+    """Set the parameters theta (n,3) and P (n,3,3) back to their prior: zero, with sd (n,3)."""
     for i in range(theta.shape[0]):
         for a in range(3):
             theta[i, a] = 0.0
