@@ -13,6 +13,7 @@ from monitor.explain.outline import Candidate, Explanation, Outline
 from monitor.kernels.jit import kernel
 
 Floats = NDArray[np.float64]
+Ints = NDArray[np.int64]
 
 NAME = "position-sensor"
 OFFSET_SD = 0.05  # rad or m
@@ -39,12 +40,20 @@ def explanations(outline: Outline) -> list[Explanation]:
 
 
 @kernel
-def rows(row: int, slope: Floats, M: Floats, H: Floats) -> None:
-    """Fill H (n, >= 3): torque per unit of offset, of its acceleration, and of friction that is misjudged.
+def rows(row: int, slope: Floats, M: Floats, link_row: Ints, armature: Floats, H: Floats) -> None:
+    """Fill H (n + T, >= 3): torque per unit of offset, of its acceleration, of friction that is misjudged.
 
     Row i of slope (n,n) is the change of inverse dynamics per unit of coordinate i; M (n,n) the mass matrix.
+    The T joints in link_row have a motor side of their own: rotor (armature, n) and friction are there.
     """
-    for i in range(H.shape[0]):
+    n = slope.shape[0]
+    for i in range(n):
         H[i, 0] = slope[row, i]
         H[i, 1] = M[i, row]
         H[i, 2] = 1.0 if i == row else 0.0
+    for j in range(link_row.shape[0]):
+        H[n + j, 0], H[n + j, 1], H[n + j, 2] = 0.0, 0.0, 0.0
+        if link_row[j] == row:
+            H[n + j, 1], H[n + j, 2] = armature[row], 1.0
+            H[row, 1] -= armature[row]
+            H[row, 2] = 0.0

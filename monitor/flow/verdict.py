@@ -132,7 +132,9 @@ def undecided(facts: Facts, blocks: Blocks, detail: str) -> Verdict:
     s = blocks.state[0]
     row = int(s["event_row"])
     size = Size(float(s["event_size"]), facts.units[row], None)
-    return Verdict("undecided", detail, facts.rows[row], size=size, onset_t=int(s["event_onset_ns"]) / 1e9)
+    n = len(s["r_fast"])
+    joint = facts.rows[row if row < n else blocks.params[0]["link_row"][row - n]]
+    return Verdict("undecided", detail, joint, size=size, onset_t=int(s["event_onset_ns"]) / 1e9)
 
 
 def touch(facts: Facts, blocks: Blocks) -> Touch:

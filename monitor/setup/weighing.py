@@ -62,6 +62,7 @@ def outline(tree: Tree, config: Config, rated: Floats, model: Any) -> Outline:
             [_telling(tree, rated, axis, centre) for axis, centre in zip(body.axis, body.centre, strict=True)]
         ),
         feet=tuple(foot.name for foot in config.robot.foot),
+        sensed=tuple(tree.joints.index(x.name) for x in config.robot.joint if x.link_torque_sensor),
         weight=max(weight, 1.0),
         carrier=_carrier(tree, config)[0],
         payload=config.explain.largest_load_kg,
@@ -71,12 +72,16 @@ def outline(tree: Tree, config: Config, rated: Floats, model: Any) -> Outline:
 
 def cannot_tell(tree: Tree, config: Config) -> list[str]:
     """Return in sentences which explanations the sensors of a robot cannot support, and what would help."""
-    return [*_like_an_actuator(tree), *_without_effect(tree, config), *_behind_the_gear(config)]
+    return [*_like_an_actuator(tree, config), *_without_effect(tree, config), *_behind_the_gear(config)]
 
 
-def _like_an_actuator(tree: Tree) -> list[str]:
-    """Say which joints are the only ones that any force on some link loads: its Jacobian has a single row."""
+def _like_an_actuator(tree: Tree, config: Config) -> list[str]:
+    """Say which joints are the only ones that any force on some link loads: its Jacobian has a single row.
+
+    Joints with a torque sensor at the link side are left out: there drive and world are two rows.
+    """
     base = tree.n - len(tree.joints)
+    sensed = {joint.name for joint in config.robot.joint if joint.link_torque_sensor}
     links: dict[int, list[str]] = {}
     body = bodies(tree)
     for name, axis in zip(body.names, body.axis.tolist(), strict=True):
@@ -91,6 +96,7 @@ def _like_an_actuator(tree: Tree) -> list[str]:
         "be told from a fault of its actuator; a torque sensor at the joint's link side or a force sensor at "
         "the base would settle it"
         for row, names in sorted(links.items())
+        if tree.joints[row - base] not in sensed
     ]
 
 
@@ -261,6 +267,7 @@ def sizes_of(found: Candidates, tree: Tree, config: Config, lines: int) -> Sizes
         n=tree.n, nq=tree.nq, m=len(config.robot.joint), N=len(tree.arrays.parent), D=lines,
         B=len(bodies(tree).names), F=len(config.robot.foot), X=len(found.explanations),
         K=len(found.constant), Q=len(found.smooth),
+        T=sum(joint.link_torque_sensor for joint in config.robot.joint),
     )  # fmt: skip
 
 
