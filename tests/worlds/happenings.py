@@ -89,7 +89,10 @@ class SignalFault:
 
 @dataclass(frozen=True)
 class Misreading:
-    """A torque sensor at a link that reads wrong: by an `offset` (share of rated) or by a `scale` (share)."""
+    """A torque sensor at a link that reads wrong.
+
+    By an `offset` (share of rated), by a `scale` (share), or `frozen`: it stands still (size 1).
+    """
 
     detail: str
     joint: int
@@ -161,7 +164,11 @@ def misread(misreadings: Sequence[Misreading], rated: Floats, torque: Floats) ->
         )
         share = one.size * np.sin(0.5 * math.pi * flanks.min(axis=0)) ** 2
         i = one.joint
-        error[:, i] += share * (torque[:, i] if one.detail == "scale" else rated[i])
+        if one.detail == "frozen":
+            first = min(round(one.start_s / engine.PERIOD_S), len(torque) - 1)
+            error[:, i] += share * (torque[first, i] - torque[:, i])
+        else:
+            error[:, i] += share * (torque[:, i] if one.detail == "scale" else rated[i])
     return error
 
 
@@ -442,7 +449,10 @@ class _Drawing:
         end, ramp = start + rng.uniform(4.0, 8.0), self._log(0.005, 0.5)
         if end + ramp > self.seconds - 1.0:
             return None
-        if rng.random() < 0.5:
+        chance = rng.random()
+        if chance < 0.2:
+            one = Misreading("frozen", i, start, end, 0.005, 1.0, "share")
+        elif chance < 0.6:
             one = Misreading(
                 "offset", i, start, end, ramp, self._sign() * rng.uniform(0.03, 0.15), "share of rated"
             )

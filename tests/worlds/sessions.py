@@ -43,7 +43,8 @@ class Truth:
     detail : str
         Contact: `prescribed`, `collision`. Actuator: `torque-loss`, `coulomb-friction`, `viscous-friction`,
         `offset`, `ripple`, `open-circuit`, `stuck`. Position sensor: `offset`. Torque sensor: `offset`,
-        `scale`. Load: `gripped`. Signal: `jump`, `frozen`, `contradiction`, `noise`, `gap`, `duplicate`.
+        `scale`, `frozen`. Load: `gripped`. Signal: `jump`, `frozen`, `contradiction`, `noise`, `gap`,
+        `duplicate`.
     joint, link : str or None
         Where it was.
     start_s, end_s : float
