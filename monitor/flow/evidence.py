@@ -417,7 +417,7 @@ def _keep_peak(params: Block, state: Block, k: int, d: int, P: Block) -> None:
     size2 = 0.0
     for i in range(c["smooth_sized"][k]):
         size2 += (x[i] * sd[i]) ** 2
-    if size2 <= s["smooth_peak_size"][k] ** 2:
+    if size2 < s["smooth_peak_size"][k] ** 2:  # equal: no joint feels the force, only its moment
         return
     # All of the uncertainty counts: a force may have a part that no joint feels.
     variance = 0.0

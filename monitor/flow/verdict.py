@@ -148,7 +148,8 @@ def touch(facts: Facts, blocks: Blocks) -> Touch:
     axis, centre = int(c["body_axis"][one.number]), c["body_centre"][one.number]
     force, about_centre = s["smooth_peak"][k, :3], s["smooth_peak"][k, 3:]
     moment = about_centre + np.cross(centre, force)
-    unsure = float(s["smooth_peak_sd"][k] / s["smooth_peak_size"][k])
+    size = float(s["smooth_peak_size"][k])
+    unsure = float(s["smooth_peak_sd"][k]) / size if size > 0.0 else 1.0
     radius = one.sd[3] / one.sd[0]
     met = contact_point(facts.tree, axis, force, moment, radius * min(unsure, 1.0))
     point = None if met is None or met.point is None else met.point.tolist()

@@ -120,18 +120,14 @@ def build(config: Config, calibration: Calibration | None = None) -> Setup:
         place = str(config.path.parent / config.robot.calibration)
         calibration = read_calibration(config.calibration_text, place, tree, config)
     model = calibration.model if calibration else configured_model(tree, config)
-    sensed = _sensed(tree, config)
-    band = (
-        calibration.band
-        if calibration
-        else apart(tree, config, default_band(rated, model.coulomb, model.viscous))
-    )
+    wide = default_band(rated, model.coulomb, model.viscous)
+    band = calibration.band if calibration else apart(tree, config, wide)
     outline = weighing.outline(tree, config, rated, model)
     found = weighing.candidates(outline)
     facts = _facts(where, tree, config, found.explanations)
     sizes = weighing.sizes_of(found, tree, config, D)
     params = zeros(params_fields(sizes))
-    params["rated"] = np.append(rated, rated[sensed])
+    params["rated"] = np.append(rated, rated[_sensed(tree, config)])
     _fill_tree(params, tree, config, model)
     _fill_wire(params, tree, config, lags)
     _fill_link_torque(params, tree, config)

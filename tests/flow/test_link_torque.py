@@ -17,7 +17,7 @@ from monitor.flow.layout import Coverage, Reason
 from monitor.kernels.band import FLOOR, INERTIA, TORQUE
 from monitor.setup.build import Setup, build
 from monitor.setup.calibration import Calibration
-from tests.flow.rig import FORMS, PAIR, PAIR_JOINTS, Rig, made
+from tests.flow.rig import FORMS, PAIR, PAIR_JOINTS, Mover, Rig, made
 from tests.flow.test_mujoco import ENCODER_STEP, VELOCITY_SD, expected
 from tests.worlds.arm import ArmWorld, Friction, Push, Recording, random_motion, simulate
 from tests.worlds.noise import with_noise
@@ -128,6 +128,16 @@ def test_a_sensor_that_reads_wrong_is_seen_at_both_sides_with_opposite_sign(form
     rows = played(Rig(wired(form)), misread(recording, error))
     seen = expected(error, form, slow=False)
     assert np.abs((rows - np.hstack([-seen, seen]))[600:] / np.tile(RATED, 2)).max() < 5e-3
+
+
+@pytest.mark.parametrize("form", FORMS)
+def test_a_drive_that_leaves_gravity_out_is_given_it_back_beside_the_sensor(form: str) -> None:
+    recording = motion(ON_BLADE)
+    gravity = np.array([Mover(PAIR).gravity_torque(q) for q in recording.q])
+    assert np.abs(gravity).max() > 5.0
+    left_out = replace(recording, tau=recording.tau - gravity)
+    rows = played(Rig(wired(form, gravity_compensated=True)), left_out)
+    np.testing.assert_allclose(rows[600:], played(Rig(wired(form)), recording)[600:], atol=0.02)
 
 
 def test_readings_are_held_back_as_the_torque_of_their_drive_is() -> None:
