@@ -40,7 +40,7 @@ FIELDS = (
     "R",
     "track",
     "row_fast",
-    "motor_slow",
+    "row_slow",
 )
 WEIGHED = ("null_log", "constant_log", "smooth_log", "smooth_x", "fault_theta")
 
