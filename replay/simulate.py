@@ -16,6 +16,7 @@ import threading
 import time
 from collections.abc import Sequence
 from dataclasses import asdict, dataclass, replace
+from multiprocessing.synchronize import Event
 from pathlib import Path
 from typing import Any, NamedTuple
 
@@ -568,8 +569,20 @@ def write_truth(path: Path, truth: Sequence[Happening]) -> None:
             table.writerow([one.kind, one.where, one.size, one.start_ns, one.end_ns, *peaks])
 
 
+class Start(NamedTuple):
+    """How a robot in a process of its own says that it is ready, and is told to begin."""
+
+    ready: Event
+    begin: Event
+
+
 def publish(
-    endpoint: str, seconds: float, seed: int, schedule: Schedule, truth_path: Path | None = None
+    endpoint: str,
+    seconds: float,
+    seed: int,
+    schedule: Schedule,
+    truth_path: Path | None = None,
+    start: Start | None = None,
 ) -> None:
     """Be the robot for `seconds`, in a process of its own: publish at 1 kHz on a bound ZeroMQ PUB socket.
 
@@ -586,6 +599,8 @@ def publish(
         As for `Rind`.
     truth_path : Path, optional
         As for `write_truth`.
+    start : Start, optional
+        Without it the robot begins as soon as it is ready.
 
     Raises
     ------
@@ -596,6 +611,10 @@ def publish(
     for number in (signal.SIGTERM, signal.SIGINT):
         signal.signal(number, lambda *_: asked_to_stop.set())
     Rind(seed, schedule).step()  # compiles, so that the first period is no longer than the others
+    if start is not None:
+        start.ready.set()
+        while not start.begin.wait(0.1) and not asked_to_stop.is_set():
+            pass
     rind = Rind(seed, schedule, start_ns=time.time_ns())
     with zmq.Context() as context, context.socket(zmq.PUB) as socket:
         socket.linger = 0

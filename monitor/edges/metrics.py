@@ -27,6 +27,7 @@ from prometheus_client.metrics_core import (
 from prometheus_client.utils import floatToGoString
 
 from monitor.errors import SystemFault
+from monitor.flow import trend
 from monitor.flow.layout import KINDS, LATENESS_EDGES_S, VERDICTS, Coverage, Facts, Reason, Right, Signal
 from monitor.setup.build import Setup
 from monitor.setup.shared import Shared
@@ -96,6 +97,14 @@ def _both_bandwidths(s: Source, field: str, unit: str) -> Iterator[Row]:
 def _link_torque(s: Source) -> Iterator[Row]:
     joints = (s.facts.joints[place] for place in s.facts.link_torque)
     return zip(joints, s.state["tau_link"], strict=True)
+
+
+def _trends(s: Source, field: str) -> Iterator[Row]:
+    """Joint, parameter and value, as shares of the limits."""
+    base = len(s.facts.rows) - len(s.facts.link_torque) - len(s.facts.joints)
+    for joint, values in zip(s.facts.rows[base:], s.state[field][base:], strict=True):
+        for parameter, value in zip(trend.DETAILS, values, strict=True):
+            yield joint, parameter, value
 
 
 def _ratios(s: Source) -> Iterator[Row]:
@@ -207,6 +216,20 @@ METRICS = (
         "gauge",
         "The same for all joints together; above 1 an event opens though no joint alone stands out.",
         lambda s: [(s.outputs["body_ratio"],)],
+    ),
+    Declared(
+        "limbtell_drift_ratio",
+        "gauge",
+        "Friction and offset of a joint beyond the commissioned ones, over hours, as a share of the limit.",
+        lambda s: _trends(s, "trend"),
+        ("joint", "parameter"),
+    ),
+    Declared(
+        "limbtell_drift_ratio_sd",
+        "gauge",
+        "Standard deviation of that share; 0 before the joint has moved.",
+        lambda s: _trends(s, "trend_sd"),
+        ("joint", "parameter"),
     ),
     Declared(
         "limbtell_measured_torque_newton_meters",

@@ -49,7 +49,7 @@ def fill(
     elif family == ACTUATOR:
         actuator.rows(index, feature, H)
     elif family == SENSOR:
-        position_sensor.rows(index, slope, M, link_row, armature, H)
+        position_sensor.rows(index, slope, M, feature, link_row, armature, H)
     elif family == LOAD:
         load.rows(load_axis, load_centre, parent, dof, S, V, Vd, R, p, H)
     elif family == TORQUE_SENSOR:

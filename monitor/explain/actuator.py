@@ -10,6 +10,7 @@ from __future__ import annotations
 import numpy as np
 from numpy.typing import NDArray
 
+from monitor.explain.contact import BLOW_S, PUSH_S
 from monitor.explain.outline import Candidate, Explanation, Outline
 from monitor.kernels.jit import kernel
 
@@ -23,7 +24,9 @@ FRICTION_SD = 2.5  # times normal
 OFFSET_SD = 0.12  # of rated
 COMES_S = 0.08  # a fault is there at once, or comes within some tenths of a second
 SHARE = 1.0 / 11.0  # of the rate, for each way
-FREE = ((0.4, 0.05), (0.1, 0.15), (0.1, 0.5))  # sd as a share of rated, time constant in s
+# Free torque: sd as a share of rated, time constant in s. The times of a blow and of a push among them: else
+# the course in time alone would tell a contact that loads a single joint from a fault, which it cannot.
+FREE = ((0.2, BLOW_S), (0.2, PUSH_S), (0.1, 0.5))
 # Where a joint is said to have no friction, what normal would be: shares of rated torque (from memory).
 COULOMB_FLOOR, VISCOUS_FLOOR = 0.02, 0.02
 
@@ -34,7 +37,6 @@ def explanations(outline: Outline) -> list[Explanation]:
     found = []
     for i, joint in enumerate(outline.joints):
         rated, unit = float(outline.rated[i]), outline.units[i]
-        friction = "N m s/rad" if unit == "N m" else "N s/m"
         sds = (
             LOSS_SD,
             FRICTION_SD * max(float(outline.coulomb[i]), COULOMB_FLOOR * rated),
@@ -43,9 +45,7 @@ def explanations(outline: Outline) -> list[Explanation]:
         )
         row = outline.drive_row(i)
         candidates = []
-        for kind, (detail, sd, unit_) in enumerate(
-            zip(DETAILS, sds, ("1", unit, friction, unit), strict=True)
-        ):
+        for kind, (detail, sd, unit_) in enumerate(zip(DETAILS, sds, units(unit), strict=True)):
             index = 8 * row + kind
             one_sided = kind != OFFSET
             candidates += [
@@ -58,6 +58,11 @@ def explanations(outline: Outline) -> list[Explanation]:
         ]
         found.append(Explanation("actuator", joint, None, rate, tuple(candidates)))
     return found
+
+
+def units(unit: str) -> tuple[str, str, str, str]:
+    """Return the units of the four constants for a joint whose torque (force) is in `unit`."""
+    return "1", unit, "N m s/rad" if unit == "N m" else "N s/m", unit
 
 
 @kernel

@@ -20,7 +20,8 @@ Ints = NDArray[np.int64]
 NAME = "contact"
 # (detail, standard deviation of each force component, time constant in s, share of the rate). The force is in
 # units of the robot's weight or, on links near the base, of what loads a joint with its rated torque.
-WAYS = (("push", 0.16, 0.1, 0.5), ("blow", 0.5, 0.025, 0.25))
+PUSH_S, BLOW_S = 0.1, 0.025
+WAYS = (("push", 0.16, PUSH_S, 0.5), ("blow", 0.5, BLOW_S, 0.25))
 # Who leans holds a force, about: it comes within tenths of a second and wavers little, or by a fifth.
 LEAN, LEAN_S, WAVERS, LEAN_SHARE = 0.16, 0.2, (0.003, 0.05), 0.125
 

@@ -24,6 +24,8 @@ class Outline:
         N m or N, by joint row.
     rated, coulomb, viscous : (joints,)
         Rated torque, normal friction [N m, N m, N m s/rad].
+    silent : tuple of str
+        Joints on whose position neither gravity nor inertia depends.
     bodies : tuple of str
         Links a contact may be on.
     radius : (bodies,)
@@ -48,6 +50,7 @@ class Outline:
     rated: Floats
     coulomb: Floats
     viscous: Floats
+    silent: tuple[str, ...]
     bodies: tuple[str, ...]
     radius: Floats
     telling: Floats
@@ -68,10 +71,11 @@ class Outline:
 class Candidate(NamedTuple):
     """One way an explanation may look: so many columns, their prior standard deviations, how they move.
 
-    `number` is what `rows` of the family gets; `time_s` is None for constants, else the time of a Matérn 3/2
-    process about zero or, for the first `settles` columns, about a value of their own, with the share
-    `settled` of the prior's variance. `share` is the part of the explanation's rate; it ends by chance within
-    `lasts_s` or so. A `one_sided` constant cannot be negative.
+    `number` is what `rows` of the family gets. `time_s` is None for constants, else the time of a Matérn 3/2
+    process, one for all columns or one each: about zero or, for the first `settles` columns, about a value of
+    their own, with the share `settled` of the prior's variance. The last `fades` columns rise once and fade.
+    `share` is the part of the explanation's rate; it ends by chance within `lasts_s` or so. A `one_sided`
+    constant cannot be negative.
     """
 
     family: str
@@ -80,11 +84,25 @@ class Candidate(NamedTuple):
     sd: tuple[float, ...]
     unit: str
     share: float
-    time_s: float | None = None
+    time_s: float | tuple[float, ...] | None = None
     settles: int = 0
     settled: float = 0.003
+    fades: int = 0
     lasts_s: float = 60.0
     one_sided: bool = False
+
+    @property
+    def times_s(self) -> tuple[float, ...]:
+        """Time constants, one for each column; of a smooth candidate."""
+        if isinstance(self.time_s, tuple):
+            return self.time_s
+        return (self.time_s or 0.0,) * len(self.sd)
+
+    @property
+    def moves(self) -> tuple[float, ...]:
+        """Share of the prior's variance with which each column goes on moving."""
+        going = len(self.sd) - self.settles - self.fades
+        return (self.settled,) * self.settles + (1.0,) * going + (0.0,) * self.fades
 
 
 class Explanation(NamedTuple):

@@ -25,6 +25,7 @@ _OK, _CLOCK = int(Signal.OK), int(Signal.CLOCK)
 _JUMP, _FROZEN, _CONTRADICTION = int(Signal.JUMP), int(Signal.FROZEN), int(Signal.CONTRADICTION)
 _NOISE = int(Signal.NOISE)
 _BAD_SAMPLE = int(Notice.BAD_SAMPLE)
+_BEGINS_NS = 100_000_000  # noise so early in an event may be all there is to it
 _START = 2  # value of `inputs.rebase` after a start or restart
 
 
@@ -43,6 +44,7 @@ def credible(params: Block, inputs: Block, state: Block, outputs: Block) -> bool
         )  # fmt: skip
     if x["rebase"] == _START:
         s["raw_held"] = 0  # nothing to compare with, also where this very sample turns out bad
+        s["rough_tau"][:], s["rough_sum"][:], s["rough_count"][:] = 0.0, 0.0, 0
     if fault == _OK:
         dt_ns = x["t_ns"] - s["raw_t_ns"]
         if s["raw_held"] == 0:
@@ -92,8 +94,10 @@ def begin_motion(params: Block, inputs: Block, state: Block) -> None:
         s["step_tau"][i] = 0.0
         s["bend_q"][i] = 0.0
         s["bend_qd"][i] = 0.0
+        s["bend_tau"][i] = 0.0
         s["score_q"][i] = 0.0
         s["score_qd"][i] = 0.0
+        s["score_tau"][i] = 0.0
         s["drift"][i] = 0.0
         s["swing"][i] = 0.0
         s["still_ns"][i] = 0
@@ -139,6 +143,9 @@ def motion_fault(params: Block, inputs: Block, state: Block, dt_ns: int) -> tupl
             s["drift"][i] = keep * s["drift"][i] + miss
             s["swing"][i] = keep * s["swing"][i] + step_qd
         noisy = score_noise(params, inputs, state, i, step, bend, step_qd - s["step_qd"][i], dt_ns)
+        noisy = score_torque(params, inputs, state, i, step_tau - s["step_tau"][i], dt_ns) or noisy
+        if max(s["score_q"][i], s["score_qd"][i], s["score_tau"][i]) > signal.SUSPECT:
+            s["event_noisy"] |= int(x["t_ns"] - s["event_onset_ns"] < _BEGINS_NS)
         s["step_q"][i], s["step_qd"][i], s["step_tau"][i] = step, step_qd, step_tau
         if fault == _OK:
             if jumps:
@@ -222,6 +229,30 @@ def score_noise(
     s["score_qd"][i] = signal.noise_score(bend_qd, s["bend_qd"][i], limit_qd, s["score_qd"][i])
     s["bend_q"][i], s["bend_qd"][i] = bend, bend_qd
     return bool(max(s["score_q"][i], s["score_qd"][i]) >= signal.NOISY)
+
+
+@kernel
+def score_torque(params: Block, inputs: Block, state: Block, i: int, bend: float, dt_ns: int) -> bool:
+    """Carry the score of the torque of joint i; True while it is too noisy.
+
+    What a drive truly does counts too: it passes the noise of its readings on, shakes, buzzes. So the limit
+    is as far above the roughest time the drive has shown since the start as above the configured noise; of a
+    drive that was not yet seen at work nothing is said.
+    """
+    c, x, s = params[0], inputs[0], state[0]
+    if x["brake"][i] != 0 or x["drive"][i] == 0 or 2 * max(dt_ns, s["raw_dt_ns"]) > 3 * c["period_ns"]:
+        s["bend_tau"][i], s["score_tau"][i] = 0.0, 0.0
+        return False
+    limit = c["bend_ratio"] * math.sqrt(max(6.0 * c["noise_tau"][i] ** 2, s["rough_tau"][i]))
+    if s["rough_tau"][i] == 0.0:
+        limit = math.inf
+    s["score_tau"][i] = signal.noise_score(bend, s["bend_tau"][i], limit, s["score_tau"][i])
+    s["bend_tau"][i] = bend
+    if s["score_tau"][i] == 0.0:
+        s["rough_sum"][i], s["rough_count"][i], s["rough_tau"][i] = signal.roughness(
+            bend, limit, s["rough_sum"][i], s["rough_count"][i], s["rough_tau"][i]
+        )
+    return bool(s["score_tau"][i] >= signal.NOISY)
 
 
 @kernel

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import math
 
-from monitor.flow import lasting, link_torque
+from monitor.flow import lasting, link_torque, trend
 from monitor.flow.layout import RING, Block, Floats, Form, Notice
 from monitor.kernels import band, evidence, ledger, tracking
 from monitor.kernels.jit import kernel
@@ -13,6 +13,7 @@ _JOINT_SPACE, _FIRST_ORDER = int(Form.JOINT_SPACE), int(Form.FIRST_ORDER)
 _EVENT_OPENED, _EVENT_ENDED = int(Notice.EVENT_OPENED), int(Notice.EVENT_ENDED)
 _STANDING = 0.1
 _STUCK = 10.0  # the torque that a standing joint hides does not average out
+_HIDES = 0.5  # of Coulomb friction
 # A single block counts at most so many sd: the sums are for what lasts.
 _CLIP = 6.0
 
@@ -112,7 +113,7 @@ def judge(params: Block, inputs: Block, state: Block, outputs: Block) -> None:
     ratio = max(out["ratio"][row], s["body_ratio"]) if row >= 0 else 0.0
     if ratio < c["onset_ratio"]:
         s["event_quiet_ns"] = t_ns
-    s["step_due"] = 1 if _remember(params, state) else 0
+    s["step_due"] = 1 if _remember(params, inputs, state, outputs) else 0
     if ratio > 1.0 and (s["event_open"] == 0 or s["event_drifted"] != 0):
         # An event that began by drifting and now breaks out is another one: it is weighed from here.
         s["event_drifted"] = 0
@@ -143,7 +144,7 @@ def _open(state: Block, outputs: Block, row: int, onset_ns: int) -> None:
     s = state[0]
     if s["event_open"] == 0:
         outputs[0]["notice"] |= _EVENT_OPENED
-    s["event_open"], s["weigh_afresh"] = 1, 1
+    s["event_open"], s["weigh_afresh"], s["event_noisy"] = 1, 1, 0
     s["event_onset_ns"] = onset_ns
     s["event_loud_ns"], s["event_over_ns"] = s["at_ns"], s["at_ns"]
     s["event_row"], s["event_ratio"], s["event_size"] = row, 0.0, s["left"][row]
@@ -193,9 +194,9 @@ def _sum_up(params: Block, inputs: Block, state: Block) -> int:
 
 
 @kernel
-def _remember(params: Block, state: Block) -> bool:
+def _remember(params: Block, inputs: Block, state: Block, outputs: Block) -> bool:
     """Every evidence step: keep what weighing needs, and let tracked friction follow while all is quiet."""
-    c, s = params[0], state[0]
+    c, x, s = params[0], inputs[0], state[0]
     s["sampled"] += 1
     if s["sampled"] < c["evidence_samples"]:
         return False
@@ -212,16 +213,22 @@ def _remember(params: Block, state: Block) -> bool:
     s["ring_stand"][k] = s["var_stand"]
     for i in range(s["left"].shape[0]):
         s["ring_extra"][k, i] = s["explained_var"][i]
+    for i in range(s["a"].shape[0]):
+        # Whatever acts on the robot may also turn the friction that a standing joint hides.
+        s["ring_hidden"][k, i] = (_HIDES * c["coulomb"][i] * s["cause"][i, band.STANDS]) ** 2
+    link_torque.hidden(params, s["ring_hidden"][k])
     s["ring_feature"][k] = s["feature"]
     s["ring_head"] += 1
     s["ring_held"] = min(s["ring_held"] + 1, RING)
-    if s["event_open"] == 0:
+    if s["event_open"] == 0 and x["guided"] == 0:
+        dt_s = c["evidence_samples"] * c["period_ns"] * 1e-9
         for i in range(s["left"].shape[0]):
-            if lasting.holds_row(state, i):
+            if x["judged"][i] == 0 or lasting.holds_row(state, i) or link_torque.is_link_side(params, i):
                 continue
             variance = c["track_noise"] * (s["var_fast"][i] + _STUCK * s["var_stand"][i])
             tracking.track(
                 i, s["left"][i] + s["tracked"][i], variance, s["feature"], c["track_sd"],
                 c["track_keep"], c["track_clip"], s["track"], s["track_P"],
             )  # fmt: skip
+            trend.follow(params, state, outputs, i, variance, dt_s)
     return True

@@ -16,7 +16,11 @@ from monitor.kernels.jit import kernel
 
 _CONFIRMED, _CEASED = int(Notice.FAULT_CONFIRMED), int(Notice.FAULT_CEASED)
 # Parameters wander by their prior within so long, and are known at first only to fault size.
-_WANDER_S = 10.0
+_WANDER_S = 300.0
+# The variance of a free torque follows within so long; below this share of the noise it is nothing.
+_FREE_S, _LEAST_FREE = 3.0, 0.01
+# Share of the prior to which the parameters other than the one found are known to be nothing.
+_ASIDE = 0.1
 # Evidence steps that count as one, since residuals are not independent.
 _CORRELATED = 5.0
 # A fault has ceased when for so long it was not felt where it should have been.
@@ -70,11 +74,7 @@ def confirm(params: Block, state: Block, outputs: Block, explanation: int) -> bo
     s["fault_family"][slot], s["fault_index"][slot] = family, index
     s["fault_columns"][slot] = _columns_of(family)
     s["fault_idle_s"][slot] = 0.0
-    for a in range(LASTING):
-        if fresh:
-            s["fault_theta"][slot, a] = 0.0
-        for b in range(LASTING):
-            s["fault_P"][slot, a, b] = c["of_sd"][explanation, a] ** 2 if a == b else 0.0
+    _learn(params, state, slot, explanation, fresh)
     if fresh:
         s["fault_event"][slot] = s["event_number"]
         outputs[0]["notice"] |= _CONFIRMED
@@ -82,6 +82,67 @@ def confirm(params: Block, state: Block, outputs: Block, explanation: int) -> bo
     s["event_open"] = 0
     s["cusum"][:] = 0.0
     return True
+
+
+@kernel
+def _learn(params: Block, state: Block, slot: int, explanation: int, fresh: bool) -> None:
+    """Set a slot's parameters to what the likeliest candidate says of them; the others are hardly there."""
+    c, s = params[0], state[0]
+    share = _ASIDE if fresh else 1.0
+    for a in range(LASTING):
+        if fresh:
+            s["fault_theta"][slot, a] = 0.0
+        for b in range(LASTING):
+            s["fault_P"][slot, a, b] = (share * c["of_sd"][explanation, a]) ** 2 if a == b else 0.0
+    if not fresh:
+        return
+    s["fault_free"][slot] = 0.0
+    best, smooth, log = -1, False, -math.inf
+    for k in range(c["constant_of"].shape[0]):
+        if c["constant_of"][k] == explanation and s["constant_log"][k] + c["constant_share"][k] > log:
+            best, smooth, log = k, False, s["constant_log"][k] + c["constant_share"][k]
+    for k in range(c["smooth_of"].shape[0]):
+        if c["smooth_of"][k] == explanation and s["smooth_log"][k] + c["smooth_share"][k] > log:
+            best, smooth, log = k, True, s["smooth_log"][k] + c["smooth_share"][k]
+    if not smooth:
+        _know(
+            params,
+            state,
+            slot,
+            explanation,
+            c["constant_index"][best] % 8,
+            s["constant_size"][best],
+            s["constant_size_sd"][best],
+        )
+        return
+    d, settles = c["smooth_columns"][best], c["smooth_settles"][best]
+    n = s["left"].shape[0]
+    if settles == 0 and s["fault_family"][slot] == TORQUE_SENSOR:
+        # Its noise is an offset that nobody knows.
+        s["fault_P"][slot, 0, 0] += s["smooth_peak_size"][best] ** 2
+        return
+    if settles == 0:
+        s["fault_free"][slot] = s["smooth_peak_size"][best] ** 2
+        return
+    m = n + 2 * d + settles
+    for a in range(settles):
+        value = n + 2 * d + a
+        sd = c["smooth_sd"][best, a]
+        kind = a if settles > 1 else c["smooth_index"][best] % 8
+        _know(
+            params, state, slot, explanation, kind, sd * s["smooth_x"][best, value],
+            sd * math.sqrt(s["smooth_P"][best, value * m + value]),
+        )  # fmt: skip
+
+
+@kernel
+def _know(params: Block, state: Block, slot: int, explanation: int, a: int, mean: float, sd: float) -> None:
+    """Set one parameter of a slot."""
+    s = state[0]
+    if s["fault_family"][slot] == SENSOR:
+        a = 0
+    s["fault_theta"][slot, a] = mean
+    s["fault_P"][slot, a, a] += (3.0 * sd) ** 2
 
 
 @kernel
@@ -104,6 +165,8 @@ def widen(state: Block, R: Block) -> None:
     for f in range(FAULTS):
         if s["fault_of"][f] != 0:
             d = s["fault_columns"][f]
+            if s["fault_free"][f] > 0.0:
+                R[s["fault_index"][f] // 8, s["fault_index"][f] // 8] += s["fault_free"][f]
             for i in range(n):
                 for a in range(d):
                     w = 0.0
@@ -146,6 +209,8 @@ def track(params: Block, state: Block, outputs: Block, dt_s: float) -> None:
             for i in range(s["left"].shape[0]):
                 _update(state, f, i, d)
         acts, excited = _acts(params, state, f, e, d)
+        if s["fault_free"][f] > 0.0:
+            acts, excited = _varies(state, f, dt_s)
         if acts:
             s["fault_idle_s"][f] = 0.0
         elif excited:
@@ -199,6 +264,20 @@ def _acts(params: Block, state: Block, f: int, e: int, d: int) -> tuple[bool, bo
         acts = acts or abs(effect) > 2.0 * max(sd, math.sqrt(unsure))
         excited = excited or could > 4.0 * sd
     return acts, excited
+
+
+@kernel
+def _varies(state: Block, f: int, dt_s: float) -> tuple[bool, bool]:
+    """Follow the variance of a torque that varies freely; return as `_acts` does."""
+    s = state[0]
+    row = s["fault_index"][f] // 8
+    if s["event_open"] == 0:
+        fresh = s["left"][row] ** 2 - s["var_fast"][row] - s["fault_free"][f]
+        s["fault_free"][f] = max(
+            s["fault_free"][f] + fresh * dt_s / _FREE_S, _LEAST_FREE * s["var_fast"][row]
+        )
+    moves = abs(s["feature"][row, 1]) > 0.9
+    return s["fault_free"][f] > 2.0 * s["var_fast"][row], moves
 
 
 @kernel

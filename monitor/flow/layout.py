@@ -12,6 +12,7 @@ and weighed has `rows`: the n of the model (link sides, where there is such a se
 
 from __future__ import annotations
 
+from collections.abc import Mapping
 from dataclasses import dataclass
 from enum import IntEnum
 from functools import cache
@@ -91,6 +92,7 @@ class Facts:
     row_needs: NDArray[np.bool_]  # (m,m): which joints on the wire enter which joint row
     tree: Tree
     explanations: tuple[Explanation, ...]  # in the order of `outputs.probability`, after nothing and other
+    twins: Mapping[str, str]  # by link: the only joint that forces on it load
     certainty: float  # probability from which on a verdict is given
     tool: Tool | None
     wait_ns: int  # longest wait for a missing sample
@@ -163,7 +165,8 @@ class Notice(IntEnum):
     TORQUE_AT_LIMIT = 16
     DISOBEYED = 32
     GAP = 64
-    LINK_TORQUE = 1024  # a link's torque sensor fell silent or came back
+    DRIFTED = 1024
+    LINK_TORQUE = 2048  # a link's torque sensor fell silent or came back
 
 
 # What an event may be held to be. These names are stable; programs read them.
@@ -182,6 +185,7 @@ KINDS = {
     "brake": "high",
     "robot": "high",
     "drive": "medium",
+    "drift": "medium",
     "signal": "medium",
     "wire": "medium",
     "system": "medium",
@@ -274,6 +278,11 @@ def params_fields(s: Sizes) -> list[Field]:
         ("track_keep", f8, ()),  # what is kept over one evidence step
         ("track_noise", f8, ()),  # how many evidence steps count as one
         ("track_clip", f8, ()),  # sd
+        # the trend of friction over hours: limits of added Coulomb, viscous and constant friction
+        ("trend_limit", f8, (rows, 3)),
+        ("trend_keep", f8, ()),  # what is kept over one evidence step
+        ("trend_sure", f8, ()),  # sd beyond the limit that make it certain
+        ("trend_s", f8, ()),  # for how long, before it counts
         # events
         ("row_limit", f8, ()),  # |residual| / sd of one row that opens an event
         ("body_limit", f8, ()),  # of all rows: r' R^-1 r
@@ -319,9 +328,9 @@ def params_fields(s: Sizes) -> list[Field]:
         ("smooth_ends", f8, (s.Q,)),
         ("smooth_sized", i8, (s.Q,)),  # components that make up the size: a force's three, or the first
         ("smooth_settles", i8, (s.Q,)),
-        ("smooth_settled", f8, (s.Q,)),
         ("smooth_one_sided", i8, (s.Q,)),
-        ("smooth_dt_T", f8, (s.Q,)),  # evidence step over time constant
+        ("smooth_dt_T", f8, (s.Q, SMOOTH)),  # evidence step over time constant
+        ("smooth_moves", f8, (s.Q, SMOOTH)),  # share of the prior's variance with which a component goes on
         # limits of credibility, in joint order of the wire
         ("q_min", f8, (m,)),
         ("q_max", f8, (m,)),
@@ -340,6 +349,7 @@ def params_fields(s: Sizes) -> list[Field]:
         ("frozen_ns", i8, ()),
         ("bend_q", f8, (m,)),  # rad, rad/s: second differences of q and qd that noise does not reach
         ("bend_qd", f8, (m,)),
+        ("bend_ratio", f8, ()),  # standard deviations in these limits
         ("noise_qd", f8, (m,)),  # rad/s: sd of the velocity
         ("noise_tau", f8, (m,)),  # sd of the torque on the wire; infinite where none is configured
         ("wire_row", i8, (m,)),  # row of v of the joint on the wire, -1 behind a coupling
@@ -477,8 +487,14 @@ def state_fields(s: Sizes) -> list[Field]:
         ("step_tau", f8, (m,)),
         ("bend_q", f8, (m,)),  # last second differences
         ("bend_qd", f8, (m,)),
+        ("bend_tau", f8, (m,)),
         ("score_q", f8, (m,)),  # how much too noisy the reading is
         ("score_qd", f8, (m,)),
+        ("score_tau", f8, (m,)),
+        # second differences of the torque: the largest mean square of some time, and the mean now
+        ("rough_tau", f8, (m,)),
+        ("rough_sum", f8, (m,)),
+        ("rough_count", i8, (m,)),
         ("same_ns", i8, (m,)),  # how long position and velocity have repeated exactly
         ("copy_ns", i8, ()),  # how long all readings have
         ("run_qd", i8, (m,)),  # exact repetitions in a row at standstill
@@ -503,6 +519,13 @@ def state_fields(s: Sizes) -> list[Field]:
         ("var_stand", f8, (rows,)),  # part of var_fast
         ("track", f8, (rows, 3)),
         ("track_P", f8, (rows, 3, 3)),
+        # all in shares of the limits: what was seen in the memory of the trend, its estimate and sd
+        ("trend_info", f8, (rows, 3, 3)),
+        ("trend_sum", f8, (rows, 3)),
+        ("trend", f8, (rows, 3)),
+        ("trend_sd", f8, (rows, 3)),
+        ("trend_beyond_s", f8, (rows, 3)),  # time seen since it is certainly beyond its limit
+        ("drifted", i8, (3 * rows,)),  # 1: for so long that it is said; 3 row + parameter
         ("explained", f8, (rows,)),  # N m that tracked friction and lasting faults explain
         ("explained_var", f8, (rows,)),
         ("tracked", f8, (rows,)),  # N m of it by tracked friction
@@ -526,6 +549,7 @@ def state_fields(s: Sizes) -> list[Field]:
         ("ring_var", f8, (RING, rows)),
         ("ring_stand", f8, (RING, rows)),
         ("ring_extra", f8, (RING, rows)),
+        ("ring_hidden", f8, (RING, rows)),  # (N m)²: friction that a standing joint may hide
         ("ring_feature", f8, (RING, rows, FEATURES)),
         ("ring_loud", i8, (RING,)),  # 1: something stood out
         ("ring_head", i8, ()),  # entries written so far
@@ -569,6 +593,7 @@ def state_fields(s: Sizes) -> list[Field]:
         ("fault_index", i8, (FAULTS,)),
         ("fault_columns", i8, (FAULTS,)),
         ("fault_theta", f8, (FAULTS, LASTING)),
+        ("fault_free", f8, (FAULTS,)),  # (N m)²: variance of torque that varies freely
         ("fault_P", f8, (FAULTS, LASTING, LASTING)),
         ("fault_H", f8, (FAULTS, rows, SMOOTH)),
         ("fault_idle_s", f8, (FAULTS,)),  # time it was not felt though it should have been
@@ -585,6 +610,8 @@ def state_fields(s: Sizes) -> list[Field]:
         ("null_log", f8, ()),
         ("quiet_s", f8, (rows,)),  # slow noise since the residual was last loud
         ("quiet_P", f8, (rows, rows)),
+        ("x_quiet_s", f8, (rows,)),
+        ("x_quiet_P", f8, (rows, rows)),
         ("quiet_log", f8, ()),  # of this step: evidence of nothing, whatever was before
         ("other_s", f8, (rows,)),
         ("other_P", f8, (rows, rows)),
@@ -616,6 +643,7 @@ def state_fields(s: Sizes) -> list[Field]:
         ("event_quiet_ns", i8, ()),  # last time all was well inside
         ("event_loud_ns", i8, ()),  # last time it was not
         ("weigh_afresh", i8, ()),  # 1: all evidence so far is of no account
+        ("event_noisy", i8, ()),  # 1: a reading was suspiciously noisy when it began
         ("event_drifted", i8, ()),  # 1: opened by the sums, small and lasting
         ("event_row", i8, ()),  # row with the largest ratio so far
         ("event_ratio", f8, ()),

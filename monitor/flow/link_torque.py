@@ -17,7 +17,7 @@ from __future__ import annotations
 
 import math
 
-from monitor.flow.layout import Block, Form, Notice
+from monitor.flow.layout import Block, Floats, Form, Notice
 from monitor.kernels import band, ledger
 from monitor.kernels.jit import kernel
 
@@ -183,6 +183,25 @@ def causes(params: Block, state: Block) -> None:
             s["cause"][k, f] = s["cause"][i, f]
         s["cause"][k, band.NOISE] = B * B * c["e_variance"][i]
         s["cause"][k, band.INERTIA] = inertia
+
+
+@kernel
+def hidden(params: Block, variance: Floats) -> None:
+    """Give what friction hides of the joints, variance (n + T), to the motor sides: link sides have none."""
+    link = params[0]["link_row"]
+    n = variance.shape[0] - link.shape[0]
+    for j in range(link.shape[0]):
+        variance[n + j] = variance[link[j]]
+        variance[link[j]] = 0.0
+
+
+@kernel
+def is_link_side(params: Block, row: int) -> bool:
+    """Whether a row is the link side of a joint: there is no friction in it to be tracked."""
+    found = False
+    for j in range(params[0]["link_row"].shape[0]):
+        found = found or params[0]["link_row"][j] == row
+    return found
 
 
 @kernel

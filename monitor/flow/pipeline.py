@@ -14,7 +14,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from monitor.errors import WireError
-from monitor.flow import wire
+from monitor.flow import trend, wire
 from monitor.flow.alarms import AlarmBoard, Key, Transition
 from monitor.flow.align import Aligner
 from monitor.flow.coverage import ConditionKeeper
@@ -221,10 +221,20 @@ class Pipeline:
                         self._flagged[key] = (field, i)
         if notice & Notice.LINK_TORQUE:
             self._condition.sensors_changed()
+        if notice & Notice.DRIFTED:
+            self._drifted(now_ns)
         if notice & _EVENT_NOTICES:
             for said in self._events.after_step(notice, self._condition.guided):
                 self._say(said, now_ns)
             self._condition.loaded(self._events.since_start)
+
+    def _drifted(self, now_ns: int) -> None:
+        """Friction of some joint has left what was commissioned, slowly."""
+        for place in np.flatnonzero(self._state["drifted"]).tolist():
+            verdict = trend.verdict(self.facts, self.blocks, place)
+            key = Key("drift", verdict.detail, verdict.joint)
+            self._raise(key, verdict, now_ns)
+            self._flagged[key] = ("drifted", place)
 
     def _bad_sample(self, now_ns: int) -> None:
         """A sample was not credible: an alarm per joint and reason, cleared by quiet."""

@@ -20,7 +20,9 @@ NOTHING, OTHER = 0, 1  # places in `outputs.probability` before the explanations
 # Evidence steps before more is said than "undecided"; what is less likely is left out of the alternatives,
 # and of the full table.
 LEAST_STEPS, _LEAST_PROBABILITY, _LEAST_SHOWN = 3, 0.01, 0.001
-TOLD_BY = 2.0  # how many times better the data must fit than under the next meaning
+# By how much the log evidence must be above that of the next meaning ("decisive": "Bayes Factors", JASA 1995,
+# doi 10.1080/01621459.1995.10476572), and the share of an evidence that may be model error.
+TOLD_BY, _NOT_RIGHT = 5.0, 0.01
 _SUSPECTED = 5  # share of the time after which a position that stands is frozen
 _OPEN_CIRCUIT = 0.9  # lost share of torque from which on nothing is left
 
@@ -79,31 +81,69 @@ def leading(facts: Facts, blocks: Blocks) -> Leading:
             best[meaning] = i
     meaning = max(total, key=total.__getitem__)
     k = best[meaning]
-    if k < 0 or total[meaning] < facts.certainty or _suspected(blocks) or not _told(facts, blocks, total):
+    certain = k >= 0 and total[meaning] >= facts.certainty and _told(facts, blocks, meaning)
+    if not certain or _suspected(blocks) or _has_a_twin(facts, blocks, k):
         return Leading("undecided", None, None, total[meaning], meaning, k)
     one = facts.explanations[k]
     return Leading(one.verdict, one.joint, one.link, total[meaning], meaning, k)
 
 
 def _suspected(blocks: Blocks) -> bool:
-    """Whether a position has stood for a while that its velocity says moves: soon it may be called frozen."""
-    return bool(blocks.state[0]["still_ns"].max() > blocks.params[0]["frozen_ns"] // _SUSPECTED)
+    """Whether the signal itself may be all there is: a reading that was noisy when the event began, or a
+    position that has stood for a while although its velocity says it moves, and may soon be called frozen."""
+    s = blocks.state[0]
+    stands = s["still_ns"].max() > blocks.params[0]["frozen_ns"] // _SUSPECTED
+    return bool(s["event_noisy"] or stands)
 
 
-def _told(facts: Facts, blocks: Blocks, total: dict[str, float]) -> bool:
+def _has_a_twin(facts: Facts, blocks: Blocks, k: int) -> bool:
+    """Whether another explanation makes the very same data: a force that loads one joint, and that drive.
+
+    Only a drive that follows its own law (in proportion to torque, against the motion) gives itself away.
+    """
+    one = facts.explanations[k]
+    if _senses(facts, blocks, one.joint or facts.twins.get(one.link or "")):
+        return False
+    if one.verdict == "contact":
+        return one.link in facts.twins
+    if one.verdict != "actuator" or one.joint not in facts.twins.values():
+        return False
+    return best_candidate(blocks, facts, k)[1].number % 8 in (actuator.OFFSET, actuator.VARYING)
+
+
+def _senses(facts: Facts, blocks: Blocks, joint: str | None) -> bool:
+    """Whether a torque sensor at the link side of a joint reads: it tells drive and world apart."""
+    if joint is None:
+        return False
+    place = facts.joints.index(joint)
+    return place in facts.link_torque and not blocks.state[0]["unsensed"][place]
+
+
+def _told(facts: Facts, blocks: Blocks, likeliest: str) -> bool:
     """Whether it is the data that tell the likeliest meaning from the next, not the rates alone.
 
-    Evidence for a meaning is its probability over its rate. A force on the first link and a fault of its
-    drive can be the very same data; that contacts are the commoner does not decide it.
+    A force on the first link and a fault of its drive can be nearly the same data; that contacts are the
+    commoner does not decide it. Nor does a small part of a large evidence: what the model does not get right
+    of it is of that size.
     """
-    rate = np.exp(blocks.params[0]["log_rate"])
-    rates = {"nothing": rate[NOTHING], "something-else": rate[OTHER]}
-    for i, explanation in enumerate(facts.explanations):
-        rates[explanation.verdict] = rates.get(explanation.verdict, 0.0) + rate[2 + i]
-    evidence = {meaning: probability / rates[meaning] for meaning, probability in total.items()}
-    meaning = max(total, key=total.__getitem__)
-    others = max(value for name, value in evidence.items() if name != meaning)
-    return bool(evidence[meaning] > TOLD_BY * others)
+    log = _evidence(facts, blocks)
+    best = log.pop(likeliest)
+    return best - max(log.values()) > TOLD_BY + _NOT_RIGHT * max(best - log.get("nothing", best), 0.0)
+
+
+def _evidence(facts: Facts, blocks: Blocks) -> dict[str, float]:
+    """Return the log evidence of every meaning: that of its explanations by their share of its rate."""
+    c, s = blocks.params[0], blocks.state[0]
+    log = np.full(len(facts.explanations), -np.inf)
+    for name in ("constant", "smooth"):
+        np.logaddexp.at(log, c[f"{name}_of"], s[f"{name}_log"] + c[f"{name}_share"])
+    weighted, rate = log + c["log_rate"][2:], c["log_rate"][2:]
+    found = {"nothing": float(s["null_log"]), "something-else": float(s["other_log"])}
+    verdicts = np.array([one.verdict for one in facts.explanations])
+    for verdict in dict.fromkeys(verdicts.tolist()):
+        of = verdicts == verdict
+        found[verdict] = float(np.logaddexp.reduce(weighted[of]) - np.logaddexp.reduce(rate[of]))
+    return found
 
 
 def of_event(facts: Facts, blocks: Blocks) -> Verdict:
@@ -132,9 +172,15 @@ def undecided(facts: Facts, blocks: Blocks, detail: str) -> Verdict:
     s = blocks.state[0]
     row = int(s["event_row"])
     size = Size(float(s["event_size"]), facts.units[row], None)
-    n = len(s["r_fast"])
-    joint = facts.rows[row if row < n else blocks.params[0]["link_row"][row - n]]
-    return Verdict("undecided", detail, joint, size=size, onset_t=int(s["event_onset_ns"]) / 1e9)
+    return Verdict(
+        "undecided", detail, joint_of(facts, blocks, row), size=size, onset_t=int(s["event_onset_ns"]) / 1e9
+    )
+
+
+def joint_of(facts: Facts, blocks: Blocks, row: int) -> str:
+    """Return the name of a row that is judged; of a motor side, that of its joint."""
+    n = len(blocks.state[0]["r_fast"])
+    return facts.rows[row if row < n else int(blocks.params[0]["link_row"][row - n])]
 
 
 def touch(facts: Facts, blocks: Blocks) -> Touch:

@@ -19,7 +19,7 @@ import math
 import numpy as np
 from numpy.typing import NDArray
 
-from monitor.kernels.jit import kernel
+from monitor.kernels.jit import inlined, kernel
 
 Floats = NDArray[np.float64]
 
@@ -233,19 +233,20 @@ def smooth_start(d: int, near: float, s: Floats, P_s: Floats, x: Floats, P: Floa
 
 @kernel
 def smooth_step(
-    H: Floats, y: Floats, G: Floats, d: int, settles: int, settled: float, keep: float,
-    dt_T: float, x: Floats, P: Floats, u: Floats,
+    H: Floats, y: Floats, G: Floats, d: int, settles: int, keep: float,
+    dt_T: Floats, moves: Floats, x: Floats, P: Floats, u: Floats,
 ) -> tuple[float, float]:  # fmt: skip
-    """Advance d smooth components with whitened unit columns H (n, >= d) by one step of `dt / T`.
+    """Advance d smooth components with whitened unit columns H (n, >= d) by one step.
 
     Returns the log evidence of the step and its misfit (sum of squared normalised innovations; expected n).
+    dt_T (>= d) is the step over each component's time constant; moves (>= d) the share of the prior's
+    variance with which it goes on moving (0: it rises once and fades).
     x (m), P (m,m) are those of `smooth_start`, m = n + 2d + settles: the first `settles` components settle at
-    a value of their own, about which they go on moving with the share `settled` of the prior's variance.
-    u (m) is work space.
+    a value of their own. u (m) is work space.
     """
     n = y.shape[0]
     m = P.shape[0]
-    _smooth_predict(d, n, settles, settled, keep, dt_T, x, P)
+    _smooth_predict(d, n, settles, keep, dt_T, moves, x, P)
     log_evidence, misfit = 0.0, 0.0
     for i in range(n):
         for j in range(m):
@@ -276,23 +277,24 @@ def smooth_step(
     return log_evidence, misfit
 
 
+@inlined
+def _matern(dt_T: float) -> tuple[float, float, float, float]:
+    """Return the transition of value and rate (in units of 1/T) of a Matérn 3/2 process, row by row."""
+    e = math.exp(-dt_T)
+    return e * (1.0 + dt_T), e * dt_T, -e * dt_T, e * (1.0 - dt_T)
+
+
 @kernel
 def _smooth_predict(
-    d: int, n: int, settles: int, settled: float, keep: float, dt_T: float, x: Floats, P: Floats
+    d: int, n: int, settles: int, keep: float, dt_T: Floats, moves: Floats, x: Floats, P: Floats
 ) -> None:
-    """Matérn 3/2 over one step for components and rates (in units of 1/T), AR(1) for the slow states.
+    """Matérn 3/2 over one step for components and rates, AR(1) for the slow states.
 
-    About zero or, the first `settles` components, about a value of their own, with the share `settled` of the
-    prior's variance.
+    About zero or, the first `settles` components, about a value of their own.
     """
     m = P.shape[0]
-    e = math.exp(-dt_T)
-    f00, f01, f10, f11 = e * (1.0 + dt_T), e * dt_T, -e * dt_T, e * (1.0 - dt_T)
-    # Stationary covariance is the identity in these units, so the fresh part is 1 - F F'.
-    q00 = 1.0 - f00 * f00 - f01 * f01
-    q01 = -f00 * f10 - f01 * f11
-    q11 = 1.0 - f10 * f10 - f11 * f11
     for c in range(d):
+        f00, f01, f10, f11 = _matern(dt_T[c])
         r, t = d + n + c, 2 * d + n + c
         a, b = x[c], x[r]
         x[c], x[r] = f00 * a + f01 * b, f10 * a + f11 * b
@@ -309,22 +311,21 @@ def _smooth_predict(
         x[i] *= keep
         for j in range(m):
             P[i, j] *= keep
-    for i in range(m):
-        for c in range(d):
-            r, t = d + n + c, 2 * d + n + c
+    for c in range(d):
+        f00, f01, f10, f11 = _matern(dt_T[c])
+        r, t = d + n + c, 2 * d + n + c
+        for i in range(m):
             a, b = P[i, c], P[i, r]
             P[i, c], P[i, r] = f00 * a + f01 * b, f10 * a + f11 * b
             if c < settles:
                 P[i, c] += (1.0 - f00) * P[i, t]
                 P[i, r] -= f10 * P[i, t]
-        for j in range(d, d + n):
+        # Stationary covariance is the identity in these units, so the fresh part is 1 - F F'.
+        P[c, c] += moves[c] * (1.0 - f00 * f00 - f01 * f01)
+        P[c, r] -= moves[c] * (f00 * f10 + f01 * f11)
+        P[r, c] -= moves[c] * (f00 * f10 + f01 * f11)
+        P[r, r] += moves[c] * (1.0 - f10 * f10 - f11 * f11)
+    for j in range(d, d + n):
+        for i in range(m):
             P[i, j] *= keep
-    for c in range(d):
-        r = d + n + c
-        fresh = settled if c < settles else 1.0
-        P[c, c] += fresh * q00
-        P[c, r] += fresh * q01
-        P[r, c] += fresh * q01
-        P[r, r] += fresh * q11
-    for i in range(d, d + n):
-        P[i, i] += 1.0 - keep * keep
+        P[j, j] += 1.0 - keep * keep

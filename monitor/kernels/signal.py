@@ -18,6 +18,8 @@ Floats = NDArray[np.float64]
 OK, NON_FINITE, OUT_OF_RANGE, BASE_POSE = 0, 1, 2, 7
 
 NOISY = 6.0  # score from which on a reading is too noisy
+SUSPECT = 2.5  # score that no blow reaches: the reading may turn out too noisy
+ROUGH = 1000  # samples over which the roughness of a torque is learnt
 LIVELY = 1000  # noisy samples after which an exact repetition means something
 _RELIEF = 0.2
 _REPETITION = 10
@@ -122,6 +124,20 @@ def noise_score(bend: float, bend_last: float, limit: float, score: float) -> fl
     if bend * bend_last < 0.0 and min(abs(bend), abs(bend_last)) > limit:
         return min(score + 1.0, NOISY + 2.0)  # no more, to end soon after the noise
     return max(score - _RELIEF, 0.0)
+
+
+@inlined
+def roughness(
+    bend: float, limit: float, total: float, count: int, largest: float
+) -> tuple[float, int, float]:
+    """Carry the mean square of second differences over `ROUGH` samples, and the largest mean so far.
+
+    A second difference beyond `limit` counts as one of it: a blow makes some that are no noise.
+    """
+    total += min(bend * bend, limit * limit)
+    if count + 1 < ROUGH:
+        return total, count + 1, largest
+    return 0.0, 0, max(largest, total / ROUGH)
 
 
 @inlined

@@ -362,6 +362,7 @@ def _fill_noise(params: Any, tree: Tree, config: Config) -> None:
     """Set what the noise of each reading on the wire is, and what no friction of its joint holds."""
     watch, base = config.watch, tree.n - len(tree.joints)
     rows = {i: base + k for k, i in enumerate(_order(tree, config))}
+    params["bend_ratio"] = watch.noise_ratio
     for i, joint in enumerate(config.robot.joint):
         position = math.hypot(joint.position_noise_sd, joint.encoder_step / math.sqrt(12.0))
         # The second difference of white noise has six times its variance.
@@ -416,6 +417,7 @@ def _facts(where: str, tree: Tree, config: Config, explanations: tuple[Explanati
         tree=tree,
         row_needs=((coupling != 0.0) | (np.abs(np.linalg.inv(coupling).T) > 1e-12))[order],
         explanations=explanations,
+        twins=weighing.twins(tree),
         certainty=config.explain.certainty,
         tool=tool,
         wait_ns=round(1e9 * watch.wait_periods / config.input.rate_hz),

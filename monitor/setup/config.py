@@ -527,8 +527,9 @@ class WatchConfig(Table):
     noise_ratio: Positive = Field(
         default=3.5,
         description=(
-            "Second differences of a position or velocity beyond so many standard deviations are too noisy "
-            "where they keep alternating. The default finds 10 times the configured noise within 30 samples."
+            "Second differences of a position, velocity or torque beyond so many standard deviations are too "
+            "noisy where they keep alternating; a torque's must also leave what its drive has shown before. "
+            "The default finds 10 times the configured noise within 30 samples."
         ),
     )
     base_jump: Positive = Field(
@@ -629,6 +630,25 @@ class ExplainConfig(Table):
     )
     lasting_s: Positive = Field(
         default=2.0, description="How long that probability has to hold before the fault is taken in [s]."
+    )
+    friction_drift: Positive = Field(
+        default=0.5,
+        description=(
+            "How far Coulomb and viscous friction of a joint may slowly leave the commissioned ones, as a "
+            "share of these; where they are next to nothing, of 2 % of rated torque (at 1 rad/s)."
+        ),
+    )
+    offset_drift: Positive = Field(
+        default=0.03,
+        description="How far a constant torque may slowly come up, as a share of rated torque.",
+    )
+    drift_memory_s: Positive = Field(
+        default=300.0,
+        description="Time in motion, quiet otherwise, over which these are estimated; rest is left out [s].",
+    )
+    drift_s: Positive = Field(
+        default=60.0,
+        description="Time in motion for which one has to be beyond, with `certainty`, to raise an alarm [s].",
     )
     largest_load_kg: Positive = Field(
         default=1.0, description="Largest load that may be taken up unannounced, as expected [kg]."

@@ -3,12 +3,14 @@
 from __future__ import annotations
 
 import math
+from statistics import NormalDist
 from typing import Any, NamedTuple
 
 import numpy as np
 from numpy.typing import NDArray
 
 from monitor import explain
+from monitor.explain import actuator
 from monitor.explain.outline import Candidate, Explanation, Outline
 from monitor.flow.layout import LASTING, SMOOTH, Form, Sizes
 from monitor.kernels import ledger
@@ -56,6 +58,7 @@ def outline(tree: Tree, config: Config, rated: Floats, model: Any) -> Outline:
         rated=rated[base:],
         coulomb=model.coulomb[base:],
         viscous=model.viscous[base:],
+        silent=tuple(silent(tree, config)),
         bodies=body.names,
         radius=body.radius,
         telling=np.array(
@@ -75,14 +78,10 @@ def cannot_tell(tree: Tree, config: Config) -> list[str]:
     return [*_like_an_actuator(tree, config), *_without_effect(tree, config), *_behind_the_gear(config)]
 
 
-def _like_an_actuator(tree: Tree, config: Config) -> list[str]:
-    """Say which joints are the only ones that any force on some link loads: its Jacobian has a single row.
-
-    Joints with a torque sensor at the link side are left out: there drive and world are two rows.
-    """
+def twins(tree: Tree) -> dict[str, str]:
+    """Return by link the only joint that forces on it load: its Jacobian has a single row."""
     base = tree.n - len(tree.joints)
-    sensed = {joint.name for joint in config.robot.joint if joint.link_torque_sensor}
-    links: dict[int, list[str]] = {}
+    found = {}
     body = bodies(tree)
     for name, axis in zip(body.names, body.axis.tolist(), strict=True):
         rows = set()
@@ -90,18 +89,30 @@ def _like_an_actuator(tree: Tree, config: Config) -> list[str]:
             rows.add(int(tree.arrays.dof[axis]))
             axis = int(tree.arrays.parent[axis])
         if len(rows) == 1:
-            links.setdefault(rows.pop(), []).append(name)
+            found[name] = tree.joints[rows.pop() - base]
+    return found
+
+
+def _like_an_actuator(tree: Tree, config: Config) -> list[str]:
+    """Say which faults of an actuator cannot be told from a force on some link.
+
+    Joints with a torque sensor at the link side are left out: there drive and world are two rows.
+    """
+    sensed = {joint.name for joint in config.robot.joint if joint.link_torque_sensor}
+    links: dict[str, list[str]] = {}
+    for link, joint in twins(tree).items():
+        links.setdefault(joint, []).append(link)
     return [
-        f"a force that loads only joint {tree.joints[row - base]!r}, as any on {_listed(names)} does, cannot "
+        f"a force that loads only joint {joint!r}, as any on {_listed(names)} does, cannot "
         "be told from a fault of its actuator; a torque sensor at the joint's link side or a force sensor at "
         "the base would settle it"
-        for row, names in sorted(links.items())
-        if tree.joints[row - base] not in sensed
+        for joint, names in links.items()
+        if joint not in sensed
     ]
 
 
-def _without_effect(tree: Tree, config: Config) -> list[str]:
-    """Say which joints may be anywhere: gravity and inertia do not depend on them, as on a vertical axis."""
+def silent(tree: Tree, config: Config) -> list[str]:
+    """Return the joints on which neither gravity nor inertia depends, as on one with a vertical axis."""
     robot = Robot(tree, config.robot.gravity_vector)
     rng = np.random.default_rng(0)
     base = tree.n - len(tree.joints)
@@ -115,7 +126,12 @@ def _without_effect(tree: Tree, config: Config) -> list[str]:
             moved[i] |= any(
                 np.abs(b - a).max() > _UNCHANGED * np.abs(a).max() for a, b in zip(here, there, strict=True)
             )
-    names = [joint for joint, once in zip(tree.joints, moved, strict=True) if not once]
+    return [joint for joint, once in zip(tree.joints, moved, strict=True) if not once]
+
+
+def _without_effect(tree: Tree, config: Config) -> list[str]:
+    """Say of which joints an offset of the position is not noticed."""
+    names = silent(tree, config)
     if not names:
         return []
     return [
@@ -192,6 +208,7 @@ def fill_evidence(params: Any, tree: Tree, config: Config, found: Candidates) ->
     params["slow_keep"] = math.exp(-dt / SLOW_S)
     params["track_keep"] = math.exp(-dt / TRACK_S)
     params["track_noise"], params["track_clip"] = TRACK_NOISE, TRACK_CLIP
+    _fill_trend(params, config, dt)
     params["least"] = LEAST
     params["cusum_samples"] = max(1, round(BLOCK_S / period_s))
     params["other_sd"] = OTHER * params["rated"]
@@ -206,6 +223,21 @@ def fill_evidence(params: Any, tree: Tree, config: Config, found: Candidates) ->
         params["of_sd"][0, number] = _lasting_sd(explanation)
     rates = [settings.nothing_per_h, settings.other_per_h, *(x.rate_per_h for x in found.explanations)]
     params["log_rate"] = np.log(rates)
+
+
+def _fill_trend(params: Any, config: Config, dt: float) -> None:
+    """Set how far friction may leave the commissioned one, and how certainly and for how long."""
+    settings, rated, of = config.explain, params["rated"][0], params["link_row"][0]
+    for a, (name, floor) in enumerate(
+        (("coulomb", actuator.COULOMB_FLOOR), ("viscous", actuator.VISCOUS_FLOOR))
+    ):
+        params["trend_limit"][0, :, a] = settings.friction_drift * np.maximum(
+            np.append(params[name][0], params[name][0, of]), floor * rated
+        )
+    params["trend_limit"][0, :, 2] = settings.offset_drift * rated
+    params["trend_keep"] = math.exp(-dt / settings.drift_memory_s)
+    params["trend_sure"] = NormalDist().inv_cdf(settings.certainty)
+    params["trend_s"] = settings.drift_s
 
 
 def _load_centre(tree: Tree, config: Config, axis: int) -> Floats:
@@ -254,10 +286,11 @@ def _fill_candidates(params: Any, found: Candidates, dt: float) -> None:
                 params["constant_sd"][0, k] = one.sd[0]
             else:
                 params["smooth_columns"][0, k] = len(one.sd)
-                params["smooth_sd"][0, k] = one.sd + (0.0,) * (SMOOTH - len(one.sd))
-                params["smooth_dt_T"][0, k] = dt / one.time_s
+                unused = (0.0,) * (SMOOTH - len(one.sd))
+                params["smooth_sd"][0, k] = one.sd + unused
+                params["smooth_dt_T"][0, k] = dt / np.array(one.times_s + (1.0,) * len(unused))
+                params["smooth_moves"][0, k] = one.moves + unused
                 params["smooth_settles"][0, k] = one.settles
-                params["smooth_settled"][0, k] = one.settled
                 params["smooth_sized"][0, k] = 3 if one.family in ("contact", "touchdown") else 1
 
 

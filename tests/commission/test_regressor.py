@@ -16,6 +16,7 @@ from monitor.robot.tree import Base, Tree, build_tree
 from monitor.robot.urdf import parse_urdf
 from tests.commission.motions import V0, Machine
 from tests.flow.rig import PAIR, SLED
+from tests.kernels.driven import allocated, control
 from tests.reference.random_trees import random_state, random_urdf
 from tests.robot.test_against_pin import GRAVITY, PinRobot
 
@@ -173,35 +174,15 @@ def test_the_kernels_compute_the_same_when_they_are_interpreted(base: Base) -> N
 
 def test_the_kernel_allocates_nothing() -> None:
     import numba
-    from numba.core.runtime import _nrt_python, rtsys
 
     weak_rows = regressor.weak_rows
-    given = tuple(arguments("floating"))
 
     @numba.njit
     def drive(count: int, given: Any) -> None:
         for _ in range(count):
             weak_rows(*given)
 
-    @numba.njit
-    def control(count: int) -> float:
-        total = 0.0
-        for k in range(count):
-            total += np.full(3 + k, 1.0).sum()
-        return total
-
-    def counted(call: Any, *rest: Any) -> int:
-        before = rtsys.get_allocation_stats().alloc
-        call(*rest)
-        return int(rtsys.get_allocation_stats().alloc - before)
-
-    drive(1, given)
-    control(1)
-    was = _nrt_python.memsys_stats_enabled()
-    _nrt_python.memsys_enable_stats()
-    try:
-        assert counted(control, 101) - counted(control, 1) == 100
-        assert counted(drive, 101, given) == counted(drive, 1, given)
-    finally:
-        if not was:
-            _nrt_python.memsys_disable_stats()
+    once, often = allocated(control())
+    assert often - once == 1000
+    once, often = allocated(drive, tuple(arguments("floating")))
+    assert often == once

@@ -19,6 +19,7 @@ from urllib.parse import urlencode
 from urllib.request import ProxyHandler, Request, build_opener
 
 import msgpack
+import numpy as np
 import pytest
 from prometheus_client import CollectorRegistry, generate_latest
 from prometheus_client.metrics_core import Metric
@@ -295,8 +296,12 @@ def test_residuals_carry_the_unit_and_the_name_of_their_own_row(tmp_path: Path) 
     out["band_fast"], out["band_slow"] = [0, 0, 0, 0, 0, 0, 7.5, 8.5], [0, 0, 0, 0, 0, 0, 9.5, 10.5]
     out["explained"], shared.state["tau"] = [9, 9, 9, 9, 9, 9, 0.5, -0.5], [9, 9, 9, 9, 9, 9, 11.5, -12.5]
     out["body_ratio"] = 0.125
+    shared.state["trend"], shared.state["trend_sd"] = np.arange(24).reshape(8, 3), 0.5
     values = scrape(Collector(setup, shared, "4f2a", "0.1.0"))
     assert values[of("body_ratio")] == 0.125
+    assert values[of("drift_ratio", joint="rail", parameter="offset")] == 20.0
+    assert values[of("drift_ratio", joint="hinge", parameter="coulomb-friction")] == 21.0
+    assert values[of("drift_ratio_sd", joint="hinge", parameter="viscous-friction")] == 0.5
     words = ("residual", "model", "band", "explained", "measured")
     found = {
         (name, dict(labels)["joint"], dict(labels).get("bandwidth")): value

@@ -141,12 +141,29 @@ def test_a_slipping_sensor_accelerates_beside_its_joint(number: int) -> None:
     m = motion(*ROBOTS[number])
     here = m.inverse_dynamics()
     for row in range(m.robot.n - len(m.robot.joints), m.robot.n):
-        H, slope = m.columns(3), np.random.default_rng(row).normal(size=(m.robot.n, m.robot.n))
-        position_sensor.rows(row, slope, m.M, np.zeros(0, np.int64), m.robot.tree.armature, H)
+        H, slope = m.columns(4), np.random.default_rng(row).normal(size=(m.robot.n, m.robot.n))
+        feature = np.full((m.robot.n, 3), 9.0)
+        feature[row, 2] = 0.0
+        position_sensor.rows(row, slope, m.M, feature, np.zeros(0, np.int64), m.robot.tree.armature, H)
         there = m._replace(a=m.a + np.eye(m.robot.n)[row]).inverse_dynamics()
-        assert worst(H[:, 1], there - here) < 1e-9
+        assert worst(H[:, 2], there - here) < 1e-9
+        np.testing.assert_array_equal(H[:, 3], H[:, 2])
         np.testing.assert_array_equal(H[:, 0], slope[row])
-        np.testing.assert_array_equal(H[:, 2], np.eye(m.robot.n)[row])
+        np.testing.assert_array_equal(H[:, 1], np.eye(m.robot.n)[row])
+
+
+def test_friction_of_a_joint_that_moves_well_is_not_misread() -> None:
+    # A slip turns the direction of a motion only where the joint is slower than the slip.
+    feature, H = np.zeros((2, 3)), np.full((2, 6), math.nan)
+    misread = []
+    for speed in (0.0, position_sensor.SLOW, -4.0 * position_sensor.SLOW):
+        feature[0, 2] = speed
+        position_sensor.rows(0, np.zeros((2, 2)), np.eye(2), feature, np.zeros(0, np.int64), np.zeros(2), H)
+        misread.append(H[0, 1])
+        assert H[1, 1] == 0.0
+    assert misread[0] == 1.0
+    assert 0.3 < misread[1] < 0.6
+    assert 0.0 <= misread[2] < 0.01
 
 
 @pytest.mark.parametrize(
@@ -169,11 +186,11 @@ def test_a_faulty_drive_leaves_a_residual_on_its_own_joint_alone(kind: int, expe
 def test_a_slipping_position_is_seen_at_both_sides_of_its_joint_and_adds_up() -> None:
     rng, armature = np.random.default_rng(2), np.array([0.3, 0.2, 0.1])
     slope, M = rng.normal(size=(2, 3, 3))
-    whole, apart = np.full((3, 3), math.nan), np.full((5, 3), math.nan)
-    position_sensor.rows(2, slope, M, np.zeros(0, np.int64), armature, whole)
-    position_sensor.rows(2, slope, M, np.array([0, 2]), armature, apart)
-    np.testing.assert_array_equal(apart[4], [0.0, 0.1, 1.0])  # rotor and friction of its own joint
-    np.testing.assert_array_equal(apart[3], np.zeros(3))
+    whole, apart, still = np.full((3, 4), math.nan), np.full((5, 4), math.nan), np.zeros((5, 3))
+    position_sensor.rows(2, slope, M, still, np.zeros(0, np.int64), armature, whole)
+    position_sensor.rows(2, slope, M, still, np.array([0, 2]), armature, apart)
+    np.testing.assert_array_equal(apart[4], [0.0, 1.0, 0.1, 0.1])  # friction and rotor of its own joint
+    np.testing.assert_array_equal(apart[3], np.zeros(4))
     apart[2] += apart[4]
     np.testing.assert_allclose(apart[:3], whole, atol=1e-15)
 

@@ -163,7 +163,7 @@ def test_every_message_has_the_documented_fields_in_their_order_and_numbers_with
 ) -> None:
     kinds = {body["kind"] for body in eventful.alarms()}
     # A torque that grows while nothing moves is the drive's own.
-    assert set(KINDS) - kinds == {"contact", "sensor", "load"}
+    assert set(KINDS) - kinds == {"contact", "sensor", "load", "drift"}
     for topic, fields in FIELDS.items():
         bodies = [m.body for m in eventful.messages if m.topic == topic]
         assert [body["seq"] for body in bodies] == list(range(1, len(bodies) + 1))

@@ -91,6 +91,8 @@ class Told:
         p = self.blocks.outputs[0]["probability"]
         p[:] = 0.0
         p[0], p[2 + self.fault] = 1.0 - probability, probability
+        of = self.blocks.params[0]["constant_of"]
+        self.state["constant_log"][of == self.fault] = 100.0 * probability
         said = self.events.after_step(notice, guided=False)
         self.said += said
         return said

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import math
 from collections.abc import Callable
+from dataclasses import replace
 from typing import Any
 
 import numpy as np
@@ -15,6 +16,7 @@ from numpy.typing import NDArray
 
 from monitor.flow.credible import credible
 from monitor.flow.layout import Signal
+from monitor.kernels import band
 from monitor.setup.build import Setup
 from tests.flow.rig import (
     PAIR,
@@ -634,7 +636,7 @@ def test_a_joint_that_repeats_itself_while_torque_must_move_it_either_way_is_fro
         assert ("signal", "frozen", "upper") not in rig.standing()
 
 
-@pytest.mark.parametrize("reading", ["position", "velocity"])
+@pytest.mark.parametrize("reading", ["position", "velocity", "torque"])
 def test_a_burst_of_noise_is_named_with_its_joint_and_ends_with_it(pair_setup: Setup, reading: str) -> None:
     rng = np.random.default_rng(13)
     rig, (q, qd) = Rig(pair_setup), swaying(2500)
@@ -647,12 +649,59 @@ def test_a_burst_of_noise_is_named_with_its_joint_and_ends_with_it(pair_setup: S
         if 1500 <= k < 1530:
             if reading == "velocity":
                 speed[1] += 15.0 * VELOCITY_SD * rng.standard_normal()
+            elif reading == "torque":
+                tau[1] += 15.0 * 0.1 * rng.standard_normal()  # configured: 0.5 % of 20 N m
             else:
                 place[1] += 15.0 * STEP / math.sqrt(12.0) * rng.standard_normal()
         rig.sample(encoded(place), speed, tau)
     assert {(b["kind"], b["detail"], b["joint"]) for b in rig.alarms()} == {("signal", "noise", "lower")}
-    assert 1 <= int(rig.state["bad"][Signal.NOISE]) < 30
+    assert 1 <= int(rig.state["bad"][Signal.NOISE]) < 40
     assert rig.standing() == set()
+
+
+def test_an_event_that_begins_with_noise_is_held_to_be_nothing_else(pair_setup: Setup) -> None:
+    # In a narrow band the noise stands out before it is named.
+    rng, fast = np.random.default_rng(22), pair_setup.band.fast.copy()
+    fast[:, band.FLOOR] *= 0.1
+    rig, q = Rig(pair_setup.with_band(replace(pair_setup.band, fast=fast))), np.full(2, 0.3)
+    weight = Mover(PAIR, (0.3, 0.1)).gravity_torque(q)
+    for k in range(3500):
+        louder = 20.0 if 2000 <= k < 2400 else 1.0
+        rig.sample(
+            encoded(q), louder * VELOCITY_SD * rng.standard_normal(2), weight + 0.1 * rng.standard_normal(2)
+        )
+    said = [m.body for m in rig.messages if m.topic == "verdict"]
+    assert {body["verdict"] for body in said} == {"undecided"}
+    assert not said[-1]["open"]
+    assert {b["kind"] for b in rig.alarms()} == {"unexplained-torque", "signal"}
+    assert rig.standing() == set()
+
+
+@pytest.mark.parametrize(
+    ("case", "noisy"),
+    [("blows", False), ("chattering drive", False), ("burst in it", True), ("brakes open", False)],
+)
+def test_what_a_drive_truly_does_is_no_noise_of_its_reading(
+    pair_setup: Setup, case: str, noisy: bool
+) -> None:
+    rng, samples = np.random.default_rng(21), 4000
+    q, qd = np.full((samples, 2), 0.3), np.zeros((samples, 2))
+    rig, sd = Rig(pair_setup), np.array([0.2, 0.1])
+    tau = sd * rng.standard_normal((samples, 2))
+    if case == "blows":  # a drive answers at once, and its torque rings
+        for k in range(1500, samples, 37):
+            tau[k:, 1] += 10.0 * rng.standard_normal() * np.exp(-np.arange(samples - k) / 3.0)
+    else:  # a drive that passes on the noise of its readings
+        tau[1000 if case == "brakes open" else 0 :] *= 8.0
+    if case == "burst in it":
+        tau[2500:2600, 1] *= 10.0
+    seen = set()
+    for k in range(samples):
+        if case == "brakes open" and k in (0, 1000):
+            rig.condition(brake=[int(k == 0)] * 2)
+        rig.sample(encoded(q[k]), sensed(q[k], qd[k], rng), np.clip(tau[k], -25.0, 25.0))
+        seen.add((Signal(int(rig.outputs["signal"])), int(rig.outputs["signal_joint"])))
+    assert faults(list(seen)) == ({(Signal.NOISE, 1)} if noisy else set())
 
 
 @pytest.mark.parametrize(("size", "found"), [(0.0003, False), (0.002, True), (-0.003, True)])

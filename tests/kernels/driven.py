@@ -1,7 +1,7 @@
 """Drives the step by itself, for other settings of numba: `allocations` or `rows FILE`.
 
-`allocations` prints, for each kernel, how many allocations 1 and 1001 calls from compiled code make
-(environment NUMBA_NRT_STATS=1). `rows` writes what the step computes; with NUMBA_DISABLE_JIT=1, interpreted.
+`allocations` prints, for each kernel, how many allocations 1 and 1001 calls from compiled code make. `rows`
+writes what the step computes; with NUMBA_DISABLE_JIT=1, interpreted.
 """
 
 from __future__ import annotations
@@ -89,12 +89,42 @@ def rows(setup: Setup, count: int) -> dict[str, Floats]:
     return {name: np.array(values) for name, values in found.items()}
 
 
+def allocated(drive: Callable[..., Any], *arguments: Any) -> list[int]:
+    """Return the allocations of `drive(1, ...)` and `drive(1001, ...)`, of which the first is compiled."""
+    from numba.core.runtime import _nrt_python, rtsys
+
+    drive(1, *arguments)
+    was = _nrt_python.memsys_stats_enabled()
+    _nrt_python.memsys_enable_stats()
+    found = []
+    try:
+        for count in (1, 1001):
+            before = rtsys.get_allocation_stats().alloc
+            drive(count, *arguments)
+            found.append(int(rtsys.get_allocation_stats().alloc - before))
+    finally:
+        if not was:
+            _nrt_python.memsys_disable_stats()
+    return found
+
+
+def control() -> Callable[[int], float]:
+    """Return a function that allocates once per count."""
+    import numba
+
+    def drive(count: int) -> float:
+        total = 0.0
+        for k in range(count):
+            total += np.full(3 + k, 1.0).sum()
+        return total
+
+    compiled: Callable[[int], float] = numba.njit(drive)
+    return compiled
+
+
 def allocations() -> dict[str, list[int]]:
     """Return the allocations of 1 and 1001 calls by kernel; `control` is one that allocates."""
     import numba
-    from numba.core import runtime
-
-    rtsys: Any = runtime.rtsys  # type: ignore[attr-defined]
 
     put_compiled = numba.njit(put)
 
@@ -115,28 +145,12 @@ def allocations() -> dict[str, list[int]]:
             )  # fmt: skip
             jacobian(c["parent"], c["dof"], s["S"], c["parent"].shape[0] - 1, c["gravity"], J)
 
-    @numba.njit
-    def drive_control(count: int) -> float:
-        total = 0.0
-        for k in range(count):
-            total += np.full(3 + k, 1.0).sum()
-        return total
-
-    def counted(drive: Callable[..., Any], *arguments: Any) -> list[int]:
-        drive(1, *arguments)  # compiles
-        found = []
-        for count in (1, 1001):
-            before = rtsys.get_allocation_stats().alloc
-            drive(count, *arguments)
-            found.append(rtsys.get_allocation_stats().alloc - before)
-        return found
-
-    figures = {"control": counted(drive_control)}
+    figures = {"control": allocated(control())}
     for name, setup in robots():
         blocks = setup.blocks()
-        figures[name] = counted(drive_step, *blocks)
+        figures[name] = allocated(drive_step, *blocks)
         J = np.zeros((6, setup.tree.n))
-        figures[f"{name}, dynamics"] = counted(drive_dynamics, *blocks[:3], J)
+        figures[f"{name}, dynamics"] = allocated(drive_dynamics, *blocks[:3], J)
     return figures
 
 

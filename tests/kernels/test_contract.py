@@ -52,7 +52,7 @@ def setup_of(base: str, form: str) -> Setup:
 
 
 def test_no_kernel_allocates() -> None:
-    figures = json.loads(driven("allocations", NUMBA_NRT_STATS="1"))
+    figures = json.loads(driven("allocations"))
     once, often = figures.pop("control")
     assert (once, often) == (1, 1001)
     assert len(figures) == 12
@@ -232,6 +232,7 @@ def samples() -> list[tuple[Any, tuple[Any, ...]]]:
         (signal.bend, (0.003, 0.002, 1_300_000, 1_000_000)),
         (signal.differenced, (2.001, 0.002, 0.001, 1_300_000, 1_000_000, 1e-5)),
         (signal.noise_score, (0.3, -0.2, 0.1, 1.7)),
+        (signal.roughness, (0.3, 0.2, 1.7, 999, 1e-4)),
         (signal.beyond_lag, (0.03, 2.0, 0.005)),
         (signal.liveliness, (0.02, -0.01, 0.005, 3, 700)),
         (band.variance, (table, 0.5 * table, np.full(4, math.nan))),

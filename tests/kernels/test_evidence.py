@@ -97,9 +97,16 @@ def smooth(c: Case, dt_T: float, settles: int = 0, before: int = 0) -> tuple[flo
     log_evidence, misfit = 0.0, 0.0
     for row in list(zip(c.r, c.R, c.D, c.H, strict=True))[before:]:
         y, G, columns = known.whitened(*row)
-        step = ev.smooth_step(columns, y, G, d, settles, SETTLED, c.keep, dt_T, x, P, u)
+        step = ev.smooth_step(columns, y, G, d, settles, c.keep, *times_and_moves(dt_T, d, settles), x, P, u)
         log_evidence, misfit = log_evidence + step[0], misfit + step[1]
     return log_evidence, misfit
+
+
+def times_and_moves(dt_T: float, d: int, settles: int) -> tuple[Floats, Floats]:
+    """Return a time of its own for each component, and how it goes on: the last of several fades."""
+    moves = np.where(np.arange(d) < settles, SETTLED, 1.0)
+    moves[d - 1] *= d == 1 or settles == d
+    return dt_T * (1.0 + 0.5 * np.arange(d)), moves
 
 
 def noise(c: Case) -> Floats:
@@ -123,14 +130,15 @@ def moving(c: Case, dt_T: float, settles: int, before: int = 0) -> Floats:
     that is left of k. About a value of its own the same holds for the distance from that value.
     """
     steps, n, d = c.H.shape
-    t = np.where(np.arange(steps) < before, np.nan, dt_T * (np.arange(steps) + 1.0 - before))
-    at, rate = (1.0 + t) * np.exp(-t), t * np.exp(-t)
-    apart = np.abs(np.subtract.outer(t, t))
-    fresh = (1.0 + apart) * np.exp(-apart) - np.outer(at, at) - np.outer(rate, rate)
-    start = NEAR**2 * np.outer(at, at) + np.outer(rate, rate)
-    about_zero = start + fresh
-    about_own = start + SETTLED * fresh + np.outer(1.0 - at, 1.0 - at)
-    K = np.stack([about_own if i < settles else about_zero for i in range(d)])
+    K = np.zeros((d, steps, steps))
+    for i, (step, moves) in enumerate(zip(*times_and_moves(dt_T, d, settles), strict=True)):
+        t = np.where(np.arange(steps) < before, np.nan, step * (np.arange(steps) + 1.0 - before))
+        at, rate = (1.0 + t) * np.exp(-t), t * np.exp(-t)
+        apart = np.abs(np.subtract.outer(t, t))
+        fresh = (1.0 + apart) * np.exp(-apart) - np.outer(at, at) - np.outer(rate, rate)
+        K[i] = NEAR**2 * np.outer(at, at) + np.outer(rate, rate) + moves * fresh
+        if i < settles:
+            K[i] += np.outer(1.0 - at, 1.0 - at)
     K = np.nan_to_num(K)
     return np.asarray(np.einsum("iab,api,bqi->apbq", K, c.H, c.H).reshape(steps * n, steps * n))
 

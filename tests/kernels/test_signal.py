@@ -72,7 +72,7 @@ def test_a_blow_however_hard_is_no_noise(
     k = np.arange(200.0)
     readings = velocity + height * np.clip((k - 80.3) / width, 0.0, 1.0)
     readings += bounce * height * np.clip((k - 80.3 - width - pause) / width, 0.0, 1.0)
-    assert scores(readings, 1e-3).max() < signal.NOISY
+    assert scores(readings, 1e-3).max() < signal.SUSPECT
 
 
 def test_ringing_of_a_structure_is_no_noise_but_at_a_third_of_the_sample_rate_it_is() -> None:
@@ -163,3 +163,20 @@ def test_velocities_formed_from_positions_are_recognised() -> None:
         assert signal.differenced(qd, step, last, 1_050_000, MS, tolerance)
     for qd in (step / 1e-3 + 0.02, 0.5 * (step + last) / 1e-3):
         assert not signal.differenced(qd, step, last, 1_050_000, MS, tolerance)
+
+
+def test_the_roughness_of_a_torque_is_that_of_its_noise_whatever_blows_come() -> None:
+    # White noise: the second difference has six times its variance.
+    rng, sd = np.random.default_rng(6), 0.3
+    readings = sd * rng.standard_normal(signal.ROUGH + 2)
+    total, count, largest = 0.0, 0, 0.0
+    for bend in np.diff(readings, 2):
+        total, count, largest = signal.roughness(bend, math.inf, total, count, largest)
+    assert (total, count) == (0.0, 0)
+    # Of a thousand dependent squares the mean is known to some percent.
+    assert largest == pytest.approx(6.0 * sd**2, rel=0.15)
+    limit, known = 3.5 * math.sqrt(largest), largest
+    readings[500:502] += 100.0
+    for bend in np.diff(readings, 2):
+        total, count, largest = signal.roughness(bend, limit, total, count, largest)
+    assert known < largest < 1.1 * known

@@ -123,3 +123,54 @@ def test_what_friction_explains_and_how_surely_follows_from_the_parameters() -> 
     x = -np.column_stack([feature[:, 1:], np.ones(4)])
     np.testing.assert_allclose(torque, (x * theta).sum(axis=1), rtol=1e-12)
     np.testing.assert_allclose(variance, np.einsum("ia,iab,ib->i", x, P, x), rtol=1e-12)
+
+
+def trended(c: Course, limit: Floats, lasting: float = 0.0) -> tuple[Floats, Floats]:
+    """Return the trend (3) of a course on one of ROWS rows and its sd (3), in units of the limits."""
+    row, limits = 1, np.tile(limit, (ROWS, 1))
+    info, total = np.zeros((ROWS, 3, 3)), np.zeros((ROWS, 3))
+    mean, sd, feature = np.zeros((ROWS, 3)), np.zeros((ROWS, 3)), np.full((ROWS, 3), math.nan)
+    for r, variance, x in zip(c.r, c.variance, c.feature, strict=True):
+        feature[row] = x
+        tracking.gather(row, r, variance, feature, limits, c.keep, info, total)
+    tracking.trend(row, info, total, limits, lasting, mean, sd)
+    assert not mean[[0, 2]].any()
+    return mean[row], sd[row]
+
+
+def test_a_trend_is_the_weighted_least_squares_fit_of_what_is_remembered() -> None:
+    # Judge: numpy's least squares on all rows at once, older ones scaled down; the prior is three rows more.
+    c, limit = course(8, keep=0.95), np.array([0.3, 0.1, 0.4])
+    back = np.arange(len(c.r))[::-1]
+    weight = np.sqrt(c.keep**back / c.variance)
+    x = -np.column_stack([c.feature[:, 1:3], np.ones(len(c.r))]) * limit
+    rows = np.vstack([weight[:, None] * x, np.eye(3) / tracking.TREND_SD])
+    expected = np.linalg.lstsq(rows, np.append(weight * c.r, np.zeros(3)), rcond=None)[0]
+    mean, sd = trended(c, limit)
+    np.testing.assert_allclose(mean, expected, rtol=1e-9)
+    np.testing.assert_allclose(sd, np.sqrt(np.diag(np.linalg.inv(rows.T @ rows))), rtol=1e-9)
+
+
+def test_an_error_that_lasts_does_not_average_out_of_a_trend() -> None:
+    # An offset alone, every residual off by one common error: the variance of the mean is V/N + lasting².
+    steps, variance, lasting, limit = 5000, 0.5, 0.2, np.array([0.1, 0.1, 0.4])
+    still = np.tile([3.0, 0.0, 0.0], (steps, 1))
+    c = Course(np.full(steps, -0.6), np.full(steps, variance), still, np.ones(3), 1.0)
+    mean, sd = trended(c, limit, lasting)
+    assert mean[2] == pytest.approx(0.6 / 0.4, rel=0.01)
+    assert sd[2] == pytest.approx(math.sqrt(variance / steps + lasting**2) / 0.4, rel=0.01)
+    # Of friction, which this joint never felt, nothing is known.
+    np.testing.assert_allclose(sd[:2], tracking.TREND_SD)
+
+
+def test_a_trend_is_not_drawn_back_as_tracked_friction_is() -> None:
+    rng, steps, true = np.random.default_rng(9), 4000, np.array([0.3, 0.1, -0.2])
+    speed = np.repeat(rng.uniform(-1.0, 1.0, steps // 200), 200)
+    feature = np.column_stack([np.zeros(steps), np.tanh(speed / 0.01), speed])
+    x = -np.column_stack([feature[:, 1:], np.ones(steps)])
+    r = x @ true + 0.3 * rng.standard_normal(steps)
+    c = Course(r, np.full(steps, 20.0 * 0.3**2), feature, 0.03 * np.ones(3), math.exp(-0.004 / 120.0))
+    assert abs(tracked(c)[0][1, 0] - 0.3) > 0.1
+    mean, sd = trended(c, np.full(3, 0.15))
+    assert sd.max() < 1.0
+    np.testing.assert_array_less(np.abs(0.15 * mean - true), 0.15 * sd)

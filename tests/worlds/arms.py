@@ -3,7 +3,8 @@
 Worlds:
 
 - `rigid`: stiff joints; the engine's dry friction, a constraint that really sticks, plus viscous friction.
-- `elastic`: a spring with backlash and a little damping couples rotor and link of each joint; encoders,
+- `elastic`: a spring with backlash and a little damping couples rotor and link of each joint; its program of
+  work has no steps of acceleration, after which it would swing on its springs; encoders,
   velocities and torques are those of the motor side; the engine's dry friction acts on the rotors.
 - `dip`: stiff joints; friction falls with speed before viscous friction makes it rise again (a law of the
   velocity, see engine.py); it does not truly stick but creeps below `v0`.
@@ -13,7 +14,8 @@ Everywhere: the true inertias are 3 to 8 % off the description; friction differs
 to session and falls by some percent while the arm gets warm; the drives follow smooth moves by feed-forward
 of the description plus position and velocity feedback, with a torque limit, on their own readings. The
 physics runs at 0.25 ms, samples at 1 kHz; a row holds state and torque of one instant; torque varies
-continuously between rows. What a load adds is no row of `unexplained`.
+continuously between rows, but where a stiff arm begins or ends a continuous path: there its acceleration
+steps. What a load adds is no row of `unexplained`.
 
 Seeds: see sessions.py for which ones are held out.
 """
@@ -138,7 +140,7 @@ def session(
     arm = robot(robot_seed)
     streams = np.random.SeedSequence([robot_seed, seed, crc32(world.encode())]).spawn(6)
     moving, happening, day, noise, spoiling, sensing = (np.random.default_rng(stream) for stream in streams)
-    program = work(moving, seconds)
+    program = work(moving, seconds, steady=world == "elastic")
     happenings = happen(program, happening)
     samples = round(seconds / PERIOD_S)
     simulation = _Simulation(world, arm, program, happenings, _Friction.drawn(world, arm, day))

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.interpolate import CubicSpline, PPoly
+from scipy.interpolate import BPoly, CubicSpline, PPoly
 
 from tests.worlds.robots import HALF_RANGE, HOME, JOINTS
 
@@ -34,14 +34,18 @@ class Program:
         return values
 
 
-def work(rng: np.random.Generator, seconds: float) -> Program:
-    """Return a program of at least so many seconds; top speed of each move between 1 and 2 rad/s."""
+def work(rng: np.random.Generator, seconds: float, steady: bool = False) -> Program:
+    """Return a program of at least so many seconds; top speed of each move between 1 and 2 rad/s.
+
+    Acceleration steps where a continuous path begins and ends, unless it is `steady`: a stiff arm follows it
+    at once, an elastic one swings.
+    """
     here = _somewhere(rng)
     pieces = [_rest(here, REST_S)]
     total = REST_S
     while total < seconds:
         if rng.random() < 0.2:
-            stretch, here = _flow(here, rng)
+            stretch, here = _flow(here, rng, steady)
         else:
             there = _somewhere(rng)
             if rng.random() < 0.4:  # some joints only
@@ -76,7 +80,7 @@ def _move(here: Floats, there: Floats, speed: float) -> tuple[float, Floats]:
     return T, np.stack([6.0 * away / T**5, -15.0 * away / T**4, 10.0 * away / T**3, zero, zero, here])
 
 
-def _flow(here: Floats, rng: np.random.Generator) -> tuple[list[tuple[float, Floats]], Floats]:
+def _flow(here: Floats, rng: np.random.Generator, steady: bool) -> tuple[list[tuple[float, Floats]], Floats]:
     """Return a smooth path through several points without a stop, and where it ends."""
     points = [here]
     for _ in range(rng.integers(4, 9)):
@@ -84,12 +88,23 @@ def _flow(here: Floats, rng: np.random.Generator) -> tuple[list[tuple[float, Flo
     spans = rng.uniform(0.7, 1.3, len(points) - 1)
     knots = np.concatenate([[0.0], np.cumsum(spans)])
     dense = np.linspace(0.0, knots[-1], 400)
-    unit = CubicSpline(knots, points, bc_type="clamped")
+    unit = _through(knots, points, steady)
     slower = max(
         np.abs(unit(dense, 1)).max() / rng.uniform(1.0, 2.0),
         np.sqrt(np.abs(unit(dense, 2)).max() / TOP_ACCELERATION),
     )
-    path = CubicSpline(slower * knots, points, bc_type="clamped")
-    padding = np.zeros((_DEGREE - 3, JOINTS))
+    path = _through(slower * knots, points, steady)
+    padding = np.zeros((_DEGREE + 1 - len(path.c), JOINTS))
     pieces = [(float(slower * spans[k]), np.vstack([padding, path.c[:, k]])) for k in range(len(spans))]
     return pieces, points[-1]
+
+
+def _through(knots: Floats, points: list[Floats], steady: bool) -> PPoly:
+    """Return the smooth path through points (K,n) that rests at both ends."""
+    path = CubicSpline(knots, points, bc_type="clamped")
+    if not steady:
+        return path
+    acceleration = path(knots, 2)
+    acceleration[[0, -1]] = 0.0
+    at_knots = np.stack([points, path(knots, 1), acceleration], axis=1)
+    return PPoly.from_bernstein_basis(BPoly.from_derivatives(knots, at_knots))

@@ -124,8 +124,10 @@ def played(setup: Setup, samples: Samples) -> tuple[list[Event], list[float]]:
 def judge(tally: Tally, session: WorldSession, events: Sequence[Event], bad: Sequence[float]) -> None:
     """Add what was said of a session to the tally of its world."""
     tally.seconds += float(session.t[-1])
-    for truth in session.truths:
-        opened = [e for e in events if truth.start_s - 0.02 <= e.opened_s <= truth.end_s + _LATE_S]
+    for i, truth in enumerate(session.truths):
+        # What happens during a lasting fault is judged by itself.
+        within = [other for other in session.truths if other.during == i]
+        opened = [e for e in events if _explains(truth, e) and not any(_explains(t, e) for t in within)]
         running = [e for e in events if e.opened_s < truth.start_s < e.ended_s]
         spoiled = any(truth.start_s - 0.02 <= t <= truth.end_s + _LATE_S for t in bad)
         if truth.kind == "contact" and truth.during is None and (truth.effect or 0.0) >= _BAR_CONTACT:

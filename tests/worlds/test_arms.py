@@ -19,6 +19,7 @@ from monitor.robot.urdf import read_urdf
 from tests.worlds.arms import fault_free, session, trial
 from tests.worlds.engine import PERIOD_S
 from tests.worlds.happenings import Fault, Grip, Happenings, Misreading, SignalFault, actuator_fault
+from tests.worlds.programs import TOP_ACCELERATION, work
 from tests.worlds.robots import ENCODER_STEP_RAD, JOINTS, LINK_TORQUE_SD_SHARE, robot
 from tests.worlds.sessions import HELD_OUT_FROM, Exact, Truth, WorldSession, held_out
 
@@ -525,3 +526,13 @@ def test_an_unknown_world_or_kind_is_refused() -> None:
         fault_free("soft", 0, 0, 1.0)
     with pytest.raises(ValueError, match="kind"):
         trial("rigid", 0, 0, "magic")
+
+
+def test_steady_programs_ask_for_no_step_of_acceleration() -> None:
+    # An elastic arm swings after such a step, by far more than any fault would show.
+    t = np.arange(0.0, 60.0, PERIOD_S)
+    for seed in range(3):
+        plain, steady = (work(np.random.default_rng(seed), 60.0, steady)(t, 2) for steady in (False, True))
+        assert np.abs(np.diff(plain, axis=0)).max() > 2.0
+        assert np.abs(np.diff(steady, axis=0)).max() < 0.3
+        assert np.abs(steady).max() < 1.1 * TOP_ACCELERATION
