@@ -138,6 +138,7 @@ def _joint_row(setup: Any, i: int, gravity_nm: float) -> dict[str, Any]:
         "unit": "N" if tree.joint_kinds[k] == "prismatic" else "N m",
         "rated": joint.rated_torque,
         "tau_is": joint.torque_meaning,
+        "tau_link": "sensor" if joint.link_torque_sensor else "",
         "armature": float(setup.model.armature[row]),
         "coulomb": float(setup.model.coulomb[row]),
         "viscous": float(setup.model.viscous[row]),

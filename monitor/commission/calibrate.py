@@ -14,7 +14,7 @@ from monitor.commission.drive import Samples, free_rows
 from monitor.commission.fit import FitOptions, FittedModel, Recording, fit_model
 from monitor.commission.friction import bent
 from monitor.errors import ConfigError
-from monitor.setup.build import Setup, build
+from monitor.setup.build import Setup, apart, build
 from monitor.setup.calibration import Band, Calibration, Model, default_band
 from monitor.setup.config import Config
 
@@ -64,7 +64,7 @@ def calibrate(
         np.array(config.robot.gravity_vector),
         plain.model,
         [recording(plain, samples) for samples in sessions_for_model],
-        FitOptions(plain.params["rated"][0], plain.params["friction_velocity"][0]),
+        FitOptions(plain.params["rated"][0, : plain.sizes.n], plain.params["friction_velocity"][0]),
     )
     setup = _with_model(plain, fitted.model)
     setup = _with_model(plain, bent(setup.with_band(without_limits(setup.band)), sessions_for_model))
@@ -143,6 +143,7 @@ def _with_model(plain: Setup, model: Model) -> Setup:
 
 def _first_band(plain: Setup, model: Model) -> Band:
     """Return the band to begin with: wide, friction tracked as far as it usually changes."""
-    rated = plain.params["rated"][0]
+    rated = plain.params["rated"][0, : plain.sizes.n]
     changes = [_COULOMB_CHANGE * model.coulomb, _VISCOUS_CHANGE * model.viscous, _OFFSET_CHANGE * rated]
-    return replace(default_band(rated, model.coulomb, model.viscous), track_sd=np.column_stack(changes))
+    band = replace(default_band(rated, model.coulomb, model.viscous), track_sd=np.column_stack(changes))
+    return apart(plain.tree, plain.config, band)

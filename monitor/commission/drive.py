@@ -34,6 +34,8 @@ class Samples(NamedTuple):
         Position, quaternion w-x-y-z, velocity (world), angular velocity (body); no columns without a base.
     feet : (T,F), optional
         1 where a foot is planned to stand; a floating base needs them.
+    tau_link : (T,m), optional
+        Torque at the link side as reported; what stands at joints without a sensor is of no account.
     """
 
     t_ns: Ints
@@ -42,12 +44,13 @@ class Samples(NamedTuple):
     tau: Floats
     base: Floats
     feet: Ints | None = None
+    tau_link: Floats | None = None
 
 
 class Trace(NamedTuple):
-    """What the step made of it, by sample: residuals (T,n), causes (T,n,C), features, variances, ratios.
+    """What the step made of it, by sample: residuals (T,rows), causes (T,rows,C), features, variances.
 
-    judged (T,n) is 1 where a row feels no force that is not known.
+    Rows are those that are judged; judged (T,rows) is 1 where one feels no force that is not known.
     """
 
     r_fast: Floats
@@ -94,8 +97,24 @@ def free_rows(setup: Setup, samples: Samples) -> Ints:
     return free
 
 
+def _judged(setup: Setup, samples: Samples) -> Ints:
+    """Return `free_rows`, motor sides (T,rows) as their joints."""
+    free = free_rows(setup, samples)
+    return np.hstack([free, free[:, setup.params["link_row"][0]]])
+
+
+def _links(params: Block, samples: Samples) -> Floats:
+    """Return what the configured sensors at links read (T,sensors); NaN where the recording has none."""
+    places = params["link_wire"][0]
+    if samples.tau_link is None:
+        return np.full((len(samples.t_ns), len(places)), np.nan)
+    return np.ascontiguousarray(samples.tau_link[:, places])
+
+
 @kernel
-def _take(inputs: Block, k: int, t_ns: Ints, q: Floats, qd: Floats, tau: Floats, base: Floats) -> None:
+def _take(
+    inputs: Block, k: int, t_ns: Ints, q: Floats, qd: Floats, tau: Floats, base: Floats, tau_link: Floats
+) -> None:
     """Put sample k where the step expects it."""
     x = inputs[0]
     x["seq"] = x["seq"] + 1
@@ -103,6 +122,7 @@ def _take(inputs: Block, k: int, t_ns: Ints, q: Floats, qd: Floats, tau: Floats,
     x["q"][:] = q[k]
     x["qd"][:] = qd[k]
     x["tau"][:] = tau[k]
+    x["tau_link"][:] = tau_link[k]
     if base.shape[1] == 13:
         x["base_p"][:] = base[k, :3]
         x["base_quat"][:] = base[k, 3:7]
@@ -113,17 +133,17 @@ def _take(inputs: Block, k: int, t_ns: Ints, q: Floats, qd: Floats, tau: Floats,
 @kernel
 def _run(
     params: Block, inputs: Block, state: Block, outputs: Block,
-    t_ns: Ints, q: Floats, qd: Floats, tau: Floats, base: Floats,
+    t_ns: Ints, q: Floats, qd: Floats, tau: Floats, base: Floats, tau_link: Floats,
     r_fast: Floats, r_slow: Floats, explained: Floats, cause: Floats, feature: Floats, variance: Floats,
     ratio: Floats, body: Floats, cusum: Floats, is_open: Ints, settling: Ints, judged: Ints,
 ) -> None:  # fmt: skip
     s, out = state[0], outputs[0]
     for k in range(t_ns.shape[0]):
-        _take(inputs, k, t_ns, q, qd, tau, base)
+        _take(inputs, k, t_ns, q, qd, tau, base, tau_link)
         inputs[0]["judged"][:] = judged[k]
         step(params, inputs, state, outputs)
-        r_fast[k] = out["r_fast"]
-        r_slow[k] = out["r_slow"]
+        r_fast[k] = out["row_fast"]
+        r_slow[k] = out["row_slow"]
         explained[k] = s["explained"]
         cause[k] = s["cause"]
         feature[k] = s["feature"]
@@ -144,11 +164,18 @@ def run(setup: Setup, samples: Samples) -> Trace:
     Raises
     ------
     SessionError
-        As `free_rows`.
+        As `free_rows`; or if a torque sensor at a link is configured and does not read all through.
     """
+    if not np.isfinite(_links(setup.params, samples)).all():
+        raise SessionError(
+            "recording of a robot with torque sensors at its links",
+            "samples without `tau_link`" if samples.tau_link is not None else "no `tau_link`",
+            "a reading of each sensor in each sample",
+            "Record with the sensors, or take link_torque_sensor out of the configuration.",
+        )
     blocks = setup.blocks()
     blocks.inputs["drive"] = 1
-    T, n, causes = len(samples.t_ns), setup.sizes.n, setup.params["cause_fast"].shape[-1]
+    T, n, causes = len(samples.t_ns), setup.sizes.rows, setup.params["cause_fast"].shape[-1]
     trace = Trace(
         r_fast=np.zeros((T, n)),
         r_slow=np.zeros((T, n)),
@@ -161,9 +188,9 @@ def run(setup: Setup, samples: Samples) -> Trace:
         cusum=np.zeros(T),
         open=np.zeros(T, np.int64),
         settling=np.zeros(T, np.int64),
-        judged=free_rows(setup, samples),
+        judged=_judged(setup, samples),
     )
-    arrays: tuple[Any, ...] = (*samples[:5], *trace)
+    arrays: tuple[Any, ...] = (*samples[:5], _links(setup.params, samples), *trace)
     _run(*blocks, *arrays)
     return trace
 
@@ -171,10 +198,10 @@ def run(setup: Setup, samples: Samples) -> Trace:
 @kernel
 def _until(
     params: Block, inputs: Block, state: Block, outputs: Block, k: int, looked_for: int,
-    t_ns: Ints, q: Floats, qd: Floats, tau: Floats, base: Floats,
+    t_ns: Ints, q: Floats, qd: Floats, tau: Floats, base: Floats, tau_link: Floats,
 ) -> int:  # fmt: skip
     while k < t_ns.shape[0]:
-        _take(inputs, k, t_ns, q, qd, tau, base)
+        _take(inputs, k, t_ns, q, qd, tau, base, tau_link)
         step(params, inputs, state, outputs)
         k += 1
         if outputs[0]["notice"] & looked_for:
@@ -188,5 +215,5 @@ def until(blocks: Blocks, samples: Samples, k: int, looked_for: int) -> int:
     Which rows are judged is left to the caller (`inputs.judged`). Returns the number of samples stepped since
     the beginning: the last one is that of the notice.
     """
-    arrays: tuple[Any, ...] = samples[:5]
+    arrays: tuple[Any, ...] = (*samples[:5], _links(blocks.params, samples))
     return int(_until(*blocks, k, looked_for, *arrays))

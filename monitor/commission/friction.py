@@ -32,11 +32,12 @@ def bent(setup: Setup, recordings: Sequence[Samples]) -> Model:
     """
     traces = [run(setup, one) for one in recordings]
     v0, rated = setup.params["friction_velocity"][0], setup.params["rated"][0]
-    model = setup.model
+    model, rows = setup.model, np.arange(setup.sizes.n)
+    rows[setup.params["link_row"][0]] = np.arange(setup.sizes.n, setup.sizes.rows)  # where friction is seen
     coulomb, viscous, bend = model.coulomb.copy(), model.viscous.copy(), model.bend.copy()
     for i in range(setup.sizes.base, setup.sizes.n):
         v = np.concatenate([t.feature[t.settling == 0, i, 2][::_EVERY] for t in traces])
-        r = np.concatenate([t.r_slow[t.settling == 0, i][::_EVERY] for t in traces])
+        r = np.concatenate([t.r_slow[t.settling == 0, rows[i]][::_EVERY] for t in traces])
         moves = np.abs(v) > _MOVES * v0[i]
         if np.count_nonzero(moves) < 1000:
             continue

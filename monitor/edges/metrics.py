@@ -81,9 +81,10 @@ def _joint_rows(s: Source, field: str, unit: str) -> Iterator[Row]:
 
 
 def _rows_of(s: Source, values: Any, unit: str) -> Iterator[Row]:
-    """Joint and value of the rows of v that belong to joints with this unit."""
-    base = len(s.facts.rows) - len(s.facts.joints)
-    rows = zip(s.facts.rows, s.facts.units, values, strict=True)
+    """Joint and value of the rows of v, or of all that are judged, which belong to joints with this unit."""
+    base = len(s.facts.rows) - len(s.facts.link_torque) - len(s.facts.joints)
+    count = len(values)
+    rows = zip(s.facts.rows[:count], s.facts.units[:count], values, strict=True)
     return ((joint, value) for joint, its_unit, value in list(rows)[base:] if its_unit == unit)
 
 
@@ -93,9 +94,14 @@ def _both_bandwidths(s: Source, field: str, unit: str) -> Iterator[Row]:
             yield joint, bandwidth, value
 
 
+def _link_torque(s: Source) -> Iterator[Row]:
+    joints = (s.facts.joints[place] for place in s.facts.link_torque)
+    return zip(joints, s.state["tau_link"], strict=True)
+
+
 def _trends(s: Source, field: str) -> Iterator[Row]:
     """Joint, parameter and value, as shares of the limits."""
-    base = len(s.facts.rows) - len(s.facts.joints)
+    base = len(s.facts.rows) - len(s.facts.link_torque) - len(s.facts.joints)
     for joint, values in zip(s.facts.rows[base:], s.state[field][base:], strict=True):
         for parameter, value in zip(trend.DETAILS, values, strict=True):
             yield joint, parameter, value
@@ -158,15 +164,16 @@ METRICS = (
     Declared(
         "limbtell_residual_newton_meters",
         "gauge",
-        "Torque the model does not explain, by rotating joint and bandwidth of the residual.",
-        lambda s: _both_bandwidths(s, "r", "N m"),
+        "Torque the model does not explain, by rotating joint and bandwidth of the residual; where a torque "
+        "sensor lies between them, link side and motor side apart.",
+        lambda s: _both_bandwidths(s, "row", "N m"),
         ("joint", "bandwidth"),
     ),
     Declared(
         "limbtell_residual_newtons",
         "gauge",
         "Force the model does not explain, by prismatic joint and bandwidth of the residual.",
-        lambda s: _both_bandwidths(s, "r", "N"),
+        lambda s: _both_bandwidths(s, "row", "N"),
         ("joint", "bandwidth"),
     ),
     Declared(
@@ -236,6 +243,13 @@ METRICS = (
         "gauge",
         "Force of a prismatic joint as its drive reports it, in terms of the model.",
         lambda s: _measured(s, "N"),
+        ("joint",),
+    ),
+    Declared(
+        "limbtell_link_torque_newton_meters",
+        "gauge",
+        "Torque at the link side of a joint as its sensor reads it, in terms of the model.",
+        _link_torque,
         ("joint",),
     ),
     Declared(

@@ -7,7 +7,7 @@ from collections.abc import Callable
 import numpy as np
 from numpy.typing import NDArray
 
-from monitor.explain import actuator, contact, load, position_sensor, touchdown
+from monitor.explain import actuator, contact, load, position_sensor, torque_sensor, touchdown
 from monitor.explain.outline import Explanation, Outline
 from monitor.kernels.jit import kernel
 
@@ -21,9 +21,10 @@ FAMILIES: tuple[tuple[str, Callable[[Outline], list[Explanation]]], ...] = (
     (position_sensor.NAME, position_sensor.explanations),
     (load.NAME, load.explanations),
     (touchdown.NAME, touchdown.explanations),
+    (torque_sensor.NAME, torque_sensor.explanations),
 )
 NAMES = tuple(name for name, _ in FAMILIES)
-CONTACT, ACTUATOR, SENSOR, LOAD, TOUCHDOWN = range(len(FAMILIES))
+CONTACT, ACTUATOR, SENSOR, LOAD, TOUCHDOWN, TORQUE_SENSOR = range(len(FAMILIES))
 
 
 def explanations(outline: Outline) -> list[Explanation]:
@@ -36,9 +37,9 @@ def fill(
     family: int, index: int, feature: Floats, slope: Floats, M: Floats,
     body_axis: Ints, body_centre: Floats, foot_axis: Ints, foot_point: Floats,
     load_axis: int, load_centre: Floats, parent: Ints, dof: Ints, S: Floats, V: Floats, Vd: Floats,
-    R: Floats, p: Floats, H: Floats,
+    R: Floats, p: Floats, link_row: Ints, armature: Floats, H: Floats,
 ) -> None:  # fmt: skip
-    """Fill the columns H (n,6) of a candidate: torque per unit of its parameters, as many as it has.
+    """Fill the columns H (rows,6) of a candidate: torque per unit of its parameters, as many as it has.
 
     family is a place in `FAMILIES`, index what `Candidate.number` says; the other arrays are described at the
     `rows` of each family.
@@ -48,8 +49,10 @@ def fill(
     elif family == ACTUATOR:
         actuator.rows(index, feature, H)
     elif family == SENSOR:
-        position_sensor.rows(index, slope, M, feature, H)
+        position_sensor.rows(index, slope, M, feature, link_row, armature, H)
     elif family == LOAD:
         load.rows(load_axis, load_centre, parent, dof, S, V, Vd, R, p, H)
+    elif family == TORQUE_SENSOR:
+        torque_sensor.rows(index, link_row, feature, H)
     else:
         contact.rows(foot_axis[index], foot_point[index], parent, dof, S, R, p, H)

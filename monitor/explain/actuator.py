@@ -43,7 +43,7 @@ def explanations(outline: Outline) -> list[Explanation]:
             FRICTION_SD * max(float(outline.viscous[i]), VISCOUS_FLOOR * rated),
             OFFSET_SD * rated,
         )
-        row = outline.base + i
+        row = outline.drive_row(i)
         candidates = []
         for kind, (detail, sd, unit_) in enumerate(zip(DETAILS, sds, units(unit), strict=True)):
             index = 8 * row + kind
@@ -69,7 +69,8 @@ def units(unit: str) -> tuple[str, str, str, str]:
 def rows(index: int, feature: Floats, H: Floats) -> None:
     """Fill the first column of H (n, >= 1): torque per unit of the constant, or of the free torque.
 
-    index is 8 * row + kind; feature (n, >= 3) is tau, tanh(v/v0) and v through the residual's own filter.
+    index is 8 * row + kind, row that of the drive; feature (n, >= 3) is tau, tanh(v/v0) and v through the
+    residual's own filter.
     """
     row, kind = index // 8, index % 8
     for i in range(H.shape[0]):

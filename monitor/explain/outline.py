@@ -34,6 +34,8 @@ class Outline:
         Force that loads some joint with its rated torque, arm outstretched [N].
     feet : tuple of str
         Names of the feet.
+    sensed : tuple of int
+        Joints with a torque sensor at the link side: their motor sides are rows after all others.
     weight : float
         Of the whole robot [N].
     carrier, payload : str, float
@@ -57,6 +59,13 @@ class Outline:
     carrier: str
     payload: float
     rates: dict[str, float]
+    sensed: tuple[int, ...] = ()
+
+    def drive_row(self, joint: int) -> int:
+        """Return the row in which the drive of a joint is seen: that of the joint, or of its motor side."""
+        if joint in self.sensed:
+            return self.base + len(self.joints) + self.sensed.index(joint)
+        return self.base + joint
 
 
 class Candidate(NamedTuple):

@@ -15,6 +15,7 @@ from monitor.explain.outline import Candidate, Explanation, Outline
 from monitor.kernels.jit import kernel
 
 Floats = NDArray[np.float64]
+Ints = NDArray[np.int64]
 
 NAME = "position-sensor"
 OFFSET_SD = 0.05  # rad or m
@@ -48,15 +49,27 @@ def explanations(outline: Outline) -> list[Explanation]:
 
 
 @kernel
-def rows(row: int, slope: Floats, M: Floats, feature: Floats, H: Floats) -> None:
-    """Fill H (n, >= 4): torque per unit of offset, of friction that is misread, and twice of acceleration.
+def rows(
+    row: int, slope: Floats, M: Floats, feature: Floats, link_row: Ints, armature: Floats, H: Floats
+) -> None:
+    """Fill H (n + T, >= 4): torque per unit of offset, of friction misread, and twice of acceleration.
 
     Row i of slope (n,n) is the change of inverse dynamics per unit of coordinate i; M (n,n) the mass matrix;
-    feature (n, >= 3) has the velocity, through the residual's own filter, in its third column.
+    feature (n + T, >= 3) has the velocity, through the residual's own filter, in its third column. The T
+    joints in link_row have a motor side of their own: rotor (armature, n) and friction are there.
     """
-    t = math.tanh(feature[row, 2] / SLOW)
-    for i in range(H.shape[0]):
+    n, t = slope.shape[0], math.tanh(feature[row, 2] / SLOW)
+    for i in range(n):
         H[i, 0] = slope[row, i]
         H[i, 1] = 1.0 - t * t if i == row else 0.0
         H[i, 2] = M[i, row]
         H[i, 3] = M[i, row]
+    for j in range(link_row.shape[0]):
+        for a in range(4):
+            H[n + j, a] = 0.0
+        if link_row[j] == row:
+            H[n + j, 1] = H[row, 1]
+            H[row, 1] = 0.0
+            for a in range(2, 4):
+                H[n + j, a] = armature[row]
+                H[row, a] -= armature[row]

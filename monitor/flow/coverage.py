@@ -40,6 +40,7 @@ class ConditionKeeper:
         self._facts = facts
         self._inputs, self._state, self._outputs = inputs[0], state[0], outputs[0]
         self._bodies = self._inputs["E"].copy()
+        self._link_rows = params[0]["link_row"]
         self._condition: Condition | None = None
         self._heard_ns: int | None = None
         self._stale = True
@@ -65,6 +66,10 @@ class ConditionKeeper:
         if since_start != self._since_start:
             self._since_start = since_start
             self._evaluate()
+
+    def sensors_changed(self) -> None:
+        """Take in which torque sensors at links read now (`state.unsensed`)."""
+        self._evaluate()
 
     def heard(self, condition: Condition, received_ns: int) -> Change:
         """Take a message of topic `robot` in; WireError when its payload cannot be."""
@@ -139,7 +144,9 @@ class ConditionKeeper:
         judged = np.array([c != Coverage.BLIND for c, _ in self._joints]) & self._may_judge()
         # A row is judged when every joint on the wire that enters it is; base rows hold the feet's forces.
         x["judged"] = 0
-        x["judged"][-m:] = np.all(judged | ~self._facts.row_needs, axis=1)
+        base, motors = len(x["judged"]) - m - len(self._link_rows), len(x["judged"]) - len(self._link_rows)
+        x["judged"][base:motors] = np.all(judged | ~self._facts.row_needs, axis=1)
+        x["judged"][motors:] = x["judged"][self._link_rows]
         x["guided"] = known is not None and known.mode in _MODE_REASON
         self._whole = _whole(self._joints)
         self._show()
@@ -172,6 +179,8 @@ class ConditionKeeper:
             return Coverage.CONDITIONAL, Reason.PAYLOAD_UNKNOWN
         if self._since_start:
             return Coverage.CONDITIONAL, Reason.SINCE_START
+        if self._state["unsensed"][i]:
+            return Coverage.CONDITIONAL, Reason.LINK_TORQUE_MISSING
         return Coverage.WATCHING, Reason.NONE
 
     def _with_payload(self, condition: Condition) -> NDArray[np.float64]:

@@ -4,8 +4,8 @@ from __future__ import annotations
 
 import math
 
-from monitor.flow import lasting, trend
-from monitor.flow.layout import RING, Block, Form, Notice
+from monitor.flow import lasting, link_torque, trend
+from monitor.flow.layout import RING, Block, Floats, Form, Notice
 from monitor.kernels import band, evidence, ledger, tracking
 from monitor.kernels.jit import kernel
 
@@ -27,20 +27,25 @@ def into_band(params: Block, inputs: Block, state: Block, outputs: Block) -> Non
         s["M"], s["a"], s["v_at"], s["tau"], c["friction_velocity"], c["e_variance"], s["dt_s"],
         c["cause_pole"], c["hold_s"], s["held"], s["held_left_s"], s["cause"],
     )  # fmt: skip
+    link_torque.causes(params, state)
     band.variance(s["cause"], c["cause_fast"], s["var_fast"])
     band.variance(s["cause"], c["cause_slow"], s["var_slow"])
     band.standing(s["cause"], c["cause_fast"], s["var_stand"])
     tracking.explained(s["feature"], s["track"], s["track_P"], s["explained"], s["explained_var"])
     s["tracked"][:] = s["explained"]
     lasting.explain_lasting(params, state)
+    link_torque.pool(params, state)
     n = s["left"].shape[0]
     for i in range(n):
-        s["left"][i] = s["r_fast"][i] - s["explained"][i]
+        s["left"][i] = s["row_fast"][i] - s["explained"][i]
         s["white"][i] = s["explained_var"][i]
         if x["judged"][i] == 0:
             s["white"][i] += band.BLIND * c["rated"][i] ** 2
     band.covariance(s["var_fast"], c["rho"], s["white"], s["R"])
     lasting.widen(state, s["R"])
+    for i in range(n):
+        out["band_fast"][i] = c["row_limit"] * math.sqrt(s["R"][i, i])
+    link_torque.forget(params, state, s["R"])
     evidence.factor(s["R"], s["R_factor"])
     s["white"][:] = s["left"]
     evidence.whiten(s["R_factor"], s["white"])
@@ -48,7 +53,6 @@ def into_band(params: Block, inputs: Block, state: Block, outputs: Block) -> Non
     for i in range(n):
         total += s["white"][i] ** 2
         out["explained"][i] = s["explained"][i]
-        out["band_fast"][i] = c["row_limit"] * math.sqrt(s["R"][i, i])
         out["band_slow"][i] = c["row_limit"] * math.sqrt(s["var_slow"][i] + s["explained_var"][i])
         out["ratio"][i] = abs(s["left"][i]) / out["band_fast"][i]
         s["ratio_peak"][i] = max(s["ratio_peak"][i], out["ratio"][i])
@@ -63,8 +67,9 @@ def _respond(params: Block, state: Block) -> None:
     dt, form = s["dt_s"], c["form"]
     if dt == 0.0:
         s["respond"][:, :, :2] = 0.0
+        s["through_filter"][:, :2] = 0.0
         return
-    gain = c["gain_fast"][ledger.gain_step(dt, c["period_ns"], c["gain_fast"].shape[0])]
+    k = ledger.gain_step(dt, c["period_ns"], c["gain_fast"].shape[0])
     for i in range(s["tau"].shape[0]):
         for f in range(3):
             w = s["tau"][i]
@@ -72,13 +77,23 @@ def _respond(params: Block, state: Block) -> None:
                 w = math.tanh(s["v_at"][i] / c["friction_velocity"][i])
             elif f == 2:
                 w = s["v_at"][i]
-            if form == _JOINT_SPACE:
-                ledger.respond_joint_space(w, dt, gain[i], s["respond"][i, f])
-            elif form == _FIRST_ORDER:
-                ledger.respond_first_order(w, dt, c["pole_fast"], s["respond"][i, f])
-            else:
-                ledger.respond_second_order(w, dt, c["pole_fast"], s["respond"][i, f])
+            _pass(form, w, dt, c["gain_fast"][k, i], c["pole_fast"], s["respond"][i, f])
             s["feature"][i, f] = s["respond"][i, f, 2]
+    for j in range(c["link_row"].shape[0]):
+        i = c["link_row"][j]
+        _pass(form, s["through"][j], dt, c["gain_fast"][k, i], c["pole_fast"], s["through_filter"][j])
+    link_torque.features(params, state)
+
+
+@kernel
+def _pass(form: int, w: float, dt: float, gain: Floats, pole: float, x: Floats) -> None:
+    """Advance the response x (3) of the residual's form to a torque w."""
+    if form == _JOINT_SPACE:
+        ledger.respond_joint_space(w, dt, gain, x)
+    elif form == _FIRST_ORDER:
+        ledger.respond_first_order(w, dt, pole, x)
+    else:
+        ledger.respond_second_order(w, dt, pole, x)
 
 
 @kernel
@@ -139,7 +154,7 @@ def _open(state: Block, outputs: Block, row: int, onset_ns: int) -> None:
 
 @kernel
 def end(params: Block, state: Block, outputs: Block) -> None:
-    """Close the event; begin the sums anew, and the tracking of friction, which may have learnt of the cause."""
+    """Close the event; begin the sums anew, and tracking, which may have learnt of the cause."""
     s = state[0]
     tracking.forget(params[0]["track_sd"], s["track"], s["track_P"])
     s["event_open"] = 0
@@ -157,7 +172,7 @@ def _sum_up(params: Block, inputs: Block, state: Block) -> int:
         # A joint that stands hides any torque up to its Coulomb friction, for as long as it stands.
         if s["cause"][i, band.STANDS] < _STANDING:
             sd = math.sqrt(s["var_slow"][i] + s["explained_var"][i] + c["cusum_sd"][i] ** 2)
-            s["cusum_sum"][i] += (s["r_slow"][i] - s["explained"][i]) / sd
+            s["cusum_sum"][i] += (s["row_slow"][i] - s["explained"][i]) / sd
     s["cusum_count"] += 1
     if s["cusum_count"] < c["cusum_samples"]:
         return -1
@@ -194,22 +209,24 @@ def _remember(params: Block, inputs: Block, state: Block, outputs: Block) -> boo
     s["ring_loud"][k] = 1 if s["event_quiet_ns"] < s["at_ns"] else 0
     s["ring_q"][k] = s["q_at"]
     s["ring_v"][k] = s["v_at"]
-    for i in range(s["left"].shape[0]):
+    for i in range(s["a"].shape[0]):
         s["ring_a"][k, i] = s["a"][i] + s["e_slow"][i]
     s["ring_r"][k] = s["left"]
     s["ring_var"][k] = s["var_fast"]
     s["ring_stand"][k] = s["var_stand"]
     for i in range(s["left"].shape[0]):
         s["ring_extra"][k, i] = s["explained_var"][i]
+    for i in range(s["a"].shape[0]):
         # Whatever acts on the robot may also turn the friction that a standing joint hides.
         s["ring_hidden"][k, i] = (_HIDES * c["coulomb"][i] * s["cause"][i, band.STANDS]) ** 2
+    link_torque.hidden(params, s["ring_hidden"][k])
     s["ring_feature"][k] = s["feature"]
     s["ring_head"] += 1
     s["ring_held"] = min(s["ring_held"] + 1, RING)
     if s["event_open"] == 0 and x["guided"] == 0:
         dt_s = c["evidence_samples"] * c["period_ns"] * 1e-9
         for i in range(s["left"].shape[0]):
-            if x["judged"][i] == 0 or lasting.holds_row(state, i):
+            if x["judged"][i] == 0 or lasting.holds_row(state, i) or link_torque.is_link_side(params, i):
                 continue
             variance = c["track_noise"] * (s["var_fast"][i] + _STUCK * s["var_stand"][i])
             tracking.track(

@@ -9,7 +9,7 @@ from __future__ import annotations
 import math
 
 from monitor.explain import ACTUATOR, CONTACT, fill
-from monitor.flow import lasting
+from monitor.flow import lasting, link_torque
 from monitor.flow.layout import RING, Block, Notice
 from monitor.kernels import band
 from monitor.kernels import evidence as ev
@@ -256,6 +256,7 @@ def _noise(params: Block, inputs: Block, state: Block, entry: int) -> None:
             s["x_spread"][i] += band.BLIND * c["rated"][i] ** 2
     band.covariance(s["x_y"], c["rho"], s["x_spread"], s["R"])
     lasting.widen(state, s["R"])
+    link_torque.forget(params, state, s["R"])
 
 
 @kernel
@@ -319,7 +320,7 @@ def _fill(params: Block, state: Block, family: int, index: int) -> None:
     fill(
         family, index, s["x_feature"], s["slope"], s["x_M"], c["body_axis"], c["body_centre"], c["foot_axis"],
         c["foot_point"], c["load_axis"], c["load_centre"], c["parent"], c["dof"], s["x_S"], s["x_V"],
-        s["x_Vd"], s["x_R_W"], s["x_p_W"], s["x_H"],
+        s["x_Vd"], s["x_R_W"], s["x_p_W"], c["link_row"], c["armature"], s["x_H"],
     )  # fmt: skip
 
 
@@ -434,7 +435,7 @@ def _keep_peak(params: Block, state: Block, k: int, d: int, P: Block) -> None:
     size2 = 0.0
     for i in range(c["smooth_sized"][k]):
         size2 += (x[i] * sd[i]) ** 2
-    if size2 <= s["smooth_peak_size"][k] ** 2:
+    if size2 < s["smooth_peak_size"][k] ** 2:  # equal: no joint feels the force, only its moment
         return
     # All of the uncertainty counts: a force may have a part that no joint feels.
     variance = 0.0

@@ -1,17 +1,17 @@
 """Faults that last: once certain they become part of the model, so that what happens beside them is seen.
 
 A slot holds one fault: an explanation whose parameters are tracked from then on, their uncertainty widening
-the band. An actuator's are share of torque, Coulomb and viscous friction and offset, all at once; a sensor's
-its offset; a load's mass and first moment. When the parameters have come back to nothing the slot is given
-free, and that is news as well.
+the band. An actuator's are share of torque, Coulomb and viscous friction and offset, all at once; a position
+sensor's its offset; a torque sensor's offset and scale; a load's mass and first moment. When the parameters
+have come back to nothing the slot is given free, and that is news as well.
 """
 
 from __future__ import annotations
 
 import math
 
-from monitor.explain import ACTUATOR, LOAD, SENSOR, actuator, fill
-from monitor.flow.layout import FAULTS, LASTING, Block, Notice
+from monitor.explain import ACTUATOR, LOAD, SENSOR, TORQUE_SENSOR, actuator, fill, torque_sensor
+from monitor.flow.layout import FAULTS, LASTING, Block, Floats, Notice
 from monitor.kernels import tracking
 from monitor.kernels.jit import kernel
 
@@ -31,7 +31,21 @@ _CEASED_S, _KNOWN = 1.0, 0.3
 @kernel
 def may_last(family: int) -> bool:
     """Whether explanations of a family can become part of the model."""
-    return bool(family in (ACTUATOR, SENSOR, LOAD))
+    return bool(family in (ACTUATOR, SENSOR, LOAD, TORQUE_SENSOR))
+
+
+@kernel
+def _columns_of(family: int) -> int:
+    """Return how many parameters a lasting fault of a family has."""
+    if family == SENSOR:
+        return 1
+    return 2 if family == TORQUE_SENSOR else 4
+
+
+@kernel
+def _by_posture(family: int) -> bool:
+    """Whether the columns of a family follow from the posture, not from the features of one joint."""
+    return bool(family in (SENSOR, LOAD))
 
 
 @kernel
@@ -59,7 +73,7 @@ def confirm(params: Block, state: Block, outputs: Block, explanation: int) -> bo
     fresh = s["fault_of"][slot] == 0
     s["fault_of"][slot] = explanation + 1
     s["fault_family"][slot], s["fault_index"][slot] = family, index
-    s["fault_columns"][slot] = 4 if family != SENSOR else 1
+    s["fault_columns"][slot] = _columns_of(family)
     s["fault_idle_s"][slot] = 0.0
     _learn(params, state, slot, explanation, fresh)
     if fresh:
@@ -99,6 +113,10 @@ def _learn(params: Block, state: Block, slot: int, explanation: int, fresh: bool
         return
     d, settles = c["smooth_columns"][best], c["smooth_settles"][best]
     n = s["left"].shape[0]
+    if settles == 0 and s["fault_family"][slot] == TORQUE_SENSOR:
+        # Its noise is an offset that nobody knows.
+        s["fault_P"][slot, 0, 0] += s["smooth_peak_size"][best] ** 2
+        return
     if settles == 0:
         s["fault_free"][slot] = s["smooth_peak_size"][best] ** 2
         return
@@ -186,9 +204,9 @@ def widen(state: Block, R: Block) -> None:
 
 
 @kernel
-def columns(params: Block, state: Block, f: int, feature: Block) -> None:
-    """Fill fault_H of an actuator from its drive's features; others keep those of the last evidence step."""
-    s = state[0]
+def columns(params: Block, state: Block, f: int, feature: Floats) -> None:
+    """Fill fault_H of a drive or torque sensor from features; others keep those of the last evidence step."""
+    c, s = params[0], state[0]
     if s["fault_family"][f] == ACTUATOR:
         row = s["fault_index"][f] // 8
         for i in range(s["fault_H"].shape[1]):
@@ -197,6 +215,8 @@ def columns(params: Block, state: Block, f: int, feature: Block) -> None:
         for a in range(3):
             s["fault_H"][f, row, a] = -feature[row, a]
         s["fault_H"][f, row, actuator.OFFSET] = -1.0
+    elif s["fault_family"][f] == TORQUE_SENSOR:
+        torque_sensor.columns(s["fault_index"][f] // 8, c["link_row"], feature, s["fault_H"][f])
 
 
 @kernel
@@ -292,12 +312,12 @@ def refresh(params: Block, state: Block) -> None:
     """Fill fault_H of sensors and loads from the geometry of the evidence step that was just prepared."""
     c, s = params[0], state[0]
     for f in range(FAULTS):
-        if s["fault_of"][f] != 0 and s["fault_family"][f] != ACTUATOR:
+        if s["fault_of"][f] != 0 and _by_posture(s["fault_family"][f]):
             fill(
                 s["fault_family"][f], s["fault_index"][f], s["x_feature"], s["slope"], s["x_M"],
                 c["body_axis"], c["body_centre"], c["foot_axis"], c["foot_point"], c["load_axis"],
                 c["load_centre"], c["parent"], c["dof"], s["x_S"], s["x_V"], s["x_Vd"], s["x_R_W"],
-                s["x_p_W"], s["fault_H"][f],
+                s["x_p_W"], c["link_row"], c["armature"], s["fault_H"][f],
             )  # fmt: skip
 
 
@@ -307,15 +327,20 @@ def needs_geometry(state: Block) -> bool:
     s = state[0]
     found = False
     for f in range(FAULTS):
-        found = found or (s["fault_of"][f] != 0 and s["fault_family"][f] != ACTUATOR)
+        found = found or (s["fault_of"][f] != 0 and _by_posture(s["fault_family"][f]))
     return found
 
 
 @kernel
 def holds_row(state: Block, row: int) -> bool:
-    """Whether a slot holds a fault of the actuator of a row."""
+    """Whether a slot holds a fault of the actuator of a row, or of the torque sensor beside it."""
     s = state[0]
     for f in range(FAULTS):
-        if s["fault_of"][f] != 0 and s["fault_family"][f] == ACTUATOR and s["fault_index"][f] // 8 == row:
+        held = s["fault_index"][f] // 8
+        if s["fault_family"][f] == TORQUE_SENSOR:
+            held += s["r_fast"].shape[0]
+        elif s["fault_family"][f] != ACTUATOR:
+            continue
+        if s["fault_of"][f] != 0 and held == row:
             return True
     return False

@@ -6,7 +6,8 @@ the counters of flow; `outputs` by the step. A block is a one-element structured
 
 Sizes: n degrees of freedom (a floating base counts six), nq numbers in q, m joints on the wire, N axes,
 D samples in the delay line, B bodies and F feet that may be touched, X explanations, K constant and Q smooth
-candidates (ways an explanation may look).
+candidates (ways an explanation may look), T joints with a torque sensor at their link side. What is judged
+and weighed has `rows`: the n of the model (link sides, where there is such a sensor), then T motor sides.
 """
 
 from __future__ import annotations
@@ -42,11 +43,17 @@ class Sizes(NamedTuple):
     X: int
     K: int
     Q: int
+    T: int = 0
+
+    @property
+    def rows(self) -> int:
+        """Rows that are judged: those of the model, then the motor sides."""
+        return self.n + self.T
 
     @property
     def most(self) -> int:
         """States of the largest smooth candidate."""
-        return self.n + 3 * SMOOTH
+        return self.rows + 3 * SMOOTH
 
     @property
     def base(self) -> int:
@@ -76,8 +83,9 @@ class Facts:
 
     robot: str
     joints: tuple[str, ...]  # order of the wire
-    rows: tuple[str, ...]  # names of the rows of v, base first
+    rows: tuple[str, ...]  # names of the rows that are judged: those of v, base first, then the motor sides
     units: tuple[str, ...]  # N m or N, by row
+    link_torque: tuple[int, ...]  # places on the wire of the joints with a torque sensor at the link side
     feet: tuple[str, ...]
     floating: bool
     serial: str
@@ -141,6 +149,7 @@ class Reason(IntEnum):
     NOT_HOISTED = 10  # floating base: forces of feet, hands or docks are not told apart from faults
     PAYLOAD_UNKNOWN = 11
     SINCE_START = 12  # something was there already when the judgement began
+    LINK_TORQUE_MISSING = 13  # a torque sensor is configured and does not read: drive and world are one sum
 
 
 class Notice(IntEnum):
@@ -157,6 +166,7 @@ class Notice(IntEnum):
     DISOBEYED = 32
     GAP = 64
     DRIFTED = 1024
+    LINK_TORQUE = 2048  # a link's torque sensor fell silent or came back
 
 
 # What an event may be held to be. These names are stable; programs read them.
@@ -212,7 +222,7 @@ Field = tuple[str, str, tuple[Any, ...]]
 
 def params_fields(s: Sizes) -> list[Field]:
     """Constants of one robot and one configuration."""
-    n, m, N = s.n, s.m, s.N
+    n, m, N, rows = s.n, s.m, s.N, s.rows
     return [
         # the tree: see kernels/dynamics.py
         ("parent", i8, (N,)),
@@ -234,6 +244,12 @@ def params_fields(s: Sizes) -> list[Field]:
         ("gravity_part", f8, (n,)),  # 1, or 0 where the reported torque leaves gravity out
         ("state_lag", i8, ()),  # samples by which q and qd are held back
         ("tau_lag", i8, (m,)),  # samples by which each joint's torque is held back
+        # torque sensors at the link side
+        ("link_row", i8, (s.T,)),  # row of v of the joint
+        ("link_wire", i8, (s.T,)),  # its place on the wire
+        ("link_sign", f8, (s.T,)),
+        ("link_range", f8, (s.T,)),  # N m: beyond, the sensor reads nothing
+        ("link_back_ns", i8, ()),  # how long a sensor that fell silent has to read before it counts again
         # friction of the model at the joint: viscous v + coulomb tanh(v / friction_velocity) + offset
         ("viscous", f8, (n,)),
         ("coulomb", f8, (n,)),
@@ -248,22 +264,22 @@ def params_fields(s: Sizes) -> list[Field]:
         ("pole_fast", f8, ()),  # rad/s, momentum forms
         ("pole_slow", f8, ()),
         # the band
-        ("rated", f8, (n,)),  # N m: what shares of torque refer to
-        ("cause_fast", f8, (n, CAUSES)),  # weights of the causes of the squared residual
-        ("cause_slow", f8, (n, CAUSES)),
+        ("rated", f8, (rows,)),  # N m: what shares of torque refer to
+        ("cause_fast", f8, (rows, CAUSES)),  # weights of the causes of the squared residual
+        ("cause_slow", f8, (rows, CAUSES)),
         ("e_variance", f8, (n,)),  # (rad/s²)²: of e_fast by sensor noise alone
         ("cause_pole", f8, ()),  # rad/s: the causes' low-pass
         ("hold_s", f8, ()),  # how long standing or reversing counts on
-        ("rho", f8, (n, n)),  # correlation of the residuals
-        ("slow_share", f8, (n,)),  # share of the variance that is slow noise
+        ("rho", f8, (rows, rows)),  # correlation of the residuals
+        ("slow_share", f8, (rows,)),  # share of the variance that is slow noise
         ("slow_keep", f8, ()),  # its correlation over one evidence step
         ("model_error", f8, ()),  # share of the residual itself
-        ("track_sd", f8, (n, 3)),  # prior of added Coulomb, viscous and constant friction
+        ("track_sd", f8, (rows, 3)),  # prior of added Coulomb, viscous and constant friction
         ("track_keep", f8, ()),  # what is kept over one evidence step
         ("track_noise", f8, ()),  # how many evidence steps count as one
         ("track_clip", f8, ()),  # sd
         # the trend of friction over hours: limits of added Coulomb, viscous and constant friction
-        ("trend_limit", f8, (n, 3)),
+        ("trend_limit", f8, (rows, 3)),
         ("trend_keep", f8, ()),  # what is kept over one evidence step
         ("trend_sure", f8, ()),  # sd beyond the limit that make it certain
         ("trend_s", f8, ()),  # for how long, before it counts
@@ -272,7 +288,7 @@ def params_fields(s: Sizes) -> list[Field]:
         ("body_limit", f8, ()),  # of all rows: r' R^-1 r
         ("quiet_ratio", f8, ()),  # share of the limits below which the robot is quiet
         ("onset_ratio", f8, ()),  # share of the limits below which an event has not begun
-        ("cusum_sd", f8, (n,)),  # N m: lasting error of the model; what is summed counts it beside noise
+        ("cusum_sd", f8, (rows,)),  # N m: lasting error of the model; what is summed counts it beside noise
         ("cusum_reference", f8, ()),
         ("cusum_limit", f8, ()),
         ("cusum_samples", i8, ()),  # samples in a block
@@ -288,7 +304,7 @@ def params_fields(s: Sizes) -> list[Field]:
         ("foot_point", f8, (s.F, 3)),
         ("load_axis", i8, ()),
         ("load_centre", f8, (3,)),
-        ("other_sd", f8, (n,)),  # N m: of something else
+        ("other_sd", f8, (rows,)),  # N m: of something else
         ("of_family", i8, (s.X,)),  # of each explanation: family, index and prior sd of what may last
         ("of_index", i8, (s.X,)),
         ("of_sd", f8, (s.X, LASTING)),
@@ -356,7 +372,7 @@ def inputs_fields(s: Sizes) -> list[Field]:
     """One sample as the robot sent it, and the condition it is in."""
     m, N = s.m, s.N
     return [
-        # t_ns to tau_cmd lie together: `flow.wire` writes a message there in one copy.
+        # t_ns to tau_link lie together: `flow.wire` writes a message there in one copy.
         ("t_ns", i8, ()),  # robot clock
         ("seq", i8, ()),
         ("q", f8, (m,)),  # rad or m, order and sign of the wire
@@ -367,18 +383,19 @@ def inputs_fields(s: Sizes) -> list[Field]:
         ("base_v", f8, (3,)),  # m/s, world axes
         ("base_w", f8, (3,)),  # rad/s, body axes
         ("tau_cmd", f8, (m,)),  # commanded torque, units of tau; NaN where not sent
+        ("tau_link", f8, (s.T,)),  # N m, sign of the wire; NaN where not sent
         ("rebase", i8, ()),  # 0 no, 1 gap or bad signal, 2 start, restart or change of condition
         ("brake", i8, (m,)),  # 1 closed
         ("drive", i8, (m,)),  # 1 powered
         ("guided", i8, ()),  # 1: a person or a calibration moves the robot
-        ("judged", i8, (s.n,)),  # 1 where the residual may open an event
+        ("judged", i8, (s.rows,)),  # 1 where the residual may open an event
         ("E", f8, (N, 4, 4)),  # pseudo-inertias, announced payload included
     ]
 
 
 def state_fields(s: Sizes) -> list[Field]:
     """Everything one step hands to the next, and the counters."""
-    n, nq, m, N, D = s.n, s.nq, s.m, s.N, s.D
+    n, nq, m, N, D, T, rows = s.n, s.nq, s.m, s.N, s.D, s.T, s.rows
     work: list[Field] = [
         ("R_W", f8, (N + 1, 3, 3)),
         ("p_W", f8, (N + 1, 3)),
@@ -403,6 +420,7 @@ def state_fields(s: Sizes) -> list[Field]:
         ("line_q", f8, (D, nq)),  # delay lines
         ("line_v", f8, (D, n)),
         ("line_tau", f8, (D, m)),
+        ("line_link", f8, (D, T)),
         ("line_ns", i8, (D,)),
         ("line_at", i8, ()),
         ("line_held", i8, ()),
@@ -432,6 +450,23 @@ def state_fields(s: Sizes) -> list[Field]:
         ("u_last", f8, (n,)),
         ("r_fast", f8, (n,)),  # N m: residuals
         ("r_slow", f8, (n,)),
+        # link side and motor side apart, see flow/link_torque.py
+        ("tau_link", f8, (T,)),  # N m: the sample in model terms
+        ("read_ns", i8, (T,)),  # robot clock since when the sensor reads without a break; 0 not at all
+        ("unsensed", i8, (m,)),  # 1: the joint's sensor is configured and does not read
+        ("motor_u", f8, (T,)),  # N m: what the motor gives beyond what passes to the link
+        ("motor_u_last", f8, (T,)),
+        ("motor_p", f8, (T,)),  # momentum of the rotor, and its estimates (momentum forms)
+        ("motor_p_last", f8, (T,)),
+        ("motor_p_fast", f8, (T,)),
+        ("motor_p_slow", f8, (T,)),
+        ("motor_filter", f8, (T, 2, 3)),  # filters of the joint-space form, by bandwidth
+        ("motor_fast", f8, (T,)),  # N m: residuals of the motor side
+        ("motor_slow", f8, (T,)),
+        ("through", f8, (T,)),  # N m: what should pass to the link, as the drive has it
+        ("through_filter", f8, (T, 3)),
+        ("row_fast", f8, (rows,)),  # N m: residuals of the rows that are judged
+        ("row_slow", f8, (rows,)),
         ("raw_q", f8, (m,)),  # last credible sample on the wire, for the signal checks
         ("raw_qd", f8, (m,)),
         ("raw_base_p", f8, (3,)),
@@ -472,37 +507,37 @@ def state_fields(s: Sizes) -> list[Field]:
         ("brake_moved", i8, (m,)),
         ("disobeyed_ns", i8, (m,)),  # since when tau differs from tau_cmd; 0 not at all
         ("disobeyed", i8, (m,)),  # 1 once that lasted too long
-        ("ratio_peak", f8, (n,)),  # largest band ratio since the last health message
+        ("ratio_peak", f8, (rows,)),  # largest band ratio since the last health message
         # band: filters of the regressors (error of position, velocity, e per feature), causes, variances
         ("respond", f8, (n, FEATURES, 3)),
-        ("feature", f8, (n, FEATURES)),  # tau, tanh(v/v0), v through the residual's filter
-        ("cause", f8, (n, CAUSES)),
+        ("feature", f8, (rows, FEATURES)),  # tau, tanh(v/v0), v through the residual's filter
+        ("cause", f8, (rows, CAUSES)),
         ("held", f8, (n,)),
         ("held_left_s", f8, (n,)),
-        ("var_fast", f8, (n,)),
-        ("var_slow", f8, (n,)),
-        ("var_stand", f8, (n,)),  # part of var_fast
-        ("track", f8, (n, 3)),
-        ("track_P", f8, (n, 3, 3)),
+        ("var_fast", f8, (rows,)),
+        ("var_slow", f8, (rows,)),
+        ("var_stand", f8, (rows,)),  # part of var_fast
+        ("track", f8, (rows, 3)),
+        ("track_P", f8, (rows, 3, 3)),
         # all in shares of the limits: what was seen in the memory of the trend, its estimate and sd
-        ("trend_info", f8, (n, 3, 3)),
-        ("trend_sum", f8, (n, 3)),
-        ("trend", f8, (n, 3)),
-        ("trend_sd", f8, (n, 3)),
-        ("trend_beyond_s", f8, (n, 3)),  # time seen since it is certainly beyond its limit
-        ("drifted", i8, (3 * n,)),  # 1: for so long that it is said; 3 row + parameter
-        ("explained", f8, (n,)),  # N m that tracked friction and lasting faults explain
-        ("explained_var", f8, (n,)),
-        ("tracked", f8, (n,)),  # N m of it by tracked friction
-        ("left", f8, (n,)),  # N m: fast residual less what is explained
-        ("R", f8, (n, n)),
-        ("R_factor", f8, (n, n)),
-        ("white", f8, (n,)),
+        ("trend_info", f8, (rows, 3, 3)),
+        ("trend_sum", f8, (rows, 3)),
+        ("trend", f8, (rows, 3)),
+        ("trend_sd", f8, (rows, 3)),
+        ("trend_beyond_s", f8, (rows, 3)),  # time seen since it is certainly beyond its limit
+        ("drifted", i8, (3 * rows,)),  # 1: for so long that it is said; 3 row + parameter
+        ("explained", f8, (rows,)),  # N m that tracked friction and lasting faults explain
+        ("explained_var", f8, (rows,)),
+        ("tracked", f8, (rows,)),  # N m of it by tracked friction
+        ("left", f8, (rows,)),  # N m: fast residual less what is explained
+        ("R", f8, (rows, rows)),
+        ("R_factor", f8, (rows, rows)),
+        ("white", f8, (rows,)),
         ("body_ratio", f8, ()),
-        ("cusum_sum", f8, (n,)),
+        ("cusum_sum", f8, (rows,)),
         ("cusum_count", i8, ()),
-        ("cusum", f8, (n, 2)),
-        ("cusum_since_ns", i8, (n, 2)),
+        ("cusum", f8, (rows, 2)),
+        ("cusum_since_ns", i8, (rows, 2)),
         ("step_due", i8, ()),  # 1: this sample went into the ring
         ("sampled", i8, ()),  # samples since the last entry of the ring
         # what an evidence step needs, kept for RING steps
@@ -510,12 +545,12 @@ def state_fields(s: Sizes) -> list[Field]:
         ("ring_q", f8, (RING, nq)),
         ("ring_v", f8, (RING, n)),
         ("ring_a", f8, (RING, n)),
-        ("ring_r", f8, (RING, n)),
-        ("ring_var", f8, (RING, n)),
-        ("ring_stand", f8, (RING, n)),
-        ("ring_extra", f8, (RING, n)),
-        ("ring_hidden", f8, (RING, n)),  # (N m)²: friction that a standing joint may hide
-        ("ring_feature", f8, (RING, n, FEATURES)),
+        ("ring_r", f8, (RING, rows)),
+        ("ring_var", f8, (RING, rows)),
+        ("ring_stand", f8, (RING, rows)),
+        ("ring_extra", f8, (RING, rows)),
+        ("ring_hidden", f8, (RING, rows)),  # (N m)²: friction that a standing joint may hide
+        ("ring_feature", f8, (RING, rows, FEATURES)),
         ("ring_loud", i8, (RING,)),  # 1: something stood out
         ("ring_head", i8, ()),  # entries written so far
         ("ring_held", i8, ()),  # entries since the last re-base
@@ -539,19 +574,19 @@ def state_fields(s: Sizes) -> list[Field]:
         ("x_q", f8, (nq,)),
         ("x_id", f8, (n,)),
         ("slope", f8, (n, n)),
-        ("x_y", f8, (n,)),
-        ("x_d", f8, (n,)),
-        ("x_G", f8, (n, n)),
-        ("x_H", f8, (n, SMOOTH)),
-        ("x_gain", f8, (n, n)),
-        ("x_innovation", f8, (n,)),
-        ("x_spread", f8, (n,)),
-        ("x_spread_kept", f8, (n,)),
-        ("x_gain_kept", f8, (n, n)),
-        ("x_feature", f8, (n, FEATURES)),
+        ("x_y", f8, (rows,)),
+        ("x_d", f8, (rows,)),
+        ("x_G", f8, (rows, rows)),
+        ("x_H", f8, (rows, SMOOTH)),
+        ("x_gain", f8, (rows, rows)),
+        ("x_innovation", f8, (rows,)),
+        ("x_spread", f8, (rows,)),
+        ("x_spread_kept", f8, (rows,)),
+        ("x_gain_kept", f8, (rows, rows)),
+        ("x_feature", f8, (rows, FEATURES)),
         ("x_L", f8, (RISE, RISE)),
         ("x_u", f8, (s.most,)),
-        ("x_factor", f8, (n, n)),
+        ("x_factor", f8, (rows, rows)),
         # lasting faults
         ("fault_of", i8, (FAULTS,)),  # 1 + number of the explanation; 0 free
         ("fault_family", i8, (FAULTS,)),
@@ -560,7 +595,7 @@ def state_fields(s: Sizes) -> list[Field]:
         ("fault_theta", f8, (FAULTS, LASTING)),
         ("fault_free", f8, (FAULTS,)),  # (N m)²: variance of torque that varies freely
         ("fault_P", f8, (FAULTS, LASTING, LASTING)),
-        ("fault_H", f8, (FAULTS, n, SMOOTH)),
+        ("fault_H", f8, (FAULTS, rows, SMOOTH)),
         ("fault_idle_s", f8, (FAULTS,)),  # time it was not felt though it should have been
         ("fault_event", i8, (FAULTS,)),
         ("fault_ceased", i8, (FAULTS,)),  # event of the fault that was in the slot before
@@ -570,18 +605,18 @@ def state_fields(s: Sizes) -> list[Field]:
         ("sure_since_ns", i8, ()),
         ("concluded", i8, ()),  # 1: certain for so long that weighing on would only grow stale
         # evidence of this event: nothing, something else, candidates
-        ("null_s", f8, (n,)),
-        ("null_P", f8, (n, n)),
+        ("null_s", f8, (rows,)),
+        ("null_P", f8, (rows, rows)),
         ("null_log", f8, ()),
-        ("quiet_s", f8, (n,)),  # slow noise since the residual was last loud
-        ("quiet_P", f8, (n, n)),
-        ("x_quiet_s", f8, (n,)),
-        ("x_quiet_P", f8, (n, n)),
+        ("quiet_s", f8, (rows,)),  # slow noise since the residual was last loud
+        ("quiet_P", f8, (rows, rows)),
+        ("x_quiet_s", f8, (rows,)),
+        ("x_quiet_P", f8, (rows, rows)),
         ("quiet_log", f8, ()),  # of this step: evidence of nothing, whatever was before
-        ("other_s", f8, (n,)),
-        ("other_P", f8, (n, n)),
+        ("other_s", f8, (rows,)),
+        ("other_P", f8, (rows, rows)),
         ("other_log", f8, ()),
-        ("constant_s", f8, (s.K, RISE, n)),
+        ("constant_s", f8, (s.K, RISE, rows)),
         ("constant_A", f8, (s.K, RISE, RISE)),
         ("constant_b", f8, (s.K, RISE)),
         ("constant_x", f8, (s.K, RISE)),  # estimate, in prior sd
@@ -639,14 +674,16 @@ def state_fields(s: Sizes) -> list[Field]:
 
 def outputs_fields(s: Sizes) -> list[Field]:
     """What one step says."""
-    n, m = s.n, s.m
+    n, m, rows = s.n, s.m, s.rows
     return [
         ("r_fast", f8, (n,)),  # N m (N for prismatic rows): torque the model does not explain
         ("r_slow", f8, (n,)),
-        ("band_fast", f8, (n,)),  # N m: largest residual that is not an event, as it stands now
-        ("band_slow", f8, (n,)),
-        ("explained", f8, (n,)),  # N m of r_fast that tracked friction explains
-        ("ratio", f8, (n,)),  # |residual| / band; 1 opens an event
+        ("row_fast", f8, (rows,)),  # the same, link and motor side apart where a sensor lies between them
+        ("row_slow", f8, (rows,)),
+        ("band_fast", f8, (rows,)),  # N m: largest residual that is not an event, as it stands now
+        ("band_slow", f8, (rows,)),
+        ("explained", f8, (rows,)),  # N m of r_fast that tracked friction explains
+        ("ratio", f8, (rows,)),  # |residual| / band; 1 opens an event
         ("body_ratio", f8, ()),  # the same for all rows together
         ("probability", f8, (s.X + 2,)),  # of nothing, something else, then the explanations
         ("tau_model", f8, (n,)),  # N m: what inverse dynamics expects of each joint

@@ -41,9 +41,10 @@ _EVENT_NOTICES = int(
     Notice.EVENT_OPENED | Notice.EVENT_ENDED | Notice.WEIGHED | Notice.FAULT_CONFIRMED | Notice.FAULT_CEASED
 )
 _PER_JOINT = (
-    # notice, state field, alarm kind, detail
-    (Notice.BRAKE_MOVED, "brake_moved", "brake", "moved-while-closed"),
-    (Notice.DISOBEYED, "disobeyed", "drive", "command-differs"),
+    # notice, state field, verdict, alarm kind, detail
+    (Notice.BRAKE_MOVED, "brake_moved", "actuator", "brake", "moved-while-closed"),
+    (Notice.DISOBEYED, "disobeyed", "actuator", "drive", "command-differs"),
+    (Notice.LINK_TORQUE, "unsensed", "torque-sensor", "sensor", "missing"),
 )
 _EPOCH = datetime(1970, 1, 1, tzinfo=UTC)
 
@@ -77,7 +78,7 @@ class Pipeline:
         self._notice, self._rebase = blocks.outputs["notice"].data, blocks.inputs["rebase"]
         self._run_step = resolved(step, *blocks)
         self._received = blocks.state["received"].data
-        self._joints = wire.JointsFormat(facts.joints, facts.floating, len(facts.feet))
+        self._joints = wire.JointsFormat(facts.joints, facts.floating, len(facts.feet), facts.link_torque)
         self._aligner = Aligner(self._state, facts.wait_ns)
         self._condition = ConditionKeeper(facts, *blocks)
         self._board = AlarmBoard()
@@ -211,13 +212,15 @@ class Pipeline:
             self._last_bad[_GAP] = now_ns
         if notice & Notice.BAD_SAMPLE:
             self._bad_sample(now_ns)
-        for bit, field, kind, detail in _PER_JOINT:
+        for bit, field, verdict, kind, detail in _PER_JOINT:
             if notice & bit:
                 for i, joint in enumerate(self.facts.joints):
                     if s[field][i]:
                         key = Key(kind, detail, joint)
-                        self._raise(key, Verdict("actuator", detail, joint), now_ns)
+                        self._raise(key, Verdict(verdict, detail, joint), now_ns)
                         self._flagged[key] = (field, i)
+        if notice & Notice.LINK_TORQUE:
+            self._condition.sensors_changed()
         if notice & Notice.DRIFTED:
             self._drifted(now_ns)
         if notice & _EVENT_NOTICES:
@@ -362,6 +365,7 @@ class Pipeline:
                 "standing": [
                     [one.kind, one.verdict.detail, one.verdict.joint] for one in self._board.standing()
                 ],
+                "ignored": ["tau_link"] if self._joints.ignores_link_torque else [],
                 "loop": self._host,
             },
         )
@@ -395,6 +399,7 @@ class Pipeline:
                 "flagged": [[list(key), *flag] for key, flag in self._flagged.items()],
                 "utc": self._utc and list(self._utc),
                 "host": self._host,
+                "ignores_link_torque": self._joints.ignores_link_torque,
             }
         )
         return packed
@@ -430,6 +435,7 @@ class Pipeline:
         self._flagged = {Key(*key): (field, i) for key, field, i in saved["flagged"]}
         self._utc = saved["utc"] and tuple(saved["utc"])
         self._host = saved["host"]
+        self._joints.ignores_link_torque = saved["ignores_link_torque"]
 
 
 def _word(value: Coverage | Reason) -> str:

@@ -6,7 +6,7 @@ robot's own.
 
 from __future__ import annotations
 
-from monitor.flow import event, evidence
+from monitor.flow import event, evidence, link_torque
 from monitor.flow.credible import credible
 from monitor.flow.layout import Block, Form, Notice, Signal
 from monitor.kernels import ledger
@@ -28,6 +28,7 @@ _PAUSE, _START = 1, 2
 def step(params: Block, inputs: Block, state: Block, outputs: Block) -> None:
     """Take the sample in `inputs` into `state` and fill `outputs`."""
     outputs[0]["notice"] = 0
+    link_torque.note_silence(params, inputs, state, outputs)
     good = credible(params, inputs, state, outputs)
     note_rebase(params, inputs, state, outputs)
     if not good:
@@ -41,6 +42,7 @@ def step(params: Block, inputs: Block, state: Block, outputs: Block) -> None:
     else:
         advance(params, inputs, state)
     residuals(state, outputs)
+    link_torque.split(params, state, outputs)
     event.into_band(params, inputs, state, outputs)
     event.judge(params, inputs, state, outputs)
     if state[0]["weigh_afresh"] != 0:
@@ -118,6 +120,7 @@ def to_model(params: Block, inputs: Block, state: Block) -> None:
         s["q"][shift + i] += c["q_zero"][i]
     multiply(c["to_q"], x["qd"], s["v"][base:])
     multiply(c["to_tau"], x["tau"], s["tau"][base:])
+    link_torque.to_model(params, inputs, state)
     if base == 6:
         s["q"][:3] = x["base_p"]
         scale = 0.0
@@ -154,6 +157,7 @@ def delayed(params: Block, state: Block) -> bool:
     s["v"][:] = s["line_v"][held]
     for i in range(m):
         s["tau"][base + i] = s["line_tau"][(at - c["tau_lag"][i]) % D, i]
+    link_torque.delayed(params, state)
     s["line_at"] = (at + 1) % D
     s["line_held"] = min(s["line_held"] + 1, D)
     return bool(s["line_held"] == D)
@@ -202,6 +206,7 @@ def smooth_torque(params: Block, inputs: Block, state: Block) -> None:
     for i in range(s["u"].shape[0]):
         rest = c["gravity_part"][i] * s["g"][i] + c["friction_offset"][i]
         s["u"][i] = s["tau"][i] - rest - s["u"][i]
+    link_torque.surplus(params, state)
 
 
 @kernel
@@ -239,6 +244,7 @@ def model_momentum(params: Block, inputs: Block, state: Block) -> None:
     known_torque(params, state)
     for i in range(s["u"].shape[0]):
         s["u"][i] = s["known"][i] + s["Ctv"][i]
+    link_torque.momentum(params, state)
 
 
 @kernel
@@ -268,6 +274,7 @@ def rebase(params: Block, inputs: Block, state: Block, outputs: Block) -> None:
     else:
         model_momentum(params, inputs, state)
         s["p_fast"][:], s["p_slow"][:] = s["p"], s["p"]
+    link_torque.rebase(state, s["pending"] == _START)
     s["started"] = 1
     s["pending"] = 0
     s["rebased"] += 1
@@ -298,6 +305,7 @@ def advance_joint_space(params: Block, inputs: Block, state: Block) -> None:
     s["u_last"][:], s["M_last"][:] = s["u"], s["M"]
     smooth_torque(params, inputs, state)
     mean_acceleration(params, state)
+    link_torque.advance_joint_space(params, state)
     k = ledger.gain_step(dt, c["period_ns"], c["gain_fast"].shape[0])
     ledger.joint_space(
         base, s["q"], s["v"], s["a"], dt, c["gain_fast"][k], s["q_fast"], s["v_fast"], s["e_fast"]
@@ -322,6 +330,7 @@ def advance_momentum(params: Block, inputs: Block, state: Block) -> None:
     else:
         ledger.second_order(s["p"], s["u"], s["u_last"], c["pole_fast"], dt, s["p_fast"], s["r_fast"])
         ledger.second_order(s["p"], s["u"], s["u_last"], c["pole_slow"], dt, s["p_slow"], s["r_slow"])
+    link_torque.advance_momentum(params, state)
 
 
 @kernel

@@ -12,7 +12,7 @@ import math
 
 from monitor.explain import actuator
 from monitor.flow.layout import Block, Blocks, Facts, Notice
-from monitor.flow.verdict import Size, Verdict
+from monitor.flow.verdict import Size, Verdict, joint_of
 from monitor.kernels import band, tracking
 from monitor.kernels.jit import kernel
 
@@ -67,4 +67,4 @@ def verdict(facts: Facts, blocks: Blocks, place: int) -> Verdict:
     share, sd = float(s["trend"][row, a]), float(s["trend_sd"][row, a])
     probability = 0.5 * math.erfc((1.0 - abs(share)) / (math.sqrt(2.0) * sd))
     size = Size(share * limit, actuator.units(facts.units[row])[actuator.COULOMB + a], sd * limit)
-    return Verdict("actuator", DETAILS[a], facts.rows[row], probability=probability, size=size)
+    return Verdict("actuator", DETAILS[a], joint_of(facts, blocks, row), probability=probability, size=size)

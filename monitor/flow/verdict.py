@@ -105,11 +105,21 @@ def _has_a_twin(facts: Facts, blocks: Blocks, k: int) -> bool:
     Only a drive that follows its own law (in proportion to torque, against the motion) gives itself away.
     """
     one = facts.explanations[k]
+    if _senses(facts, blocks, one.joint or facts.twins.get(one.link or "")):
+        return False
     if one.verdict == "contact":
         return one.link in facts.twins
     if one.verdict != "actuator" or one.joint not in facts.twins.values():
         return False
     return best_candidate(blocks, facts, k)[1].number % 8 in (actuator.OFFSET, actuator.VARYING)
+
+
+def _senses(facts: Facts, blocks: Blocks, joint: str | None) -> bool:
+    """Whether a torque sensor at the link side of a joint reads: it tells drive and world apart."""
+    if joint is None:
+        return False
+    place = facts.joints.index(joint)
+    return place in facts.link_torque and not blocks.state[0]["unsensed"][place]
 
 
 def _told(facts: Facts, blocks: Blocks, likeliest: str) -> bool:
@@ -167,7 +177,15 @@ def undecided(facts: Facts, blocks: Blocks, detail: str) -> Verdict:
     s = blocks.state[0]
     row = int(s["event_row"])
     size = Size(float(s["event_size"]), facts.units[row], None)
-    return Verdict("undecided", detail, facts.rows[row], size=size, onset_t=int(s["event_onset_ns"]) / 1e9)
+    return Verdict(
+        "undecided", detail, joint_of(facts, blocks, row), size=size, onset_t=int(s["event_onset_ns"]) / 1e9
+    )
+
+
+def joint_of(facts: Facts, blocks: Blocks, row: int) -> str:
+    """Return the name of a row that is judged; of a motor side, that of its joint."""
+    n = len(blocks.state[0]["r_fast"])
+    return facts.rows[row if row < n else int(blocks.params[0]["link_row"][row - n])]
 
 
 def touch(facts: Facts, blocks: Blocks) -> Touch:
@@ -181,7 +199,8 @@ def touch(facts: Facts, blocks: Blocks) -> Touch:
     axis, centre = int(c["body_axis"][one.number]), c["body_centre"][one.number]
     force, about_centre = s["smooth_peak"][k, :3], s["smooth_peak"][k, 3:]
     moment = about_centre + np.cross(centre, force)
-    unsure = float(s["smooth_peak_sd"][k] / s["smooth_peak_size"][k])
+    size = float(s["smooth_peak_size"][k])
+    unsure = float(s["smooth_peak_sd"][k]) / size if size > 0.0 else 1.0
     radius = one.sd[3] / one.sd[0]
     met = contact_point(facts.tree, axis, force, moment, radius * min(unsure, 1.0))
     point = None if met is None or met.point is None else met.point.tolist()

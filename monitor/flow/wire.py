@@ -35,7 +35,7 @@ class JointSample(NamedTuple):
 
     seq: int
     t_ns: int  # robot clock
-    body: bytes  # t_ns, seq, q, qd, tau, base state, tau_cmd: as the `inputs` block holds them
+    body: bytes  # t_ns, seq, q, qd, tau, base state, tau_cmd, tau_link: as the `inputs` block holds them
 
 
 class Payload(NamedTuple):
@@ -84,19 +84,27 @@ class JointsFormat:
         Whether each sample has to carry the state of the base.
     feet : int
         Number of configured feet.
+    link_torque : sequence of int
+        Places of the joints with a torque sensor at the link side.
     """
 
-    def __init__(self, names: Sequence[str], floating: bool, feet: int = 0) -> None:
+    def __init__(
+        self, names: Sequence[str], floating: bool, feet: int = 0, link_torque: Sequence[int] = ()
+    ) -> None:
         self.names = tuple(names)
         self.floating = floating
         self.feet = feet
+        self._link_torque = tuple(link_torque)
+        self.ignores_link_torque = False  # `tau_link` came, and no sensor is configured
+        self._links = struct.Struct(f"<{len(self._link_torque)}d")
+        self._no_links = self._links.pack(*[math.nan] * len(self._link_torque))
         m = len(self.names)
         self._bytes = 8 * m
         self._row = struct.Struct(f"<{m}d")
         self._rows = struct.Struct(f"<qq{3 * m}d")
         self._head = struct.Struct("<qq")
         self._no_command = self._row.pack(*[math.nan] * m)
-        self._nothing_more = _NO_BASE + self._no_command
+        self._nothing_more = _NO_BASE + self._no_command + self._no_links
         # Orders of names seen so far; the configured one needs no re-ordering. Bounded: names are checked.
         self._orders: dict[tuple[Any, ...], tuple[int, ...] | None] = {self.names: None}
 
@@ -131,15 +139,18 @@ class JointsFormat:
         return JointSample(seq, t_ns, body + (self._nothing_more if plain else self._more(message, order)))
 
     def _more(self, message: dict[str, Any], order: tuple[int, ...] | None) -> bytes:
-        """Return base state and commanded torque as `inputs` holds them; check what else may be sent."""
+        """Return base state, commanded and link torque as `inputs` holds them; check what else there is."""
         base = _base(message.get("base")) if self.floating else _NO_BASE
         tau_cmd = message.get("tau_cmd")
         commanded = self._no_command if tau_cmd is None else self._array("tau_cmd", tau_cmd, order)
+        links = self._no_links
         if message.get("tau_link") is not None:
-            self._array("tau_link", message["tau_link"], order)
+            read = self._row.unpack(self._array("tau_link", message["tau_link"], order))
+            links = self._links.pack(*(read[i] for i in self._link_torque))
+            self.ignores_link_torque = not self._link_torque
         if self.feet and message.get("feet") is not None:
             _flags("joints feet", message["feet"], self.feet)
-        return base + commanded
+        return base + commanded + links
 
     def _are_raw(self, q: Any, qd: Any, tau: Any) -> bool:
         """Whether these are raw doubles of the right length; the slow road names what is wrong."""

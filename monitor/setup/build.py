@@ -33,13 +33,22 @@ from monitor.robot.pseudo_inertia import transform
 from monitor.robot.tree import WORLD, Tree, build_tree
 from monitor.robot.urdf import parse_urdf
 from monitor.setup import weighing
-from monitor.setup.calibration import Band, Calibration, Model, default_band, read_calibration
+from monitor.setup.calibration import (
+    Band,
+    Calibration,
+    Model,
+    default_band,
+    read_calibration,
+    taken_apart,
+)
 from monitor.setup.config import Config, JointConfig
 
 Floats = NDArray[np.float64]
 
 # A brake that is reported closed may still be closing; from then on the joint must stand.
 _BRAKE_SETTLE_S = 0.3
+# A torque sensor at a link that fell silent counts again after reading for so long.
+_SENSOR_BACK_S = 1.0
 # Where nothing else bounds a reading: rad or m, and per second. Beyond, arithmetic would overflow.
 _FARTHEST, _FASTEST = 1e6, 1e3
 
@@ -70,6 +79,7 @@ class Setup:
         inputs = zeros(inputs_fields(s))
         inputs["E"] = self.model.E
         inputs["tau_cmd"] = math.nan
+        inputs["tau_link"] = math.nan
         return Blocks(self.params, inputs, zeros(state_fields(s)), zeros(outputs_fields(s)))
 
     def warm(self) -> None:
@@ -110,15 +120,17 @@ def build(config: Config, calibration: Calibration | None = None) -> Setup:
         place = str(config.path.parent / config.robot.calibration)
         calibration = read_calibration(config.calibration_text, place, tree, config)
     model = calibration.model if calibration else configured_model(tree, config)
-    band = calibration.band if calibration else default_band(rated, model.coulomb, model.viscous)
+    wide = default_band(rated, model.coulomb, model.viscous)
+    band = calibration.band if calibration else apart(tree, config, wide)
     outline = weighing.outline(tree, config, rated, model)
     found = weighing.candidates(outline)
     facts = _facts(where, tree, config, found.explanations)
     sizes = weighing.sizes_of(found, tree, config, D)
     params = zeros(params_fields(sizes))
-    params["rated"] = rated
+    params["rated"] = np.append(rated, rated[_sensed(tree, config)])
     _fill_tree(params, tree, config, model)
     _fill_wire(params, tree, config, lags)
+    _fill_link_torque(params, tree, config)
     _fill_friction(params, tree, config, model)
     _fill_ledger(params, tree, config)
     _fill_limits(params, tree, config)
@@ -150,6 +162,19 @@ def _rated(tree: Tree, config: Config) -> Floats:
     for row, i in enumerate(_order(tree, config), start=base):
         rated[row] = config.robot.joint[i].rated_torque
     return rated
+
+
+def _sensed(tree: Tree, config: Config) -> list[int]:
+    """Return the rows of the joints with a torque sensor at the link side, in their order on the wire."""
+    joints = config.robot.joint
+    base = tree.n - len(joints)
+    return [base + tree.joints.index(joint.name) for joint in joints if joint.link_torque_sensor]
+
+
+def apart(tree: Tree, config: Config, band: Band) -> Band:
+    """Return a band of whole joints taken apart where the configuration has a sensor at the link side."""
+    noise = [joint.link_torque_noise_sd for joint in config.robot.joint if joint.link_torque_sensor]
+    return taken_apart(band, _sensed(tree, config), np.array(noise))
 
 
 def _check_joints(where: str, joints: tuple[JointConfig, ...], moving: tuple[str, ...]) -> None:
@@ -232,6 +257,15 @@ def _fill_wire(params: Any, tree: Tree, config: Config, lags: list[int]) -> None
         params["command_error"][0, i] = (
             config.watch.command_error_ratio * joint.rated_torque / joint.torque_scale
         )
+
+
+def _fill_link_torque(params: Any, tree: Tree, config: Config) -> None:
+    sensors = [(i, joint) for i, joint in enumerate(config.robot.joint) if joint.link_torque_sensor]
+    params["link_row"] = _sensed(tree, config)
+    params["link_wire"] = [i for i, _ in sensors]
+    params["link_sign"] = [float(joint.sign) for _, joint in sensors]
+    params["link_range"] = [joint.link_torque_range for _, joint in sensors]
+    params["link_back_ns"] = round(1e9 * _SENSOR_BACK_S)
 
 
 def _fill_friction(params: Any, tree: Tree, config: Config, model: Model) -> None:
@@ -368,11 +402,15 @@ def _facts(where: str, tree: Tree, config: Config, explanations: tuple[Explanati
     tool = _link(f"{where}: robot.tool_link", tree, robot.tool_link) if robot.tool_link else None
     base_rows = tuple(f"base_{kind}_{x}" for kind in ("turn", "move") for x in "xyz")[:base]
     units = ("N m",) * min(base, 3) + ("N",) * min(base, 3)
+    units += tuple("N" if kind == "prismatic" else "N m" for kind in tree.joint_kinds)
+    sensed = _sensed(tree, config)
+    motors = tuple(f"{tree.joints[row - base]} (motor)" for row in sensed)
     return Facts(
         robot=robot.name or tree.name,
         joints=tuple(joint.name for joint in robot.joint),
-        rows=base_rows + tree.joints,
-        units=units + tuple("N" if kind == "prismatic" else "N m" for kind in tree.joint_kinds),
+        rows=base_rows + tree.joints + motors,
+        units=units + tuple(units[row] for row in sensed),
+        link_torque=tuple(i for i, joint in enumerate(robot.joint) if joint.link_torque_sensor),
         feet=tuple(foot.name for foot in robot.foot),
         floating=robot.base == "floating",
         serial=robot.serial,

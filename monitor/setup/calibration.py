@@ -8,8 +8,8 @@ from __future__ import annotations
 
 import json
 import math
-from collections.abc import Mapping
-from dataclasses import dataclass, field, fields
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass, field, fields, replace
 from hashlib import sha256
 from typing import Any, Literal, NamedTuple
 
@@ -19,7 +19,18 @@ from pydantic import Field
 from scipy.stats import chi2
 
 from monitor.errors import ConfigError
-from monitor.kernels.band import CAUSES, FLOOR, INERTIA, NOISE, STANDS, STANDS_SQUARED, TORQUE, VELOCITY
+from monitor.kernels.band import (
+    CAUSES,
+    CRAWLS,
+    CREEPS,
+    FLOOR,
+    INERTIA,
+    NOISE,
+    STANDS,
+    STANDS_SQUARED,
+    TORQUE,
+    VELOCITY,
+)
 from monitor.kernels.ledger import BENDS
 from monitor.robot.pseudo_inertia import flaw
 from monitor.robot.tree import Tree
@@ -131,6 +142,55 @@ def default_band(rated: Floats, coulomb: Floats, viscous: Floats) -> Band:
     )
 
 
+# What is friction of the joint, and so of the motor side alone.
+_OF_FRICTION = [STANDS, STANDS_SQUARED, VELOCITY, CREEPS, CRAWLS]
+
+
+def taken_apart(band: Band, rows: Sequence[int], noise_sd: Floats) -> Band:
+    """Return the band (n rows) with T joints taken apart into link side and motor side (n + T rows).
+
+    Parameters
+    ----------
+    band : Band
+        Of whole joints.
+    rows : sequence of int
+        Rows of the T joints that have a torque sensor at the link side.
+    noise_sd : (T,)
+        Standard deviation of these sensors [N m].
+
+    Both sides get the causes of the whole, but the link side no friction: it feels none. Noise of the sensor
+    adds to both, with opposite sign: `[[l + s, -s], [-s, m + s]]` for the two rows of a joint. Its whole
+    variance s is counted, though the residual's filter lets less through.
+    """
+    if not len(rows):
+        return band
+    n, at = len(band.rho), np.array(rows)
+    motors = n + np.arange(len(at))
+
+    def doubled(x: Floats) -> Floats:
+        return np.concatenate([x, x[at]])
+
+    fast, slow, track_sd = doubled(band.fast), doubled(band.slow), doubled(band.track_sd)
+    for causes in (fast, slow):
+        causes[at[:, None], _OF_FRICTION] = 0.0
+        causes[at, FLOOR] += noise_sd**2
+        causes[motors, FLOOR] += noise_sd**2
+    track_sd[at] = 0.0
+    rho = np.eye(n + len(at))
+    rho[:n, :n] = band.rho
+    rho[at, motors] = rho[motors, at] = -(noise_sd**2) / np.sqrt(fast[at, FLOOR] * fast[motors, FLOOR])
+    return replace(
+        band,
+        fast=fast,
+        slow=slow,
+        rho=rho,
+        slow_share=doubled(band.slow_share),
+        track_sd=track_sd,
+        body_limit=body_limit(len(rho)),
+        cusum_sd=doubled(band.cusum_sd),
+    )
+
+
 def body_limit(n: int) -> float:
     """Return the limit of `r' R^-1 r` that goes with `ROW_LIMIT` for n rows of normal noise."""
     return float(chi2.isf(math.erfc(ROW_LIMIT / math.sqrt(2.0)), n))
@@ -226,7 +286,8 @@ def read_calibration(text: str, where: str, tree: Tree, config: Config) -> Calib
             f"{where}: joints", shown(file.joints), f"the robot's: {shown(tree.joints)}", _AGAIN
         )
     _check_made_for(where, file.made_for, _made_for(config))
-    return Calibration(_model(where, file.model, tree), _band(where, file.band, tree.n), file.provenance)
+    rows = tree.n + sum(joint.link_torque_sensor for joint in config.robot.joint)
+    return Calibration(_model(where, file.model, tree), _band(where, file.band, rows), file.provenance)
 
 
 _AGAIN = "Commission this robot again, or name the calibration that is its own."
@@ -252,6 +313,8 @@ def _made_for(config: Config) -> dict[str, Any]:
     found |= {f"watch.{key}": getattr(config.watch, key) for key in _OF_WATCH}
     for joint in robot.joint:
         found |= {f"robot.joint {joint.name!r}.{key}": getattr(joint, key) for key in _OF_JOINT}
+        if joint.link_torque_sensor:
+            found |= {f"robot.joint {joint.name!r}.link_torque_sensor": True}
     return found
 
 

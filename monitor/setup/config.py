@@ -73,7 +73,7 @@ class JointConfig(Table):
 
     name: Name = Field(description="Name of the joint in the robot description.")
     sign: Annotated[int, AfterValidator(_plus_or_minus_one)] = Field(
-        default=1, description="Multiplies position, velocity and torque from the wire: 1 or -1."
+        default=1, description="Multiplies position, velocity and torques from the wire: 1 or -1."
     )
     zero_offset: float = Field(
         default=0.0,
@@ -146,6 +146,21 @@ class JointConfig(Table):
         default_factory=lambda earlier: 0.005 * earlier["rated_torque"],
         description="Standard deviation of the torque, joint side; default: 0.5 % of rated_torque [N m].",
     )
+    link_torque_sensor: bool = Field(
+        default=False,
+        description=(
+            "true where `tau_link` on the wire brings the torque of a sensor at the link side of this joint "
+            "[N m], beside the motor torque `tau`: drive, world and sensor are told apart then."
+        ),
+    )
+    link_torque_noise_sd: NotNegative = Field(
+        default_factory=lambda earlier: 0.005 * earlier["rated_torque"],
+        description="Standard deviation of that reading; default: 0.5 % of rated_torque [N m].",
+    )
+    link_torque_range: Positive = Field(
+        default_factory=lambda earlier: 3.0 * earlier["peak_torque"],
+        description="Largest torque it can read, silent beyond; default: 3 times peak_torque [N m].",
+    )
     position_min: float | None = Field(
         default=None,
         examples=[-3.0],
@@ -174,6 +189,13 @@ class JointConfig(Table):
         if self.peak_torque < self.rated_torque:
             raise refusal(
                 "peak_torque", f"{self.peak_torque}", f"at least the rated_torque, {self.rated_torque}"
+            )
+        if self.link_torque_sensor and self.torque_meaning == "link":
+            raise refusal(
+                "link_torque_sensor",
+                'true beside torque_meaning = "link"',
+                "the motor's own torque in `tau`",
+                "One reading cannot tell drive and world apart; send the motor's torque as `tau`.",
             )
         low, high = self.position_min, self.position_max
         if low is not None and high is not None and low >= high:
@@ -308,6 +330,14 @@ class RobotConfig(Table):
     def _check_coupling(self) -> None:
         if not self.coupling:
             return
+        for i, joint in enumerate(self.joint):
+            if joint.link_torque_sensor:
+                raise refusal(
+                    ("joint", i, "link_torque_sensor"),
+                    "true beside a coupling matrix",
+                    "false, or motors that drive a joint each",
+                    "Behind a coupling, link side and motor side of a joint are not taken apart yet.",
+                )
         n, lengths = len(self.joint), [len(row) for row in self.coupling]
         if lengths != [n] * n:
             raise refusal("coupling", f"{len(lengths)} rows of lengths {lengths}", f"{n} rows of {n} numbers")
@@ -573,6 +603,9 @@ class ExplainConfig(Table):
     actuator_per_h: Rate = Field(default=1.0, description="Faults of actuators, of all joints [1/h].")
     position_sensor_per_h: Rate = Field(
         default=0.3, description="Position readings that get an offset, of all joints [1/h]."
+    )
+    torque_sensor_per_h: Rate = Field(
+        default=0.3, description="Torque sensors at links that begin to read wrong, of all joints [1/h]."
     )
     load_per_h: Rate = Field(
         default=20.0, description="Loads taken up or lost without being announced [1/h]."

@@ -49,6 +49,9 @@ class DatasheetJoint(Table):
     encoder_step: Positive | None = Field(default=None, description="Step of the position [rad].")
     velocity_noise_sd: Positive | None = Field(default=None, description="Noise of the velocity [rad/s].")
     torque_noise_sd: NotNegative | None = Field(default=None, description="Noise of the torque [N m].")
+    link_torque_sensor: bool | None = Field(default=None, description="A torque sensor at the link side.")
+    link_torque_noise_sd: NotNegative | None = Field(default=None, description="Noise of that sensor [N m].")
+    link_torque_range: Positive | None = Field(default=None, description="Largest reading of it [N m].")
 
     @model_validator(mode="after")
     def _check(self) -> Self:
@@ -84,7 +87,8 @@ def write_config(
         How the robot stands.
     datasheet : Path, optional
         JSON file with `joints`: list of objects with `name` and any of `rated_torque`, `peak_torque` [N m],
-        `armature` [kg m²], `encoder_step` [rad], `velocity_noise_sd` [rad/s], `torque_noise_sd` [N m].
+        `armature` [kg m²], `encoder_step` [rad], `velocity_noise_sd` [rad/s], `torque_noise_sd` [N m],
+        `link_torque_sensor`, `link_torque_noise_sd`, `link_torque_range` [N m].
     folder : Path, optional
         Where the configuration will lie; the path of the description is written relative to it. Default: the
         current folder.

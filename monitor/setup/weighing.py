@@ -65,6 +65,7 @@ def outline(tree: Tree, config: Config, rated: Floats, model: Any) -> Outline:
             [_telling(tree, rated, axis, centre) for axis, centre in zip(body.axis, body.centre, strict=True)]
         ),
         feet=tuple(foot.name for foot in config.robot.foot),
+        sensed=tuple(tree.joints.index(x.name) for x in config.robot.joint if x.link_torque_sensor),
         weight=max(weight, 1.0),
         carrier=_carrier(tree, config)[0],
         payload=config.explain.largest_load_kg,
@@ -74,7 +75,7 @@ def outline(tree: Tree, config: Config, rated: Floats, model: Any) -> Outline:
 
 def cannot_tell(tree: Tree, config: Config) -> list[str]:
     """Return in sentences which explanations the sensors of a robot cannot support, and what would help."""
-    return [*_like_an_actuator(tree), *_without_effect(tree, config), *_behind_the_gear(config)]
+    return [*_like_an_actuator(tree, config), *_without_effect(tree, config), *_behind_the_gear(config)]
 
 
 def twins(tree: Tree) -> dict[str, str]:
@@ -92,8 +93,12 @@ def twins(tree: Tree) -> dict[str, str]:
     return found
 
 
-def _like_an_actuator(tree: Tree) -> list[str]:
-    """Say which faults of an actuator cannot be told from a force on some link."""
+def _like_an_actuator(tree: Tree, config: Config) -> list[str]:
+    """Say which faults of an actuator cannot be told from a force on some link.
+
+    Joints with a torque sensor at the link side are left out: there drive and world are two rows.
+    """
+    sensed = {joint.name for joint in config.robot.joint if joint.link_torque_sensor}
     links: dict[str, list[str]] = {}
     for link, joint in twins(tree).items():
         links.setdefault(joint, []).append(link)
@@ -102,6 +107,7 @@ def _like_an_actuator(tree: Tree) -> list[str]:
         "be told from a fault of its actuator; a torque sensor at the joint's link side or a force sensor at "
         "the base would settle it"
         for joint, names in links.items()
+        if joint not in sensed
     ]
 
 
@@ -221,11 +227,13 @@ def fill_evidence(params: Any, tree: Tree, config: Config, found: Candidates) ->
 
 def _fill_trend(params: Any, config: Config, dt: float) -> None:
     """Set how far friction may leave the commissioned one, and how certainly and for how long."""
-    settings, rated = config.explain, params["rated"][0]
+    settings, rated, of = config.explain, params["rated"][0], params["link_row"][0]
     for a, (name, floor) in enumerate(
         (("coulomb", actuator.COULOMB_FLOOR), ("viscous", actuator.VISCOUS_FLOOR))
     ):
-        params["trend_limit"][0, :, a] = settings.friction_drift * np.maximum(params[name][0], floor * rated)
+        params["trend_limit"][0, :, a] = settings.friction_drift * np.maximum(
+            np.append(params[name][0], params[name][0, of]), floor * rated
+        )
     params["trend_limit"][0, :, 2] = settings.offset_drift * rated
     params["trend_keep"] = math.exp(-dt / settings.drift_memory_s)
     params["trend_sure"] = NormalDist().inv_cdf(settings.certainty)
@@ -292,6 +300,7 @@ def sizes_of(found: Candidates, tree: Tree, config: Config, lines: int) -> Sizes
         n=tree.n, nq=tree.nq, m=len(config.robot.joint), N=len(tree.arrays.parent), D=lines,
         B=len(bodies(tree).names), F=len(config.robot.foot), X=len(found.explanations),
         K=len(found.constant), Q=len(found.smooth),
+        T=sum(joint.link_torque_sensor for joint in config.robot.joint),
     )  # fmt: skip
 
 

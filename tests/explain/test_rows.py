@@ -10,7 +10,7 @@ import pinocchio as pin
 import pytest
 from numpy.typing import NDArray
 
-from monitor.explain import actuator, contact, load, position_sensor
+from monitor.explain import actuator, contact, load, position_sensor, torque_sensor
 from monitor.kernels.dynamics import dynamics
 from monitor.robot.robot import Robot
 from monitor.robot.tree import Base, LinkPlace, build_tree
@@ -144,7 +144,7 @@ def test_a_slipping_sensor_accelerates_beside_its_joint(number: int) -> None:
         H, slope = m.columns(4), np.random.default_rng(row).normal(size=(m.robot.n, m.robot.n))
         feature = np.full((m.robot.n, 3), 9.0)
         feature[row, 2] = 0.0
-        position_sensor.rows(row, slope, m.M, feature, H)
+        position_sensor.rows(row, slope, m.M, feature, np.zeros(0, np.int64), m.robot.tree.armature, H)
         there = m._replace(a=m.a + np.eye(m.robot.n)[row]).inverse_dynamics()
         assert worst(H[:, 2], there - here) < 1e-9
         np.testing.assert_array_equal(H[:, 3], H[:, 2])
@@ -158,7 +158,7 @@ def test_friction_of_a_joint_that_moves_well_is_not_misread() -> None:
     misread = []
     for speed in (0.0, position_sensor.SLOW, -4.0 * position_sensor.SLOW):
         feature[0, 2] = speed
-        position_sensor.rows(0, np.zeros((2, 2)), np.eye(2), feature, H)
+        position_sensor.rows(0, np.zeros((2, 2)), np.eye(2), feature, np.zeros(0, np.int64), np.zeros(2), H)
         misread.append(H[0, 1])
         assert H[1, 1] == 0.0
     assert misread[0] == 1.0
@@ -181,3 +181,37 @@ def test_a_faulty_drive_leaves_a_residual_on_its_own_joint_alone(kind: int, expe
     feature, H = np.array([[3.0, 0.1, 0.2], [7.0, -0.9, -1.3], [1.0, 1.0, 1.0]]), np.full((3, 6), math.nan)
     actuator.rows(8 * 1 + kind, feature, H)
     np.testing.assert_array_equal(H[:, 0], [0.0, expected, 0.0])
+
+
+def test_a_slipping_position_is_seen_at_both_sides_of_its_joint_and_adds_up() -> None:
+    rng, armature = np.random.default_rng(2), np.array([0.3, 0.2, 0.1])
+    slope, M = rng.normal(size=(2, 3, 3))
+    whole, apart, still = np.full((3, 4), math.nan), np.full((5, 4), math.nan), np.zeros((5, 3))
+    position_sensor.rows(2, slope, M, still, np.zeros(0, np.int64), armature, whole)
+    position_sensor.rows(2, slope, M, still, np.array([0, 2]), armature, apart)
+    np.testing.assert_array_equal(apart[4], [0.0, 1.0, 0.1, 0.1])  # friction and rotor of its own joint
+    np.testing.assert_array_equal(apart[3], np.zeros(4))
+    apart[2] += apart[4]
+    np.testing.assert_allclose(apart[:3], whole, atol=1e-15)
+
+
+@pytest.mark.parametrize(
+    ("kind", "expected"),
+    [
+        (torque_sensor.OFFSET, [[1.0]]),
+        (torque_sensor.SCALE, [[7.0]]),
+        (torque_sensor.FROZEN, [[1.0, 7.0]]),
+        (torque_sensor.NOISE, [[1.0]]),
+    ],
+)
+def test_a_torque_sensor_that_reads_wrong_is_seen_at_both_sides_with_opposite_sign(
+    kind: int, expected: list[list[float]]
+) -> None:
+    # The second of two sensors, at the third of three joints; 7 N m should pass it.
+    feature, H = np.zeros((5, 3)), np.full((5, 2), math.nan)
+    feature[2, 0] = 7.0
+    torque_sensor.rows(8 * 1 + kind, np.array([0, 2]), feature, H)
+    columns = len(expected[0])
+    np.testing.assert_array_equal(H[[4], :columns], expected)
+    np.testing.assert_array_equal(H[2, :columns], -H[4, :columns])
+    np.testing.assert_array_equal(H[[0, 1, 3], :columns], np.zeros((3, columns)))

@@ -48,6 +48,7 @@ FIELDS = {
         "band_ratio",
         "counts",
         "standing",
+        "ignored",
         "loop",
     ],
 }

@@ -442,3 +442,13 @@ def test_feet_count_only_where_the_configuration_has_any() -> None:
     for feet in ([1], [1, 2], "11"):
         with pytest.raises(WireError, match="joints feet"):
             FLOATING.decode(msgpack.packb(GOOD | {"base": BASE, "feet": feet}))
+
+
+def test_link_torques_of_joints_with_a_sensor_come_last_in_the_configured_order() -> None:
+    decoder = JointsFormat(NAMES, floating=False, link_torque=(0, 2))
+    sent = GOOD | {"names": ["toe", "hip", "knee"], "tau_link": [1.0, 2.0, 3.0]}
+    assert struct.unpack("<2d", decoder.decode(msgpack.packb(sent)).body[-16:]) == (2.0, 1.0)
+    without = decoder.decode(msgpack.packb(GOOD)).body
+    assert np.isnan(struct.unpack("<2d", without[-16:])).all()
+    assert len(without) == len(FIXED.decode(msgpack.packb(GOOD)).body) + 16
+    assert not decoder.ignores_link_torque

@@ -39,15 +39,18 @@ FIELDS = (
     "left",
     "R",
     "track",
+    "row_fast",
+    "row_slow",
 )
 WEIGHED = ("null_log", "constant_log", "smooth_log", "smooth_x", "fault_theta")
 
 
 def robots() -> Iterator[tuple[str, Setup]]:
-    """Yield a fixed and a floating robot with each form of the residual; they are judged almost at once."""
+    """Yield robots with each form of the residual, judged almost at once: fixed, sensed links; floating."""
+    sensed = [joint | {"link_torque_sensor": True} for joint in PAIR_JOINTS]
     for form in FORMS:
         watch = {"residual": form, "settle_s": 0.002, "start_settle_s": 0.005}
-        yield f"fixed {form}", made(PAIR, PAIR_JOINTS, watch=watch)
+        yield f"fixed {form}", made(PAIR, sensed, watch=watch)
         yield f"floating {form}", made(SLED, SLED_JOINTS, {"base": "floating"}, watch)
 
 
@@ -61,6 +64,8 @@ def put(inputs: Any, k: int) -> None:
         x["q"][i] = 0.3 * np.sin(2.0 * t + i)
         x["qd"][i] = 0.6 * np.cos(2.0 * t + i)
         x["tau"][i] = 3.0 * np.cos(5.0 * t + i)
+        if i < x["tau_link"].shape[0]:
+            x["tau_link"][i] = np.nan if k % 500 == 40 else x["tau"][i] - 1.0
         x["tau_cmd"][i] = x["tau"][i] + (4.0 if k % 50 > 20 else 0.0)
     x["base_quat"][:] = (np.cos(t), 0.0, np.sin(t), 0.0)
     x["base_p"][:] = (t, 0.0, 0.1 * t)

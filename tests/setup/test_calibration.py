@@ -13,11 +13,19 @@ from hypothesis import given
 from hypothesis import strategies as st
 
 from monitor.errors import ConfigError
-from monitor.kernels.band import CAUSES, FLOOR
+from monitor.kernels.band import CAUSES, CRAWLS, CREEPS, FLOOR, STANDS, STANDS_SQUARED, VELOCITY
 from monitor.kernels.ledger import BENDS
 from monitor.robot.pseudo_inertia import flaw
 from monitor.setup.build import Setup, build
-from monitor.setup.calibration import Band, Calibration, Model, calibration_text, read_calibration
+from monitor.setup.calibration import (
+    Band,
+    Calibration,
+    Model,
+    calibration_text,
+    default_band,
+    read_calibration,
+    taken_apart,
+)
 from monitor.setup.config import Config, loads
 from tests.flow.rig import PAIR, PAIR_JOINTS, SLED, SLED_JOINTS
 
@@ -265,3 +273,21 @@ def test_any_value_in_any_place_gives_a_calibration_or_a_config_error(
     except ConfigError:
         return
     assert np.isfinite(found.band.row_limit)
+
+
+def test_a_band_taken_apart_has_friction_at_the_motor_and_the_sensor_at_both_sides() -> None:
+    rated, coulomb, viscous = np.array([40.0, 20.0]), np.array([2.0, 1.0]), np.array([1.5, 0.6])
+    whole, noise = default_band(rated, coulomb, viscous), np.array([0.3])
+    band = taken_apart(whole, [1], noise)
+    friction = [STANDS, STANDS_SQUARED, VELOCITY, CREEPS, CRAWLS]
+    assert band.fast.shape == band.slow.shape == (3, CAUSES)
+    np.testing.assert_array_equal(band.fast[0], whole.fast[0])
+    assert not band.fast[1, friction].any()
+    np.testing.assert_array_equal(band.fast[2, friction], whole.fast[1, friction])
+    np.testing.assert_array_equal(band.track_sd, [whole.track_sd[0], np.zeros(3), whole.track_sd[1]])
+    # What is left of the two rows while the joint moves without load, by hand: [[l + s, -s], [-s, l + s]].
+    sd = np.sqrt(band.fast[1:, FLOOR])
+    side, sensor = whole.fast[1, FLOOR], 0.09
+    both = side + sensor
+    np.testing.assert_allclose(band.rho[1:, 1:] * np.outer(sd, sd), [[both, -sensor], [-sensor, both]])
+    assert taken_apart(whole, [], np.zeros(0)) is whole

@@ -84,6 +84,11 @@ def test_a_force_on_a_link_that_one_joint_alone_carries_is_like_a_fault_of_that_
         )
 
 
+def test_a_torque_sensor_at_its_link_side_settles_what_a_joint_alone_cannot_tell() -> None:
+    assert len(forces(robot(*TWO_ARMS))) == 2
+    assert forces(robot(*TWO_ARMS, link_torque_sensor=True)) == []
+
+
 def test_a_robot_that_floats_feels_every_force_in_its_base() -> None:
     assert made(SLED, SLED_JOINTS, "floating").notes == ()
     assert forces(made(SLED, SLED_JOINTS)) != []

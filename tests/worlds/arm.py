@@ -155,6 +155,8 @@ class Recording:
         Torque from outside: `Jᵀ F` of pushes and of contacts.
     friction : (T,n)
         Torque of joint friction; against the velocity.
+    tau_link : (T,n)
+        What passes from the gear to the link: motor torque and friction, less what turns the rotor.
     """
 
     joints: tuple[str, ...]
@@ -165,6 +167,7 @@ class Recording:
     tau: Floats
     tau_ext: Floats
     friction: Floats
+    tau_link: Floats
 
 
 def compiled(world: ArmWorld) -> Any:
@@ -237,7 +240,9 @@ def simulate(world: ArmWorld, seconds: float, pushes: Sequence[Push] = ()) -> Re
     n = controller.n
     names = tuple(model.joint(i).name for i in range(n))
     samples = round(seconds / PERIOD_S)
-    rows = {name: np.zeros((samples, n)) for name in ("q", "qd", "qdd", "tau", "tau_ext", "friction")}
+    rows = {
+        name: np.zeros((samples, n)) for name in ("q", "qd", "qdd", "tau", "tau_ext", "friction", "tau_link")
+    }
     data.qpos[:n], data.qvel[:n], _ = world.motion.at(0.0)
     for step in range(samples * SUBSTEPS):
         t = step * PERIOD_S / SUBSTEPS
@@ -256,6 +261,7 @@ def simulate(world: ArmWorld, seconds: float, pushes: Sequence[Push] = ()) -> Re
                 slowed = data.qfrc_damper[:n] + _constraint_torque(model, data, _FRICTION)[:n]
             rows["q"][k], rows["qd"][k], rows["qdd"][k] = q, qd, data.qacc[:n]
             rows["tau"][k], rows["friction"][k] = tau, slowed
+            rows["tau_link"][k] = tau + slowed - model.dof_armature[:n] * data.qacc[:n]
             rows["tau_ext"][k] = pushed + _constraint_torque(model, data, _CONTACTS)[:n]
     return Recording(joints=names, t=np.arange(samples, dtype=np.float64) * PERIOD_S, **rows)
 

@@ -8,6 +8,7 @@ Worlds:
   velocities and torques are those of the motor side; the engine's dry friction acts on the rotors.
 - `dip`: stiff joints; friction falls with speed before viscous friction makes it rise again (a law of the
   velocity, see engine.py); it does not truly stick but creeps below `v0`.
+- `sensed`: as `rigid`, with a torque sensor behind each gear.
 
 Everywhere: the true inertias are 3 to 8 % off the description; friction differs by up to 10 % from session
 to session and falls by some percent while the arm gets warm; the drives follow smooth moves by feed-forward
@@ -42,15 +43,23 @@ from tests.worlds.engine import (
     engine_of,
     feed_forward,
 )
-from tests.worlds.happenings import GIVE_WAY_S, Encounter, Grip, Happenings, draw, spoil
+from tests.worlds.happenings import GIVE_WAY_S, Encounter, Grip, Happenings, draw, misread, spoil
 from tests.worlds.noise import quantised
 from tests.worlds.programs import Program, work
-from tests.worlds.robots import FRICTION_VELOCITY, HALF_RANGE, HOME, JOINTS, Arm, robot
+from tests.worlds.robots import (
+    FRICTION_VELOCITY,
+    HALF_RANGE,
+    HOME,
+    JOINTS,
+    LINK_TORQUE_SD_SHARE,
+    Arm,
+    robot,
+)
 from tests.worlds.sessions import Exact, Truth, WorldSession, cached
 
 Floats = NDArray[np.float64]
 
-WORLDS = ("rigid", "elastic", "dip")
+WORLDS = ("rigid", "elastic", "dip", "sensed")
 STOP_RAD = 0.3
 _BANDWIDTH = 30.0
 _LONGEST_CHUNK = 1000
@@ -93,7 +102,8 @@ def trial(
     ----------
     kind : str, optional
         `contact` (prescribed), `collision` (not in the elastic world), `actuator`, `position-sensor`, `load`,
-        `signal`, or `contact-in-fault` (a lasting actuator fault, then contacts); without it a mix of all.
+        `signal`, `torque-sensor` (sensed world), or `contact-in-fault` (a lasting actuator fault, then
+        contacts); without it a mix of all.
     exact : bool
         Keep the exact motion too; such a session is made anew each time.
     """
@@ -108,7 +118,8 @@ def trial(
 
     def make() -> WorldSession:
         def happen(program: Program, rng: np.random.Generator) -> Happenings:
-            return draw(robot(robot_seed), program, rng, seconds, kind, collisions=world != "elastic")
+            arm = robot(robot_seed)
+            return draw(arm, program, rng, seconds, kind, world != "elastic", world == "sensed")
 
         return session(world, robot_seed, session_seed, seconds, happen, exact)
 
@@ -127,8 +138,8 @@ def session(
     if world not in WORLDS:
         raise ValueError(f"no world {world!r}; there are {WORLDS}")
     arm = robot(robot_seed)
-    streams = np.random.SeedSequence([robot_seed, seed, crc32(world.encode())]).spawn(5)
-    moving, happening, day, noise, spoiling = (np.random.default_rng(stream) for stream in streams)
+    streams = np.random.SeedSequence([robot_seed, seed, crc32(world.encode())]).spawn(6)
+    moving, happening, day, noise, spoiling, sensing = (np.random.default_rng(stream) for stream in streams)
     program = work(moving, seconds, steady=world == "elastic")
     happenings = happen(program, happening)
     samples = round(seconds / PERIOD_S)
@@ -142,6 +153,11 @@ def session(
         rows.tau + noise.normal(0.0, 1.0, rows.q.shape) * [joint["torque_noise_sd"] for joint in arm.joints],
     )
     spoil(happenings.signals, spoiling, rated, q, qd, tau)
+    error, tau_link = np.zeros_like(q), None
+    if world == "sensed":
+        through = _through(arm, rows)
+        error = misread(happenings.misreadings, rated, through)
+        tau_link = through + error + sensing.normal(0.0, LINK_TORQUE_SD_SHARE, q.shape) * rated
     seq = happenings.kept(np.arange(done))
     q = quantised(q, step) + 0.0  # no negative zero, so that a cached session has the same bytes
     return WorldSession(
@@ -149,7 +165,7 @@ def session(
         robot_seed=robot_seed,
         seed=seed,
         urdf=arm.urdf,
-        joints=arm.joints,
+        joints=tuple(_with_sensor(joint) for joint in arm.joints) if world == "sensed" else arm.joints,
         links=tuple(link.name for link in arm.links),
         seq=seq,
         t=seq * PERIOD_S,
@@ -157,12 +173,24 @@ def session(
         qd=_in_single(qd[seq]),
         tau=_in_single(tau[seq]),
         tau_cmd=_in_single(rows.cmd[seq]),
-        truths=_truths(arm, happenings, rows, simulation.link_of_body),
+        tau_link=None if tau_link is None else _in_single(tau_link[seq]),
+        truths=_truths(arm, happenings, rows, error, simulation.link_of_body),
         unexplained=(rows.outside + rows.lost)[seq] + 0.0,
         force=rows.force[seq] + 0.0,
         stopped=stopped,
         exact=_exact(rows, seq) if exact else None,
     )
+
+
+def _through(arm: Arm, rows: Rows) -> Floats:
+    """Return the torque (T,n) that passes from each gear to its link: the engine's account of the rotor."""
+    passes: Floats = rows.tau + rows.lost + rows.friction - arm.armature * rows.motor_qdd
+    return passes
+
+
+def _with_sensor(joint: dict[str, Any]) -> dict[str, Any]:
+    noise_sd = LINK_TORQUE_SD_SHARE * joint["rated_torque"]
+    return joint | {"link_torque_sensor": True, "link_torque_noise_sd": noise_sd}
 
 
 def _exact(rows: Rows, seq: NDArray[np.int64]) -> Exact:
@@ -443,8 +471,10 @@ def _add_ball(spec: Any, arm: Arm, happenings: Happenings) -> None:
         )
 
 
-def _truths(arm: Arm, happenings: Happenings, rows: Rows, link_of_body: dict[int, str]) -> tuple[Truth, ...]:
-    """Return what happened, as far as it did before the session ended."""
+def _truths(
+    arm: Arm, happenings: Happenings, rows: Rows, error: Floats, link_of_body: dict[int, str]
+) -> tuple[Truth, ...]:
+    """Return what happened, as far as it did before the session ended; error (T,n) of the torque sensors."""
     done_s = len(rows.q) * PERIOD_S
     names = [joint["name"] for joint in arm.joints]
     truths = [_push_truth(arm, push, rows) for push in happenings.pushes if push.start_s < done_s]
@@ -460,6 +490,12 @@ def _truths(arm: Arm, happenings: Happenings, rows: Rows, link_of_body: dict[int
             fault.start_s, min(fault.end_s, done_s), fault.size, fault.unit, truthful=fault.truthful,
         )  # fmt: skip
         truths.append(truth if fault.kind != "actuator" else _measured(truth, arm, rows.lost))
+    for wrong in happenings.misreadings:
+        if wrong.start_s < done_s:
+            end = min(wrong.end_s + wrong.ramp_s, done_s)
+            where = names[wrong.joint], None, wrong.start_s, end
+            truth = Truth("torque-sensor", wrong.detail, *where, wrong.size, wrong.unit)
+            truths.append(_measured(truth, arm, error))
     for grip in happenings.grips:
         if grip.start_s < done_s:
             truths.append(_load_truth(arm, grip, rows, done_s))

@@ -87,6 +87,22 @@ class SignalFault:
     unit: str
 
 
+@dataclass(frozen=True)
+class Misreading:
+    """A torque sensor at a link that reads wrong.
+
+    By an `offset` (share of rated), by a `scale` (share), or `frozen`: it stands still (size 1).
+    """
+
+    detail: str
+    joint: int
+    start_s: float
+    end_s: float
+    ramp_s: float
+    size: float
+    unit: str
+
+
 @dataclass
 class Happenings:
     """All that happens in one session."""
@@ -96,6 +112,7 @@ class Happenings:
     faults: list[Fault] = field(default_factory=list)
     grips: list[Grip] = field(default_factory=list)
     signals: list[SignalFault] = field(default_factory=list)
+    misreadings: list[Misreading] = field(default_factory=list)
     ball_radius_m: float = 0.0
     ball_mass_kg: float = 0.0
 
@@ -135,6 +152,24 @@ def spoil(
         elif s.detail == "noise":
             reading, scale = {"rad": (q, 1.0), "rad/s": (qd, 1.0), "share of rated": (tau, rated[i])}[s.unit]
             reading[rows, i] += rng.normal(0.0, s.size * scale, shape)
+
+
+def misread(misreadings: Sequence[Misreading], rated: Floats, torque: Floats) -> Floats:
+    """Return by how much torque sensors read wrong (T,n) where such a torque passes them."""
+    error = np.zeros_like(torque)
+    t = engine.PERIOD_S * np.arange(len(torque))
+    for one in misreadings:
+        flanks = np.clip(
+            [(t - one.start_s) / one.ramp_s, (one.end_s + one.ramp_s - t) / one.ramp_s], 0.0, 1.0
+        )
+        share = one.size * np.sin(0.5 * math.pi * flanks.min(axis=0)) ** 2
+        i = one.joint
+        if one.detail == "frozen":
+            first = min(round(one.start_s / engine.PERIOD_S), len(torque) - 1)
+            error[:, i] += share * (torque[first, i] - torque[:, i])
+        else:
+            error[:, i] += share * (torque[:, i] if one.detail == "scale" else rated[i])
+    return error
 
 
 def actuator_fault(
@@ -185,14 +220,21 @@ def draw(
     seconds: float,
     kind: str | None,
     collisions: bool,
+    torque_sensors: bool = False,
 ) -> Happenings:
     """Return happenings of one kind, or of all for None, at least 6 s apart; kinds: see `arms.trial`."""
-    return _Drawing(arm, program, rng, seconds, collisions).draw(kind)
+    return _Drawing(arm, program, rng, seconds, collisions, torque_sensors).draw(kind)
 
 
 class _Drawing:
     def __init__(
-        self, arm: Arm, program: Program, rng: np.random.Generator, seconds: float, collisions: bool
+        self,
+        arm: Arm,
+        program: Program,
+        rng: np.random.Generator,
+        seconds: float,
+        collisions: bool,
+        torque_sensors: bool,
     ) -> None:
         self.arm, self.program, self.rng, self.seconds = arm, program, rng, seconds
         self.happenings = Happenings(
@@ -210,11 +252,13 @@ class _Drawing:
         }
         if collisions:
             self.makers["collision"] = self._collide
+        if torque_sensors:
+            self.makers["torque-sensor"] = self._torque_sensor
 
     def draw(self, kind: str | None) -> Happenings:
         shares = {
             "contact": 0.32, "collision": 0.13, "actuator": 0.27,
-            "position-sensor": 0.08, "load": 0.08, "signal": 0.12,
+            "position-sensor": 0.08, "load": 0.08, "signal": 0.12, "torque-sensor": 0.1,
         }  # fmt: skip
         if kind == "contact-in-fault":
             self._lasting(FIRST_S)
@@ -398,6 +442,23 @@ class _Drawing:
         row = (engine.READING, i, start, ramp, end, size, 0.0, 0.0)
         fault = Fault("position-sensor", "offset", i, start, end + ramp, size, "rad", row)
         self.happenings.faults.append(fault)
+        return end + ramp
+
+    def _torque_sensor(self, start: float) -> float | None:
+        rng, i = self.rng, int(self.rng.integers(JOINTS))
+        end, ramp = start + rng.uniform(4.0, 8.0), self._log(0.005, 0.5)
+        if end + ramp > self.seconds - 1.0:
+            return None
+        chance = rng.random()
+        if chance < 0.2:
+            one = Misreading("frozen", i, start, end, 0.005, 1.0, "share")
+        elif chance < 0.6:
+            one = Misreading(
+                "offset", i, start, end, ramp, self._sign() * rng.uniform(0.03, 0.15), "share of rated"
+            )
+        else:
+            one = Misreading("scale", i, start, end, ramp, self._sign() * rng.uniform(0.1, 0.5), "share")
+        self.happenings.misreadings.append(one)
         return end + ramp
 
     # --- load

@@ -25,6 +25,7 @@ def with_noise(
     encoder_step: ArrayLike = 0.0,
     velocity_sd: ArrayLike = 0.0,
     torque_sd: ArrayLike = 0.0,
+    link_torque_sd: ArrayLike = 0.0,
 ) -> Recording:
     """Return the recording as sensors would report it; the truth (qdd, tau_ext, friction) stays.
 
@@ -38,6 +39,8 @@ def with_noise(
         Step of the positions [rad].
     velocity_sd, torque_sd : (n,) array_like
         Standard deviation of white noise on velocities [rad/s] and torques [Nm].
+    link_torque_sd : (n,) array_like
+        The same of the torque sensors at the links [Nm].
     """
     rng = np.random.default_rng(seed)
     shape = recording.q.shape
@@ -46,4 +49,5 @@ def with_noise(
         q=quantised(recording.q, encoder_step),
         qd=recording.qd + np.asarray(velocity_sd) * rng.standard_normal(shape),
         tau=recording.tau + np.asarray(torque_sd) * rng.standard_normal(shape),
+        tau_link=recording.tau_link + np.asarray(link_torque_sd) * rng.standard_normal(shape),
     )

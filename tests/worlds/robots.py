@@ -22,6 +22,7 @@ JOINTS = 7
 ENCODER_STEP_RAD = 2.0 * math.pi / 2**17
 VELOCITY_SD = 0.007
 TORQUE_SD_SHARE = 0.005
+LINK_TORQUE_SD_SHARE = 0.005
 FRICTION_VELOCITY = 0.004
 # Where the arm works: middle and half width of the range of each joint [rad].
 HOME = np.array([0.0, 0.5, 0.0, 1.2, 0.0, 0.8, 0.0])

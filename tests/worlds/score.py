@@ -1,10 +1,12 @@
 """What the monitor makes of simulated arms, by world: noticed, delays, confusion, false events, reliability.
 
-    python -m tests.worlds.score [--worlds rigid,dip,elastic] [--robots 2] [--sessions 12]
-        [--held-out] [--default]
+    python -m tests.worlds.score [--worlds rigid,dip,elastic,sensed] [--robots 2] [--sessions 12]
+        [--held-out] [--default] [--without-link-torque]
 
 Model, band and limits are fitted to fault-free sessions of the same robot (others than the ones judged); with
-`--default` the configuration alone is used. Without `--held-out` seeds below 1000 are taken, those of tuning.
+`--default` the configuration alone is used; with `--without-link-torque` the torque sensors of the sensed
+world are not configured, and what they read wrong does not count. Without `--held-out` seeds below 1000 are
+taken, those of tuning.
 """
 
 from __future__ import annotations
@@ -13,7 +15,7 @@ import argparse
 import sys
 from collections import Counter, defaultdict
 from collections.abc import Iterator, Sequence
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from itertools import pairwise, product
 from typing import Any
 
@@ -66,9 +68,12 @@ class Tally:
     false_events: int = 0
 
 
-def config_of(session: WorldSession) -> Config:
+def config_of(session: WorldSession, link_torque: bool = True) -> Config:
     """Return the configuration a maker's datasheet would give for the robot of a session."""
-    robot = {"urdf": "robot.urdf", "joint": [dict(joint) for joint in session.joints]}
+    joints = [dict(joint) for joint in session.joints]
+    if not link_torque:
+        joints = [joint | {"link_torque_sensor": False} for joint in joints]
+    robot = {"urdf": "robot.urdf", "joint": joints}
     text = tomlkit.dumps({"schema": 1, "robot": robot})
     return loads(text, "robot.toml", {"robot.urdf": session.urdf})
 
@@ -77,14 +82,14 @@ def samples_of(session: WorldSession) -> Samples:
     """Return a session as the step takes it."""
     t_ns = np.round(session.t * 1e9).astype(np.int64) + 1_000_000_000
     q, qd, tau = (np.ascontiguousarray(x, dtype=float) for x in (session.q, session.qd, session.tau))
-    return Samples(t_ns, q, qd, tau, np.zeros((len(t_ns), 0)))
+    return Samples(t_ns, q, qd, tau, np.zeros((len(t_ns), 0)), tau_link=session.tau_link)
 
 
-def prepared(world: str, robot: int, first: int, default: bool) -> Setup:
+def prepared(world: str, robot: int, first: int, default: bool, link_torque: bool = True) -> Setup:
     """Return a robot made ready, by default alone or fitted to its own fault-free work."""
     count = 1 if default else FIT_SESSIONS + BAND_SESSIONS
     sessions = [arms.fault_free(world, robot, first + 10 + i, FIT_S) for i in range(count)]
-    config = config_of(sessions[0])
+    config = config_of(sessions[0], link_torque)
     if default:
         return build(config)
     samples = [samples_of(one) for one in sessions]
@@ -139,7 +144,8 @@ def judge(tally: Tally, session: WorldSession, events: Sequence[Event], bad: Seq
 
 def _slight(truth: Truth) -> bool:
     effect = truth.effect or 0.0
-    return effect < {"contact": _LEAST_CONTACT, "actuator": _LEAST_FAULT}.get(truth.kind, 0.0)
+    least = {"contact": _LEAST_CONTACT, "actuator": _LEAST_FAULT, "torque-sensor": _LEAST_FAULT}
+    return effect < least.get(truth.kind, 0.0)
 
 
 def _word(event: Event) -> str:
@@ -214,13 +220,20 @@ def main(arguments: Sequence[str]) -> None:
     parser.add_argument("--sessions", type=int, default=12)
     parser.add_argument("--held-out", action="store_true")
     parser.add_argument("--default", action="store_true")
+    parser.add_argument("--without-link-torque", action="store_true")
     chosen: Any = parser.parse_args(arguments)
     first = HELD_OUT_FROM if chosen.held_out else 0
     for world in chosen.worlds.split(","):
         tally = Tally()
-        setups = {r: prepared(world, first + r, first, chosen.default) for r in range(1, chosen.robots + 1)}
+        sensors = not chosen.without_link_torque
+        setups = {
+            r: prepared(world, first + r, first, chosen.default, sensors) for r in range(1, chosen.robots + 1)
+        }
         for robot, seed in product(setups, range(chosen.sessions)):
             session = arms.trial(world, first + robot, first + 100 + seed)
+            if not sensors:
+                seen = tuple(truth for truth in session.truths if truth.kind != "torque-sensor")
+                session = replace(session, truths=seen)
             judge(tally, session, *played(setups[robot], samples_of(session)))
         for line in lines(world, tally):
             sys.stdout.write(line + "\n")

@@ -39,11 +39,12 @@ class Truth:
     Attributes
     ----------
     kind : str
-        `contact`, `actuator`, `position-sensor`, `load` or `signal`.
+        `contact`, `actuator`, `position-sensor`, `torque-sensor`, `load` or `signal`.
     detail : str
         Contact: `prescribed`, `collision`. Actuator: `torque-loss`, `coulomb-friction`, `viscous-friction`,
-        `offset`, `ripple`, `open-circuit`, `stuck`. Position sensor: `offset`. Load: `gripped`. Signal:
-        `jump`, `frozen`, `contradiction`, `noise`, `gap`, `duplicate`.
+        `offset`, `ripple`, `open-circuit`, `stuck`. Position sensor: `offset`. Torque sensor: `offset`,
+        `scale`, `frozen`. Load: `gripped`. Signal: `jump`, `frozen`, `contradiction`, `noise`, `gap`,
+        `duplicate`.
     joint, link : str or None
         Where it was.
     start_s, end_s : float
@@ -129,6 +130,8 @@ class WorldSession:
         Torque from outside (`Jᵀ F`), or lost or added in the drive, exact.
     force : (T,3)
         Sum of the contact forces, world axes [N].
+    tau_link : (T,n) or None
+        Torque at the link side as sensors there read it.
     stopped : bool
         Whether a protective stop ended the session early: a joint was too far from where it should be.
     exact : Exact or None
@@ -150,12 +153,13 @@ class WorldSession:
     truths: tuple[Truth, ...]
     unexplained: Floats
     force: Floats
+    tau_link: Floats | None = None
     stopped: bool = False
     exact: Exact | None = None
 
 
 _SPARSE = ("unexplained", "force")
-_READ_IN_SINGLE = ("qd", "tau", "tau_cmd")
+_READ_IN_SINGLE = ("qd", "tau", "tau_cmd", "tau_link")
 
 
 def cached(
@@ -189,7 +193,7 @@ def save(path: Path, session: WorldSession) -> None:
         if field.name in _SPARSE:
             rows = np.flatnonzero(value.any(axis=1))
             arrays[f"{field.name}_rows"], arrays[field.name] = rows, value[rows]
-        elif field.name in _READ_IN_SINGLE:
+        elif field.name in _READ_IN_SINGLE and value is not None:
             arrays[field.name] = value.astype(np.float32)
         elif field.name == "q":
             arrays["q"] = np.round(value / step).astype(np.int32)
@@ -216,7 +220,7 @@ def load(path: Path) -> WorldSession:
         values, rows = arrays[name], arrays.pop(f"{name}_rows")
         arrays[name] = np.zeros((samples, values.shape[1]))
         arrays[name][rows] = values
-    for name in _READ_IN_SINGLE:
+    for name in arrays.keys() & set(_READ_IN_SINGLE):
         arrays[name] = arrays[name].astype(np.float64)
     arrays["q"] = arrays["q"] * joints[0]["encoder_step"]
     truths = tuple(_truth(values) for values in words.pop("truths"))

@@ -16,16 +16,17 @@ import pytest
 from numpy.typing import NDArray
 
 from monitor.robot.urdf import read_urdf
-from tests.worlds.arms import WORLDS, fault_free, session, trial
+from tests.worlds.arms import fault_free, session, trial
 from tests.worlds.engine import PERIOD_S
-from tests.worlds.happenings import Fault, Grip, Happenings, SignalFault, actuator_fault
+from tests.worlds.happenings import Fault, Grip, Happenings, Misreading, SignalFault, actuator_fault
 from tests.worlds.programs import TOP_ACCELERATION, work
-from tests.worlds.robots import ENCODER_STEP_RAD, JOINTS, robot
+from tests.worlds.robots import ENCODER_STEP_RAD, JOINTS, LINK_TORQUE_SD_SHARE, robot
 from tests.worlds.sessions import HELD_OUT_FROM, Exact, Truth, WorldSession, held_out
 
 Floats = NDArray[np.float64]
 
 ROBOT = 1
+PHYSICS = ("rigid", "elastic", "dip")  # the sensed world moves as the rigid one
 SECONDS = 6.0
 # Start and end of what is put into short sessions, away from the flanks.
 BEGIN_S, END_S = 2.0, 5.0
@@ -125,7 +126,7 @@ def test_collisions_fulfil_the_equation_of_motion_and_are_forces_at_the_stated_p
         assert np.abs(torque).max() > 0.3
 
 
-@pytest.mark.parametrize("world", WORLDS)
+@pytest.mark.parametrize("world", PHYSICS)
 def test_prescribed_contacts_are_forces_at_the_stated_points(world: str) -> None:
     # Judge: pin.computeFrameJacobian.
     told, judge, seen = long(world, "contact"), Judge(robot(ROBOT).urdf), 0
@@ -270,7 +271,7 @@ def test_an_offset_of_a_position_sensor_misleads_the_drive_too() -> None:
 # --- faults of drives, each by its own law
 
 
-@pytest.mark.parametrize("world", WORLDS)
+@pytest.mark.parametrize("world", PHYSICS)
 def test_a_torque_loss_takes_its_share(world: str) -> None:
     told = faulty(world, "torque-loss", 1, 0.3)
     np.testing.assert_allclose(told.unexplained[FULL, 1], -0.3 * exact(told).tau[FULL, 1], atol=1e-9)
@@ -279,7 +280,7 @@ def test_a_torque_loss_takes_its_share(world: str) -> None:
     assert not told.unexplained[round(END_S / PERIOD_S) + 12 :].any()
 
 
-@pytest.mark.parametrize("world", WORLDS)
+@pytest.mark.parametrize("world", PHYSICS)
 def test_added_dry_friction_opposes_the_motion_by_its_size(world: str) -> None:
     told, arm = faulty(world, "coulomb-friction", 3, 2.0), robot(ROBOT)
     added = told.unexplained[FULL, 3]
@@ -303,7 +304,7 @@ def test_added_viscous_friction_grows_with_speed(world: str) -> None:
     np.testing.assert_allclose(told.unexplained[FULL, 0], expected, atol=1e-9)
 
 
-@pytest.mark.parametrize("world", WORLDS)
+@pytest.mark.parametrize("world", PHYSICS)
 def test_an_offset_is_constant_and_a_ripple_turns_with_the_joint(world: str) -> None:
     rated = robot(ROBOT).rated[2]
     offset = faulty(world, "offset", 2, -0.1)
@@ -327,7 +328,7 @@ def test_a_drive_with_an_open_circuit_says_so_or_does_not() -> None:
         assert truth.truthful == truthful
 
 
-@pytest.mark.parametrize("world", WORLDS)
+@pytest.mark.parametrize("world", PHYSICS)
 def test_a_stuck_joint_stands_until_the_protective_stop(world: str) -> None:
     fault = actuator_fault(robot(ROBOT), "stuck", 0, 2.4, math.inf, 3.0)
     told = short(world, fault)
@@ -413,13 +414,41 @@ def test_contacts_have_the_stated_range_of_effects_on_all_links() -> None:
 
 
 def test_nothing_happens_in_fault_free_work_and_the_arm_works_at_speed() -> None:
-    for world in WORLDS:
+    for world in PHYSICS:
         told = fault_free(world, ROBOT, 4, 12.0)
         assert told.truths == ()
         assert not told.stopped
         assert not told.unexplained.any()
         assert 0.9 < np.abs(told.qd).max() < 2.3
         assert (np.abs(told.tau_cmd) < robot(ROBOT).peak).all()
+
+
+# --- torque sensors at the links
+
+
+def test_a_torque_sensor_reads_what_moves_its_links_and_is_wrong_as_stated() -> None:
+    # Judge: pin.rnea with the true inertias and no rotors, less the torque from outside.
+    wrong = (
+        Misreading("offset", 1, 2.0, 3.0, 0.01, 0.1, "share of rated"),
+        Misreading("scale", 3, 2.0, 3.0, 0.01, -0.4, "share"),
+        Misreading("frozen", 5, 2.0, 3.0, 0.005, 1.0, "share"),
+    )
+    told = session("sensed", ROBOT, 3, 4.0, lambda program, rng: Happenings(misreadings=list(wrong)), True)
+    x, rated = exact(told), robot(ROBOT).rated
+    assert told.tau_link is not None
+    needed = Judge(robot(ROBOT).true_urdf).torque(x.q, x.qd, x.qdd) - told.unexplained
+    spread = (told.tau_link - needed)[:1900] / rated
+    np.testing.assert_allclose(spread.std(axis=0), LINK_TORQUE_SD_SHARE, rtol=0.1)
+    assert np.abs(spread.mean(axis=0)).max() < 5e-4
+    during = slice(2050, 2950)
+    read, truly = told.tau_link[during], needed[during]
+    tolerance = 6.0 * LINK_TORQUE_SD_SHARE * rated
+    assert np.abs(read[:, 1] - truly[:, 1] - 0.1 * rated[1]).max() < tolerance[1]
+    assert np.abs(read[:, 3] - 0.6 * truly[:, 3]).max() < tolerance[3]
+    assert np.abs(read[:, 5] - needed[2000, 5]).max() < tolerance[5]
+    assert [(truth.kind, truth.detail, index(truth)) for truth in told.truths] == [
+        ("torque-sensor", one.detail, one.joint) for one in wrong
+    ]
 
 
 # --- robots

@@ -17,7 +17,8 @@ def still(samples: int = 20_000) -> Recording:
         return np.full((samples, 2), value)
 
     t = np.arange(samples, dtype=np.float64)
-    return Recording(("a", "b"), t, rows(0.123), rows(0.5), rows(0.0), rows(3.0), rows(1.0), rows(-1.0))
+    values = (0.123, 0.5, 0.0, 3.0, 1.0, -1.0, 2.0)
+    return Recording(("a", "b"), t, *(rows(value) for value in values))
 
 
 def test_an_encoder_reads_multiples_of_its_step_and_is_at_most_half_a_step_off() -> None:
@@ -29,10 +30,11 @@ def test_an_encoder_reads_multiples_of_its_step_and_is_at_most_half_a_step_off()
 
 
 def test_noise_has_the_stated_spread_per_joint_and_no_offset() -> None:
-    rows = with_noise(still(), 1, velocity_sd=[0.007, 0.0], torque_sd=[0.0, 0.4])
+    rows = with_noise(still(), 1, velocity_sd=[0.007, 0.0], torque_sd=[0.0, 0.4], link_torque_sd=[0.2, 0.0])
     # Standard error of a standard deviation of 20000 samples: 0.5 %; of the mean: sd / 141.
     np.testing.assert_allclose((rows.qd - 0.5).std(axis=0), [0.007, 0.0], rtol=0.03)
     np.testing.assert_allclose((rows.tau - 3.0).std(axis=0), [0.0, 0.4], rtol=0.03)
+    np.testing.assert_allclose((rows.tau_link - 2.0).std(axis=0), [0.2, 0.0], rtol=0.03)
     assert abs((rows.tau - 3.0)[:, 1].mean()) < 5 * 0.4 / 141
 
 
