@@ -43,7 +43,7 @@ _REVERSALS = [STANDS, STANDS_SQUARED]
 _CALM, _TOLERANCE, _LARGEST_WIDENING, _REFERENCE_BLOCKS = 0.02, 1.15, 64.0, 2000.0
 _WIDENING_EVERY = 4
 # Statistics that open events; each gets its share of the wanted rate.
-_STATISTICS = ("row", "body", "sums")
+_STATISTICS = ("row", "slow", "body", "sums")
 
 
 @dataclass(frozen=True)
@@ -81,7 +81,7 @@ class BandFit(NamedTuple):
     band : Band
         The band with limits for one false alarm per `wanted_s` of motion.
     tails : mapping of str to Tail
-        Of the square of the largest row (`row`), of all rows together (`body`) and of the sums (`sums`), by
+        Of the square of the largest row (`row`; `slow`, of the slow residual), of all rows together (`body`) and of the sums (`sums`), by
         blocks of a second.
     judged_s, wanted_s : float
         Time that was judged, and the mean time between false alarms that the limits are for [s].
@@ -141,7 +141,9 @@ def fit_band(setup: Setup, recordings: Sequence[Samples], wanted_s: float) -> Ba
 
 def without_limits(band: Band) -> Band:
     """Return the band with limits that open no event: during one, friction would not be tracked."""
-    return replace(band, row_limit=_UNLIMITED, body_limit=_UNLIMITED, cusum_limit=_UNLIMITED)
+    return replace(
+        band, row_limit=_UNLIMITED, slow_limit=_UNLIMITED, body_limit=_UNLIMITED, cusum_limit=_UNLIMITED
+    )
 
 
 class _Seen(NamedTuple):
@@ -289,7 +291,7 @@ def _block_maxima(x: Floats, length: int) -> Floats:
 
 
 def limited(setup: Setup, band: Band, recordings: Sequence[Samples], wanted_s: float) -> BandFit:
-    """Return the band with limits of its statistics for one false alarm per `wanted_s`, a third by each.
+    """Return the band with limits of its statistics for one false alarm per `wanted_s`, as many by each.
 
     Raises
     ------
@@ -308,21 +310,28 @@ def limited(setup: Setup, band: Band, recordings: Sequence[Samples], wanted_s: f
             "Record longer: limits rest on what is rare.",
         )
     tails = {name: tail([one[:, k] for one in blocks]) for k, name in enumerate(_STATISTICS)}
-    row, body, sums = (one.level(len(_STATISTICS) * wanted_s / _BLOCK_S) for one in tails.values())
+    row, slow, body, sums = (one.level(len(_STATISTICS) * wanted_s / _BLOCK_S) for one in tails.values())
     limits = replace(
-        band, row_limit=max(math.sqrt(row), _LEAST_ROW), body_limit=body, cusum_limit=max(sums, _LEAST_CUSUM)
+        band,
+        row_limit=max(math.sqrt(row), _LEAST_ROW),
+        slow_limit=max(math.sqrt(slow), _LEAST_ROW),
+        body_limit=body,
+        cusum_limit=max(sums, _LEAST_CUSUM),
     )
     return BandFit(limits, tails, count * _BLOCK_S, wanted_s)
 
 
 def _maxima(trace: Trace, length: int) -> Floats:
-    """Return the largest of each statistic (blocks,3) over blocks that are settled and judged all through.
+    """Return the largest of each statistic (blocks,4) over blocks that are settled and judged all through.
 
     The trace is one without limits. The square of a row is taken: of normal noise it has an exponential tail,
-    as the other two.
+    as the others.
     """
-    row = np.where(trace.judged != 0, _UNLIMITED * trace.ratio, 0.0).max(axis=1)
-    statistics = np.column_stack([row**2, _UNLIMITED * trace.body_ratio, trace.cusum])
+    row, slow = (
+        np.where(trace.judged != 0, _UNLIMITED * ratio, 0.0).max(axis=1)
+        for ratio in (trace.ratio, trace.slow_ratio)
+    )
+    statistics = np.column_stack([row**2, slow**2, _UNLIMITED * trace.body_ratio, trace.cusum])
     counted = (trace.settling == 0) & (trace.judged != 0).any(axis=1)
     kept = _block_maxima(~counted, length) == 0
     return np.asarray(_block_maxima(statistics, length)[kept])

@@ -60,6 +60,7 @@ class Trace(NamedTuple):
     feature: Floats
     variance: Floats
     ratio: Floats
+    slow_ratio: Floats
     body_ratio: Floats
     cusum: Floats
     open: Ints
@@ -135,7 +136,7 @@ def _run(
     params: Block, inputs: Block, state: Block, outputs: Block,
     t_ns: Ints, q: Floats, qd: Floats, tau: Floats, base: Floats, tau_link: Floats,
     r_fast: Floats, r_slow: Floats, explained: Floats, cause: Floats, feature: Floats, variance: Floats,
-    ratio: Floats, body: Floats, cusum: Floats, is_open: Ints, settling: Ints, judged: Ints,
+    ratio: Floats, slow_ratio: Floats, body: Floats, cusum: Floats, is_open: Ints, settling: Ints, judged: Ints,
 ) -> None:  # fmt: skip
     s, out = state[0], outputs[0]
     for k in range(t_ns.shape[0]):
@@ -150,7 +151,8 @@ def _run(
         variance[k, 0] = s["var_fast"]
         variance[k, 1] = s["var_slow"]
         variance[k, 2] = s["explained_var"]
-        ratio[k] = out["ratio"]
+        ratio[k] = s["fast_ratio"]
+        slow_ratio[k] = s["slow_ratio"]
         body[k] = out["body_ratio"]
         for i in range(ratio.shape[1]):
             cusum[k] = max(cusum[k], s["cusum"][i, 0], s["cusum"][i, 1])
@@ -184,6 +186,7 @@ def run(setup: Setup, samples: Samples) -> Trace:
         feature=np.zeros((T, n, FEATURES)),
         variance=np.zeros((T, 3, n)),
         ratio=np.zeros((T, n)),
+        slow_ratio=np.zeros((T, n)),
         body_ratio=np.zeros(T),
         cusum=np.zeros(T),
         open=np.zeros(T, np.int64),

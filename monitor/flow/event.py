@@ -43,8 +43,12 @@ def into_band(params: Block, inputs: Block, state: Block, outputs: Block) -> Non
             s["white"][i] += band.BLIND * c["rated"][i] ** 2
     band.covariance(s["var_fast"], c["rho"], s["white"], s["R"])
     lasting.widen(state, s["R"])
+    follows = 1.0 - math.exp(-s["dt_s"] / c["slow_later_s"]) if s["dt_s"] > 0.0 else 1.0
     for i in range(n):
+        s["explained_slow"][i] += follows * (s["explained"][i] - s["explained_slow"][i])
+        slow_var = s["var_slow"][i] + s["R"][i, i] - s["var_fast"][i]
         out["band_fast"][i] = c["row_limit"] * math.sqrt(s["R"][i, i])
+        out["band_slow"][i] = c["slow_limit"] * math.sqrt(slow_var)
     link_torque.forget(params, state, s["R"])
     evidence.factor(s["R"], s["R_factor"])
     s["white"][:] = s["left"]
@@ -53,8 +57,9 @@ def into_band(params: Block, inputs: Block, state: Block, outputs: Block) -> Non
     for i in range(n):
         total += s["white"][i] ** 2
         out["explained"][i] = s["explained"][i]
-        out["band_slow"][i] = c["row_limit"] * math.sqrt(s["var_slow"][i] + s["explained_var"][i])
-        out["ratio"][i] = abs(s["left"][i]) / out["band_fast"][i]
+        s["fast_ratio"][i] = abs(s["left"][i]) / out["band_fast"][i]
+        s["slow_ratio"][i] = abs(s["row_slow"][i] - s["explained_slow"][i]) / out["band_slow"][i]
+        out["ratio"][i] = max(s["fast_ratio"][i], s["slow_ratio"][i])
         s["ratio_peak"][i] = max(s["ratio_peak"][i], out["ratio"][i])
     s["body_ratio"] = total / c["body_limit"]
     out["body_ratio"] = s["body_ratio"]

@@ -101,15 +101,8 @@ def _learn(params: Block, state: Block, slot: int, explanation: int, fresh: bool
     s["fault_free"][slot] = 0.0
     best, smooth = _likeliest(params, state, explanation)
     if not smooth:
-        _know(
-            params,
-            state,
-            slot,
-            explanation,
-            c["constant_index"][best] % 8,
-            s["constant_size"][best],
-            s["constant_size_sd"][best],
-        )
+        kind = c["constant_index"][best] % 8
+        _know(params, state, slot, explanation, kind, s["constant_size"][best], s["constant_size_sd"][best])
         return
     d, settles = c["smooth_columns"][best], c["smooth_settles"][best]
     n = s["left"].shape[0]
@@ -157,7 +150,7 @@ def outlasts(params: Block, state: Block) -> bool:
         return False
     k, smooth = _likeliest(params, state, e)
     if smooth:
-        return c["smooth_settles"][k] > 0 and s["smooth_acts"][k] > s["smooth_ended"][k]
+        return bool(c["smooth_settles"][k] > 0 and s["smooth_acts"][k] > s["smooth_ended"][k])
     return bool(s["constant_acts"][k] > s["constant_ended"][k])
 
 

@@ -284,7 +284,9 @@ def params_fields(s: Sizes) -> list[Field]:
         ("trend_sure", f8, ()),  # sd beyond the limit that make it certain
         ("trend_s", f8, ()),  # for how long, before it counts
         # events
-        ("row_limit", f8, ()),  # |residual| / sd of one row that opens an event
+        ("row_limit", f8, ()),  # |residual| / sd of one row that opens an event, fast and slow
+        ("slow_limit", f8, ()),
+        ("slow_later_s", f8, ()),  # by how much the slow residual is later than the fast one
         ("body_limit", f8, ()),  # of all rows: r' R^-1 r
         ("quiet_ratio", f8, ()),  # share of the limits below which the robot is quiet
         ("onset_ratio", f8, ()),  # share of the limits below which an event has not begun
@@ -527,6 +529,9 @@ def state_fields(s: Sizes) -> list[Field]:
         ("trend_beyond_s", f8, (rows, 3)),  # time seen since it is certainly beyond its limit
         ("drifted", i8, (3 * rows,)),  # 1: for so long that it is said; 3 row + parameter
         ("explained", f8, (rows,)),  # N m that tracked friction and lasting faults explain
+        ("explained_slow", f8, (rows,)),  # N m: explained, as late as the slow residual
+        ("fast_ratio", f8, (rows,)),
+        ("slow_ratio", f8, (rows,)),
         ("explained_var", f8, (rows,)),
         ("tracked", f8, (rows,)),  # N m of it by tracked friction
         ("left", f8, (rows,)),  # N m: fast residual less what is explained
@@ -683,7 +688,7 @@ def outputs_fields(s: Sizes) -> list[Field]:
         ("band_fast", f8, (rows,)),  # N m: largest residual that is not an event, as it stands now
         ("band_slow", f8, (rows,)),
         ("explained", f8, (rows,)),  # N m of r_fast that tracked friction explains
-        ("ratio", f8, (rows,)),  # |residual| / band; 1 opens an event
+        ("ratio", f8, (rows,)),  # |residual| / band, fast or slow; 1 opens an event
         ("body_ratio", f8, ()),  # the same for all rows together
         ("probability", f8, (s.X + 2,)),  # of nothing, something else, then the explanations
         ("tau_model", f8, (n,)),  # N m: what inverse dynamics expects of each joint

@@ -77,7 +77,7 @@ class Band:
         Share of the variance that is slow noise.
     track_sd : (n,3)
         How much Coulomb, viscous and constant friction may change from day to day [N m, N m s/rad, N m].
-    row_limit, body_limit : float
+    row_limit, slow_limit, body_limit : float
         |residual| / sd of one row, and squared normalised residual of all, that open an event.
     cusum_sd : (n,)
         How far the model is off for a second or more [N m]; the sums count it beside the noise.
@@ -91,6 +91,7 @@ class Band:
     slow_share: Floats
     track_sd: Floats
     row_limit: float
+    slow_limit: float
     body_limit: float
     cusum_sd: Floats
     cusum_limit: float
@@ -136,6 +137,7 @@ def default_band(rated: Floats, coulomb: Floats, viscous: Floats) -> Band:
         slow_share=np.full(n, 0.5),
         track_sd=np.column_stack([_COULOMB * coulomb, _VISCOUS * viscous, 0.02 * rated]),
         row_limit=ROW_LIMIT,
+        slow_limit=ROW_LIMIT,
         body_limit=body_limit(n),
         cusum_sd=_LASTING * rated,
         cusum_limit=CUSUM_LIMIT,
@@ -225,7 +227,8 @@ class _BandTable(Table):
     rho: Rows = Field(description="Correlation of the fast residuals.")
     slow_share: Row = Field(description="Share of slow noise of each row.")
     track_sd: Rows = Field(description="How far friction changes from day to day, of each row.")
-    row_limit: float = Field(description="Limit of one row.", gt=0)
+    row_limit: float = Field(description="Limit of one row, fast residual.", gt=0)
+    slow_limit: float = Field(description="Limit of one row, slow residual.", gt=0)
     body_limit: float = Field(description="Limit of all rows together.", gt=0)
     cusum_sd: Row = Field(description="Lasting error of the model of each row [N m].")
     cusum_limit: float = Field(description="Limit of the sums.", gt=0)
@@ -368,7 +371,11 @@ def _band(where: str, table: _BandTable, n: int) -> Band:
             "a correlation matrix: symmetric, ones on the diagonal, positive definite",
         )
     return Band(
-        **arrays, row_limit=table.row_limit, body_limit=table.body_limit, cusum_limit=table.cusum_limit
+        **arrays,
+        row_limit=table.row_limit,
+        slow_limit=table.slow_limit,
+        body_limit=table.body_limit,
+        cusum_limit=table.cusum_limit,
     )
 
 

@@ -190,7 +190,8 @@ def fill_band(params: Any, band: Band) -> None:
     params["cause_fast"], params["cause_slow"] = band.fast, band.slow
     params["rho"], params["slow_share"] = band.rho, band.slow_share
     params["track_sd"] = band.track_sd
-    params["row_limit"], params["body_limit"] = band.row_limit, band.body_limit
+    params["row_limit"], params["slow_limit"] = band.row_limit, band.slow_limit
+    params["body_limit"] = band.body_limit
     params["cusum_sd"], params["cusum_limit"] = band.cusum_sd, band.cusum_limit
     params["cusum_reference"] = 2.0
     params["quiet_ratio"], params["onset_ratio"] = 0.6, 0.4
@@ -204,6 +205,7 @@ def fill_evidence(params: Any, tree: Tree, config: Config, found: Candidates) ->
     dt = samples * period_s
     params["evidence_samples"], params["evidence_stages"] = samples, STAGES
     params["column_lag"] = round(_lag_s(params) / dt)
+    params["slow_later_s"] = max(_lag_s(params, "slow") - _lag_s(params), period_s)
     params["stages_at_once"] = math.ceil(STAGES / samples)
     params["slow_keep"] = math.exp(-dt / SLOW_S)
     params["track_keep"] = math.exp(-dt / TRACK_S)
@@ -304,18 +306,18 @@ def sizes_of(found: Candidates, tree: Tree, config: Config, lines: int) -> Sizes
     )  # fmt: skip
 
 
-def _lag_s(params: Any) -> float:
-    """Return the mean delay of the fast residual behind its cause [s]: the area above its step response."""
+def _lag_s(params: Any, which: str = "fast") -> float:
+    """Return the mean delay of a residual behind its cause [s]: the area above its step response."""
     period_s = params["period_ns"][0] * 1e-9
     form = Form(int(params["form"][0]))
     x, lag = np.zeros(3), 0.0
     for _ in range(round(0.5 / period_s)):
         if form == Form.JOINT_SPACE:
-            ledger.respond_joint_space(1.0, period_s, params["gain_fast"][0, 0, -1], x)
+            ledger.respond_joint_space(1.0, period_s, params[f"gain_{which}"][0, 0, -1], x)
         elif form == Form.FIRST_ORDER:
-            ledger.respond_first_order(1.0, period_s, params["pole_fast"][0], x)
+            ledger.respond_first_order(1.0, period_s, params[f"pole_{which}"][0], x)
         else:
-            ledger.respond_second_order(1.0, period_s, params["pole_fast"][0], x)
+            ledger.respond_second_order(1.0, period_s, params[f"pole_{which}"][0], x)
         lag += period_s * (1.0 - x[2])
     return lag
 
