@@ -81,8 +81,8 @@ class BandFit(NamedTuple):
     band : Band
         The band with limits for one false alarm per `wanted_s` of motion.
     tails : mapping of str to Tail
-        Of the square of the largest row (`row`; `slow`, of the slow residual), of all rows together (`body`) and of the sums (`sums`), by
-        blocks of a second.
+        Of the square of the largest row, fast and slow (`row`, `slow`), of all rows together (`body`) and of
+        the sums (`sums`), by blocks of a second.
     judged_s, wanted_s : float
         Time that was judged, and the mean time between false alarms that the limits are for [s].
     """
@@ -141,9 +141,8 @@ def fit_band(setup: Setup, recordings: Sequence[Samples], wanted_s: float) -> Ba
 
 def without_limits(band: Band) -> Band:
     """Return the band with limits that open no event: during one, friction would not be tracked."""
-    return replace(
-        band, row_limit=_UNLIMITED, slow_limit=_UNLIMITED, body_limit=_UNLIMITED, cusum_limit=_UNLIMITED
-    )
+    names = ("row_limit", "slow_limit", "body_limit", "cusum_limit")
+    return replace(band, **dict.fromkeys(names, _UNLIMITED))
 
 
 class _Seen(NamedTuple):

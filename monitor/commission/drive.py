@@ -136,7 +136,8 @@ def _run(
     params: Block, inputs: Block, state: Block, outputs: Block,
     t_ns: Ints, q: Floats, qd: Floats, tau: Floats, base: Floats, tau_link: Floats,
     r_fast: Floats, r_slow: Floats, explained: Floats, cause: Floats, feature: Floats, variance: Floats,
-    ratio: Floats, slow_ratio: Floats, body: Floats, cusum: Floats, is_open: Ints, settling: Ints, judged: Ints,
+    ratio: Floats, slow_ratio: Floats, body: Floats, cusum: Floats,
+    is_open: Ints, settling: Ints, judged: Ints,
 ) -> None:  # fmt: skip
     s, out = state[0], outputs[0]
     for k in range(t_ns.shape[0]):

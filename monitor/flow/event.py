@@ -43,10 +43,12 @@ def into_band(params: Block, inputs: Block, state: Block, outputs: Block) -> Non
             s["white"][i] += band.BLIND * c["rated"][i] ** 2
     band.covariance(s["var_fast"], c["rho"], s["white"], s["R"])
     lasting.widen(state, s["R"])
-    follows = 1.0 - math.exp(-s["dt_s"] / c["slow_later_s"]) if s["dt_s"] > 0.0 else 1.0
+    keep = math.exp(-s["dt_s"] / c["slow_later_s"]) if s["dt_s"] > 0.0 else 0.0
     for i in range(n):
-        s["explained_slow"][i] += follows * (s["explained"][i] - s["explained_slow"][i])
-        slow_var = s["var_slow"][i] + s["R"][i, i] - s["var_fast"][i]
+        s["explained_slow"][i] += (1.0 - keep) * (s["explained"][i] - s["explained_slow"][i])
+        # What made the slow residual large stays in it for longer than its cause does.
+        s["var_slow_kept"][i] = max(s["var_slow"][i], keep * s["var_slow_kept"][i])
+        slow_var = s["var_slow_kept"][i] + s["R"][i, i] - s["var_fast"][i]
         out["band_fast"][i] = c["row_limit"] * math.sqrt(s["R"][i, i])
         out["band_slow"][i] = c["slow_limit"] * math.sqrt(slow_var)
     link_torque.forget(params, state, s["R"])

@@ -529,6 +529,7 @@ def state_fields(s: Sizes) -> list[Field]:
         ("trend_beyond_s", f8, (rows, 3)),  # time seen since it is certainly beyond its limit
         ("drifted", i8, (3 * rows,)),  # 1: for so long that it is said; 3 row + parameter
         ("explained", f8, (rows,)),  # N m that tracked friction and lasting faults explain
+        ("var_slow_kept", f8, (rows,)),  # var_slow, never falling faster than the slow residual
         ("explained_slow", f8, (rows,)),  # N m: explained, as late as the slow residual
         ("fast_ratio", f8, (rows,)),
         ("slow_ratio", f8, (rows,)),

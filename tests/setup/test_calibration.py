@@ -63,6 +63,7 @@ def drawn(setup: Setup, seed: int = 1) -> Calibration:
         slow_share=rng.uniform(0.1, 0.9, n),
         track_sd=rng.uniform(0.1, 1.0, (n, 3)),
         row_limit=7.25,
+        slow_limit=8.5,
         body_limit=61.5,
         cusum_sd=rng.uniform(0.1, 1.0, n),
         cusum_limit=13.75,

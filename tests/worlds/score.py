@@ -40,6 +40,7 @@ _BITS = int(
 )
 # Effects below these shares of rated torque are not counted as misses or mistakes.
 _LEAST_CONTACT, _LEAST_FAULT, _BAR_CONTACT = 0.03, 0.02, 0.05
+_STANDS = 0.03  # rad/s
 _BINS = (0.9, 0.95, 0.99, 0.999, 1.0 + 1e-9)
 
 
@@ -59,6 +60,7 @@ class Tally:
 
     seconds: float = 0.0
     noticed: list[bool] = field(default_factory=list)
+    noticed_standing: list[bool] = field(default_factory=list)
     delays_s: list[float] = field(default_factory=list)
     confusion: dict[str, Counter[str]] = field(default_factory=lambda: defaultdict(Counter))
     joints_right: list[bool] = field(default_factory=list)
@@ -131,7 +133,8 @@ def judge(tally: Tally, session: WorldSession, events: Sequence[Event], bad: Seq
         running = [e for e in events if e.opened_s < truth.start_s < e.ended_s]
         spoiled = any(truth.start_s - 0.02 <= t <= truth.end_s + _LATE_S for t in bad)
         if truth.kind == "contact" and truth.during is None and (truth.effect or 0.0) >= _BAR_CONTACT:
-            tally.noticed.append(bool(opened or running))
+            standing = _stands(session, truth)
+            (tally.noticed_standing if standing else tally.noticed).append(bool(opened or running))
             if opened and truth.passes_s is not None:
                 tally.delays_s.append(opened[0].opened_s - truth.passes_s)
         if truth.kind == "signal":
@@ -140,6 +143,13 @@ def judge(tally: Tally, session: WorldSession, events: Sequence[Event], bad: Seq
         elif not _slight(truth):
             _confuse(tally, truth, opened)
     tally.false_events += sum(not any(_explains(truth, e) for truth in session.truths) for e in events)
+
+
+def _stands(session: WorldSession, truth: Truth) -> bool:
+    """Whether the joint that a contact loads most stands: friction may hide twice its Coulomb torque."""
+    joint = [one["name"] for one in session.joints].index(truth.effect_joint)
+    during = (session.t >= truth.start_s) & (session.t <= truth.end_s)
+    return bool(np.median(np.abs(session.qd[during, joint])) < _STANDS)
 
 
 def _slight(truth: Truth) -> bool:
@@ -189,8 +199,12 @@ def lines(world: str, tally: Tally) -> Iterator[str]:
     yield f"{world}: {tally.seconds / 60.0:.1f} min"
     delays = 1e3 * np.array(tally.delays_s or [np.nan])
     yield (
-        f"  contacts of 5 % of rated and more: noticed {sum(tally.noticed)} of {len(tally.noticed)}; "
+        f"  contacts of 5 % of rated and more: noticed in motion {sum(tally.noticed)} of {len(tally.noticed)}; "
         f"delay from 3 % on: median {np.median(delays):.1f} ms, 90 % {np.quantile(delays, 0.9):.1f} ms"
+    )
+    yield (
+        f"  the same while that joint stands: noticed {sum(tally.noticed_standing)} "
+        f"of {len(tally.noticed_standing)}"
     )
     for name, row in sorted(tally.confusion.items()):
         yield f"  {name:>20}: " + ", ".join(f"{word} {count}" for word, count in row.most_common())
