@@ -141,8 +141,8 @@ def fit_band(setup: Setup, recordings: Sequence[Samples], wanted_s: float) -> Ba
 
 def without_limits(band: Band) -> Band:
     """Return the band with limits that open no event: during one, friction would not be tracked."""
-    names = ("row_limit", "slow_limit", "body_limit", "cusum_limit")
-    return replace(band, **dict.fromkeys(names, _UNLIMITED))
+    far = _UNLIMITED
+    return replace(band, row_limit=far, slow_limit=far, body_limit=far, cusum_limit=far)
 
 
 class _Seen(NamedTuple):

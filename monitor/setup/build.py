@@ -28,6 +28,7 @@ from monitor.flow.layout import (
 )
 from monitor.flow.pipeline import Pipeline
 from monitor.flow.step import step
+from monitor.kernels import tracking
 from monitor.kernels.ledger import BENDS
 from monitor.robot.pseudo_inertia import transform
 from monitor.robot.tree import WORLD, Tree, build_tree
@@ -80,7 +81,10 @@ class Setup:
         inputs["E"] = self.model.E
         inputs["tau_cmd"] = math.nan
         inputs["tau_link"] = math.nan
-        return Blocks(self.params, inputs, zeros(state_fields(s)), zeros(outputs_fields(s)))
+        state = zeros(state_fields(s))
+        # What friction is today nobody knows yet.
+        tracking.forget(self.params["track_sd"][0], state["track"][0], state["track_P"][0])
+        return Blocks(self.params, inputs, state, zeros(outputs_fields(s)))
 
     def warm(self) -> None:
         """Compile the step for this robot and run it once, so that nothing compiles later."""

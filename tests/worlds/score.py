@@ -199,8 +199,8 @@ def lines(world: str, tally: Tally) -> Iterator[str]:
     yield f"{world}: {tally.seconds / 60.0:.1f} min"
     delays = 1e3 * np.array(tally.delays_s or [np.nan])
     yield (
-        f"  contacts of 5 % of rated and more: noticed in motion {sum(tally.noticed)} of {len(tally.noticed)}; "
-        f"delay from 3 % on: median {np.median(delays):.1f} ms, 90 % {np.quantile(delays, 0.9):.1f} ms"
+        f"  contacts of 5 % of rated and more: moving: noticed {sum(tally.noticed)} of {len(tally.noticed)}, "
+        f"delay from 3 %: median {np.median(delays):.1f} ms, 90 % {np.quantile(delays, 0.9):.1f} ms"
     )
     yield (
         f"  the same while that joint stands: noticed {sum(tally.noticed_standing)} "
