@@ -18,7 +18,7 @@ from scipy.optimize import minimize_scalar, nnls
 
 from monitor.commission.drive import Samples, Trace, run
 from monitor.errors import SessionError
-from monitor.kernels.band import FLOOR, STANDS, STANDS_SQUARED
+from monitor.kernels.band import BLIND, FLOOR, STANDS, STANDS_SQUARED
 from monitor.setup.build import Setup
 from monitor.setup.calibration import Band
 from monitor.setup.weighing import SLOW_S
@@ -135,7 +135,12 @@ def fit_band(setup: Setup, recordings: Sequence[Samples], wanted_s: float) -> Ba
     band = without_limits(setup.band)
     for _ in range(2):
         # Tracked friction depends a little on the band, so once more.
-        band = _shape(setup, band, [run(setup.with_band(band), one) for one in recordings])
+        band = _shape(
+            setup, band, recordings, [run(setup.with_band(band), one, judge_base=False) for one in recordings]
+        )
+    standing = [one for one in recordings if not one.hoisted]
+    if setup.sizes.base and standing:
+        band = _base_floor(setup, band, standing)
     return limited(setup, band, recordings, wanted_s)
 
 
@@ -147,25 +152,69 @@ def without_limits(band: Band) -> Band:
 class _Seen(NamedTuple):
     """What a trace shows: residuals with what friction explains taken off, all (T,n) but cause (T,n,C).
 
-    `known` is the part of the variance that is no cause; `counted` says which rows count.
+    `known` is the part of the variance that is no cause, and of the slow residual's; `counted` says which rows
+    count.
     """
 
     cause: Floats
     fast: Floats
     slow: Floats
     known: Floats
+    known_slow: Floats
     counted: Bools
 
 
 def _seen(trace: Trace) -> _Seen:
     explained, known = trace.explained, trace.variance[:, 2]
-    counted = (trace.settling == 0)[:, None] & (trace.judged != 0)
-    return _Seen(trace.cause, trace.r_fast - explained, trace.r_slow - explained, known, counted)
+    counted = (trace.settling == 0)[:, None] & (trace.free != 0)
+    return _Seen(trace.cause, trace.r_fast - explained, trace.r_slow - explained, known, known, counted)
 
 
-def _shape(setup: Setup, band: Band, traces: Sequence[Trace]) -> Band:
+def _base_seen(seen: _Seen, setup: Setup, trace: Trace, hoisted: bool) -> _Seen:
+    """Return the same for the rows of a base that stands: what its legs do not explain of their residuals.
+
+    How far the legs themselves are off is known by then, from the time they swing or hang.
+    """
+    b = setup.sizes.base
+    if not b or hoisted:
+        return seen
+    blind = BLIND * setup.params["rated"][0, :b] ** 2
+    fast, slow, known, known_slow, counted = (one.copy() for one in seen[1:])
+    fast[:, :b], slow[:, :b] = trace.alone[:, 0, :b], trace.alone[:, 2, :b]
+    lasting = setup.params["cusum_sd"][0, :b] ** 2
+    for one, sd, own in ((known, 1, 0.0), (known_slow, 3, lasting)):
+        own = blind + trace.variance[:, sd // 2, :b] + own
+        one[:, :b] = np.maximum(trace.alone[:, sd, :b] ** 2 - own, 0.0)
+    counted[:, :b] = (trace.settling == 0)[:, None]
+    return _Seen(seen.cause, fast, slow, known, known_slow, counted)
+
+
+def _base_floor(setup: Setup, band: Band, recordings: Sequence[Samples]) -> Band:
+    """Return the band with the floors of a base's rows raised to what these have beyond all other rows.
+
+    What legs that stand hide is no independent noise of six rows; each row is to be as wide as it is seen to be.
+    """
+    fast, slow = band.fast.copy(), band.slow.copy()
+    for _ in range(2):
+        traces = [run(setup.with_band(replace(band, fast=fast, slow=slow)), one) for one in recordings]
+        taken = [(trace.settling == 0) & (trace.alone[:, 3, 0] > 0.0) for trace in traces]
+        for k, weight in enumerate((fast, slow)):
+            alone, sd = (
+                np.concatenate([t.alone[m, 2 * k + j, : setup.sizes.base] for t, m in zip(traces, taken, strict=True)])
+                for j in range(2)
+            )
+            excess = np.minimum(alone**2, _CLIP**2 * sd**2) - sd**2
+            weight[: setup.sizes.base, FLOOR] += np.maximum(excess.mean(axis=0), 0.0)
+    return replace(band, fast=fast, slow=slow)
+
+
+def _shape(setup: Setup, band: Band, recordings: Sequence[Samples], traces: Sequence[Trace]) -> Band:
     """Return the band with all but its limits fitted to traces in which no event was opened."""
     seen, rated = [_seen(trace) for trace in traces], setup.params["rated"][0]
+    seen = [
+        _base_seen(one, setup, trace, samples.hoisted)
+        for one, trace, samples in zip(seen, traces, recordings, strict=True)
+    ]
     dt_s = 1e-9 * float(setup.params["period_ns"][0])
     fast, slow = band.fast.copy(), band.slow.copy()
     for i in range(len(rated)):
@@ -173,18 +222,23 @@ def _shape(setup: Setup, band: Band, traces: Sequence[Trace]) -> Band:
         if sum(map(len, taken)) < _LEAST_SAMPLES:
             continue
         cause = np.concatenate([one.cause[k, i] for one, k in zip(seen, taken, strict=True)])
-        known = np.concatenate([one.known[k, i] for one, k in zip(seen, taken, strict=True)])
-        for weight, name in ((fast, "fast"), (slow, "slow")):
+        for weight, name, no_cause in ((fast, "fast", "known"), (slow, "slow", "known_slow")):
+            known = np.concatenate([getattr(one, no_cause)[k, i] for one, k in zip(seen, taken, strict=True)])
             r = np.concatenate([getattr(one, name)[k, i] for one, k in zip(seen, taken, strict=True)])
             weight[i] = _causes(cause, r, known, (_LEAST_FLOOR * rated[i]) ** 2)
         fast[i, _REVERSALS] *= _widening(seen, i, fast[i], round(_BLOCK_S / dt_s))
+        if setup.sizes.base:
+            # A leg stands long where it cannot be looked at, and a joint that stands hides friction both ways.
+            hidden = setup.model.coulomb[i] ** 2 / 3.0
+            for weight in (fast, slow):
+                weight[i, STANDS_SQUARED] += max(hidden - weight[i, _REVERSALS].sum(), 0.0)
     z = [_normalised(one, fast) for one in seen]
     lasting = _lasting(seen, int(setup.params["cusum_samples"][0]))
     return replace(
         band,
         fast=fast,
         slow=slow,
-        rho=_correlation(np.concatenate(z)[::_EVERY]),
+        rho=_own(_correlation(np.concatenate(z)[::_EVERY]), setup.sizes.base),
         slow_share=_slow_share(z, dt_s),
         cusum_sd=np.maximum(lasting, _LEAST_LASTING * rated),
     )
@@ -264,6 +318,13 @@ def _correlation(z: Floats) -> Floats:
     return 0.5 * (rho + rho.T)
 
 
+def _own(rho: Floats, base: int) -> Floats:
+    """Return the correlation without that of a base, whose rows share what legs that stand do not know."""
+    rho[:base], rho[:, :base] = 0.0, 0.0
+    rho[range(base), range(base)] = 1.0
+    return rho
+
+
 def _slow_share(z: Sequence[Floats], dt_s: float) -> Floats:
     """Return the share of slow noise, from the autocorrelation at a lag the fast part does not reach."""
     lag = max(1, round(_LAG_S / dt_s))
@@ -323,7 +384,7 @@ def _maxima(trace: Trace, length: int) -> Floats:
     """
     row = np.where(trace.judged != 0, _UNLIMITED * trace.ratio, 0.0).max(axis=1)
     statistics = np.column_stack([row**2, _UNLIMITED * trace.body_ratio, trace.cusum])
-    counted = (trace.settling == 0) & (trace.judged != 0).any(axis=1)
+    counted = trace.settling == 0
     kept = _block_maxima(~counted, length) == 0
     return np.asarray(_block_maxima(statistics, length)[kept])
 

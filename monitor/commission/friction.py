@@ -35,8 +35,9 @@ def bent(setup: Setup, recordings: Sequence[Samples]) -> Model:
     model = setup.model
     coulomb, viscous, bend = model.coulomb.copy(), model.viscous.copy(), model.bend.copy()
     for i in range(setup.sizes.base, setup.sizes.n):
-        v = np.concatenate([t.feature[t.settling == 0, i, 2][::_EVERY] for t in traces])
-        r = np.concatenate([t.r_slow[t.settling == 0, i][::_EVERY] for t in traces])
+        free = [(t.settling == 0) & (t.free[:, i] != 0) for t in traces]
+        v = np.concatenate([t.feature[k, i, 2][::_EVERY] for t, k in zip(traces, free, strict=True)])
+        r = np.concatenate([t.r_slow[k, i][::_EVERY] for t, k in zip(traces, free, strict=True)])
         moves = np.abs(v) > _MOVES * v0[i]
         if np.count_nonzero(moves) < 1000:
             continue

@@ -7,7 +7,7 @@ from collections.abc import Callable
 import numpy as np
 from numpy.typing import NDArray
 
-from monitor.explain import actuator, contact, load, position_sensor, touchdown
+from monitor.explain import actuator, contact, foothold, load, position_sensor, touchdown
 from monitor.explain.outline import Explanation, Outline
 from monitor.kernels.jit import kernel
 
@@ -21,9 +21,10 @@ FAMILIES: tuple[tuple[str, Callable[[Outline], list[Explanation]]], ...] = (
     (position_sensor.NAME, position_sensor.explanations),
     (load.NAME, load.explanations),
     (touchdown.NAME, touchdown.explanations),
+    (foothold.NAME, foothold.explanations),
 )
 NAMES = tuple(name for name, _ in FAMILIES)
-CONTACT, ACTUATOR, SENSOR, LOAD, TOUCHDOWN = range(len(FAMILIES))
+CONTACT, ACTUATOR, SENSOR, LOAD, TOUCHDOWN, FOOTHOLD = range(len(FAMILIES))
 
 
 def explanations(outline: Outline) -> list[Explanation]:
@@ -34,7 +35,7 @@ def explanations(outline: Outline) -> list[Explanation]:
 @kernel
 def fill(
     family: int, index: int, feature: Floats, slope: Floats, M: Floats,
-    body_axis: Ints, body_centre: Floats, foot_axis: Ints, foot_point: Floats,
+    body_axis: Ints, body_centre: Floats, foot_axis: Ints, foot_point: Floats, foot_radius: Floats, up: Floats,
     load_axis: int, load_centre: Floats, parent: Ints, dof: Ints, S: Floats, V: Floats, Vd: Floats,
     R: Floats, p: Floats, H: Floats,
 ) -> None:  # fmt: skip
@@ -51,5 +52,5 @@ def fill(
         position_sensor.rows(index, slope, M, H)
     elif family == LOAD:
         load.rows(load_axis, load_centre, parent, dof, S, V, Vd, R, p, H)
-    else:
-        contact.rows(foot_axis[index], foot_point[index], parent, dof, S, R, p, H)
+    elif family == TOUCHDOWN:
+        touchdown.rows(foot_axis[index], foot_point[index], foot_radius[index], up, parent, dof, S, R, p, H)

@@ -8,8 +8,8 @@ from __future__ import annotations
 
 import math
 
-from monitor.explain import ACTUATOR, CONTACT, fill
-from monitor.flow import lasting
+from monitor.explain import ACTUATOR, CONTACT, TOUCHDOWN, fill
+from monitor.flow import feet, lasting
 from monitor.flow.layout import RING, Block, Notice
 from monitor.kernels import band
 from monitor.kernels import evidence as ev
@@ -65,6 +65,9 @@ def begin(params: Block, inputs: Block, state: Block) -> None:
     for k in range(s["smooth_log"].shape[0]):
         d = params[0]["smooth_columns"][k]
         m = n + 2 * d + params[0]["smooth_settles"][k]
+        if params[0]["smooth_family"][k] == TOUCHDOWN:
+            entry = min(s["weigh_next"], s["ring_head"] - 1) % RING
+            feet.spare(state, params[0]["smooth_index"][k], entry, s["smooth_acts"], k)
         P = s["smooth_P"][k, : m * m].reshape((m, m))
         ev.smooth_start(d, _NEAR, s["null_s"], s["null_P"], s["smooth_x"][k], P)
 
@@ -241,7 +244,7 @@ def _noise(params: Block, inputs: Block, state: Block, entry: int) -> None:
         stands = s["ring_stand"][entry, i]
         var = s["ring_var"][entry, i] - stands
         # What an explanation cannot get right of a large residual is as smooth as the residual: slow noise.
-        rough = (c["model_error"] * s["ring_r"][entry, i]) ** 2
+        rough = (c["model_error"] * s["ring_alone"][entry, i]) ** 2
         slow = c["slow_share"][i] * var + stands + s["ring_extra"][entry, i] + c["cusum_sd"][i] ** 2
         s["x_d"][i] = math.sqrt(slow + rough)
         s["x_y"][i] = (1.0 - c["slow_share"][i]) * var + 0.01 * stands
@@ -250,6 +253,7 @@ def _noise(params: Block, inputs: Block, state: Block, entry: int) -> None:
             s["x_spread"][i] += band.BLIND * c["rated"][i] ** 2
     band.covariance(s["x_y"], c["rho"], s["x_spread"], s["R"])
     lasting.widen(state, s["R"])
+    feet.widen_at(params, state, entry, s["R"])
 
 
 @kernel
@@ -308,8 +312,8 @@ def _fill(params: Block, state: Block, family: int, index: int) -> None:
     c, s = params[0], state[0]
     fill(
         family, index, s["x_feature"], s["slope"], s["x_M"], c["body_axis"], c["body_centre"], c["foot_axis"],
-        c["foot_point"], c["load_axis"], c["load_centre"], c["parent"], c["dof"], s["x_S"], s["x_V"],
-        s["x_Vd"], s["x_R_W"], s["x_p_W"], s["x_H"],
+        c["foot_point"], c["foot_radius"], c["up"], c["load_axis"], c["load_centre"], c["parent"], c["dof"],
+        s["x_S"], s["x_V"], s["x_Vd"], s["x_R_W"], s["x_p_W"], s["x_H"],
     )  # fmt: skip
 
 
@@ -393,7 +397,7 @@ def _smooth(params: Block, state: Block, part: int) -> None:
         s["smooth_acts"][k], s["smooth_ended"][k] = acted + log_evidence, ended
         acts = s["smooth_acts"][k]
         value = 2 * d + n  # where the first component settles
-        if settles > 0 and c["smooth_sized"][k] == 1:
+        if settles > 0 and (settles == 1 or c["smooth_sized"][k] == 1):
             sd = math.sqrt(P[value, value])
             acts += ev.worth(s["smooth_x"][k, value], sd, c["least"], c["smooth_one_sided"][k])
         s["smooth_log"][k] = _either(acts, ended)
@@ -449,6 +453,8 @@ def posterior(params: Block, state: Block, outputs: Block) -> None:
         top = max(top, s["constant_log"][k])
     for k in range(s["smooth_log"].shape[0]):
         top = max(top, s["smooth_log"][k])
+    for f in range(s["foothold_log"].shape[0]):
+        top = max(top, s["null_log"] + s["foothold_log"][f])
     p[:] = 0.0
     p[0] = math.exp(s["null_log"] - top)
     p[1] = math.exp(s["other_log"] - top)
@@ -456,6 +462,8 @@ def posterior(params: Block, state: Block, outputs: Block) -> None:
         p[2 + c["constant_of"][k]] += math.exp(s["constant_log"][k] - top + c["constant_share"][k])
     for k in range(s["smooth_log"].shape[0]):
         p[2 + c["smooth_of"][k]] += math.exp(s["smooth_log"][k] - top + c["smooth_share"][k])
+    for f in range(s["foothold_log"].shape[0]):
+        p[2 + c["foothold_of"][f]] = math.exp(s["null_log"] + s["foothold_log"][f] - top)
     total = 0.0
     for i in range(X):
         p[i] *= math.exp(c["log_rate"][i])

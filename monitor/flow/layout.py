@@ -136,9 +136,10 @@ class Reason(IntEnum):
     GUIDED = 7
     CALIBRATING = 8
     STOPPED = 9  # a stop is in force: the drives may be braking or about to lose power
-    NOT_HOISTED = 10  # floating base: forces of feet, hands or docks are not told apart from faults
+    HELD = 10  # floating base: people or a dock hold the body, with forces nobody knows
     PAYLOAD_UNKNOWN = 11
     SINCE_START = 12  # something was there already when the judgement began
+    FEET_UNKNOWN = 13  # on the ground, and nobody says which feet are planned to stand
 
 
 class Notice(IntEnum):
@@ -277,6 +278,16 @@ def params_fields(s: Sizes) -> list[Field]:
         ("body_centre", f8, (s.B, 3)),  # m, body frame
         ("foot_axis", i8, (s.F,)),
         ("foot_point", f8, (s.F, 3)),
+        ("foot_radius", f8, (s.F,)),  # m: ground is met so far below the point
+        ("up", f8, (3,)),  # against gravity
+        ("foot_force_sd", f8, ()),  # N: prior of each component of the force of a foot that stands
+        ("foot_guard_ns", i8, ()),  # for so long after its planned lift-off a foot may still carry
+        ("foot_lands_ns", i8, ()),  # a foot that stands may take so long to meet ground
+        ("foot_lost_ns", i8, ()),  # and may be without force for so long
+        ("foothold_of", i8, (s.F,)),  # explanation of a lost foothold, by foot
+        ("foot_early_ns", i8, ()),  # a foot may meet ground so long before it is planned to
+        ("foot_share", f8, ()),  # of body_limit: for the three components of the force of a foot
+        ("body_share", f8, (s.F + 1,)),  # of it, by feet on the ground: each takes three from what is judged
         ("load_axis", i8, ()),
         ("load_centre", f8, (3,)),
         ("other_sd", f8, (n,)),  # N m: of something else
@@ -346,7 +357,7 @@ def inputs_fields(s: Sizes) -> list[Field]:
     """One sample as the robot sent it, and the condition it is in."""
     m, N = s.m, s.N
     return [
-        # t_ns to tau_cmd lie together: `flow.wire` writes a message there in one copy.
+        # t_ns to feet lie together: `flow.wire` writes a message there in one copy.
         ("t_ns", i8, ()),  # robot clock
         ("seq", i8, ()),
         ("q", f8, (m,)),  # rad or m, order and sign of the wire
@@ -357,11 +368,13 @@ def inputs_fields(s: Sizes) -> list[Field]:
         ("base_v", f8, (3,)),  # m/s, world axes
         ("base_w", f8, (3,)),  # rad/s, body axes
         ("tau_cmd", f8, (m,)),  # commanded torque, units of tau; NaN where not sent
+        ("feet", i8, (s.F,)),  # 1 planned to stand, 0 not, -1 not said
         ("rebase", i8, ()),  # 0 no, 1 gap or bad signal, 2 start, restart or change of condition
         ("brake", i8, (m,)),  # 1 closed
         ("drive", i8, (m,)),  # 1 powered
         ("guided", i8, ()),  # 1: a person or a calibration moves the robot
         ("judged", i8, (s.n,)),  # 1 where the residual may open an event
+        ("grounded", i8, ()),  # 1: a floating base whose planned feet carry it
         ("E", f8, (N, 4, 4)),  # pseudo-inertias, announced payload included
     ]
 
@@ -476,6 +489,26 @@ def state_fields(s: Sizes) -> list[Field]:
         ("R_factor", f8, (n, n)),
         ("white", f8, (n,)),
         ("body_ratio", f8, ()),
+        # feet
+        ("foot_J", f8, (s.F, 3, n)),  # Jacobian of the point where each foot meets ground, world axes
+        ("foot_carries", i8, (s.F,)),  # 1: it may carry: planned to, or was until a moment ago
+        ("foot_lifted_ns", i8, (s.F,)),  # when it was last planned to stand
+        ("foot_landed_ns", i8, (s.F,)),  # since when it is planned to stand
+        ("foot_felt_ns", i8, (s.F,)),  # when it was last felt to carry, or need not
+        ("loaded", i8, (n,)),  # 1: the row feels a foot that may carry
+        ("inverse", f8, (n, n)),  # of R_factor
+        ("alone", f8, (n,)),  # N m: what a row has more than all others predict; and its sd
+        ("alone_sd", f8, (n,)),
+        ("alone_slow", f8, (2, n)),  # the same of the slow residual, at the last evidence step
+        ("x_R", f8, (n, n)),
+        ("pull", f8, (n,)),  # R^-1 left
+        ("foot_white", f8, (3, n)),
+        ("foot_covariance", f8, (3, 3)),
+        ("foot_ratio", f8, (s.F, 3)),  # how far the force of a foot stands out, least of the last moments
+        ("foot_ratio_ns", i8, (s.F, 3)),
+        ("grounded", i8, ()),
+        ("slow_ratio", f8, (n,)),  # as outputs.ratio, of the slow residual at the last evidence step
+        ("slow_body_ratio", f8, ()),
         ("cusum_sum", f8, (n,)),
         ("cusum_count", i8, ()),
         ("cusum", f8, (n, 2)),
@@ -493,6 +526,9 @@ def state_fields(s: Sizes) -> list[Field]:
         ("ring_extra", f8, (RING, n)),
         ("ring_feature", f8, (RING, n, FEATURES)),
         ("ring_loud", i8, (RING,)),  # 1: something stood out
+        ("ring_alone", f8, (RING, n)),
+        ("ring_foot_J", f8, (RING, s.F, 3, n)),
+        ("ring_carries", i8, (RING, s.F)),
         ("ring_head", i8, ()),  # entries written so far
         ("ring_held", i8, ()),  # entries since the last re-base
         ("weigh_next", i8, ()),  # next entry to weigh, and its next stage
@@ -554,6 +590,8 @@ def state_fields(s: Sizes) -> list[Field]:
         ("other_s", f8, (n,)),
         ("other_P", f8, (n, n)),
         ("other_log", f8, ()),
+        ("foothold_log", f8, (s.F,)),  # of a foothold that was lost, over nothing
+        ("foothold_force", f8, (s.F, 2)),  # N: the force of its foot against gravity, and its sd
         ("constant_s", f8, (s.K, RISE, n)),
         ("constant_A", f8, (s.K, RISE, RISE)),
         ("constant_b", f8, (s.K, RISE)),
@@ -622,6 +660,9 @@ def outputs_fields(s: Sizes) -> list[Field]:
         ("body_ratio", f8, ()),  # the same for all rows together
         ("probability", f8, (s.X + 2,)),  # of nothing, something else, then the explanations
         ("tau_model", f8, (n,)),  # N m: what inverse dynamics expects of each joint
+        ("foot_force", f8, (s.F, 3)),  # N: of the ground on each foot, world axes; zero where none is planned
+        ("foot_force_sd", f8, (s.F, 3)),
+        ("feet_unknown", i8, ()),  # 1: on the ground, and the sample does not say which feet stand
         ("notice", i8, ()),  # bits of `Notice`
         ("signal", i8, ()),  # `Signal` of this sample
         ("signal_joint", i8, ()),  # joint it concerns, -1 none

@@ -249,8 +249,10 @@ def _fill_ledger(params: Any, tree: Tree, config: Config) -> None:
     params["pole_fast"] = 2.0 * math.pi * watch.fast_bandwidth_hz
     params["pole_slow"] = 2.0 * math.pi * watch.slow_bandwidth_hz
     noises = _noises(tree, config)
+    import os  # TRIAL
+    gains = noises if not tree.n - len(tree.joints) or os.environ.get("SEPARATE") else len(noises) * [tuple(map(max, zip(*noises[: tree.n - len(tree.joints)], strict=True)))]
     for k in range(GAIN_STEPS):
-        for i, (position_sd, velocity_sd) in enumerate(noises):
+        for i, (position_sd, velocity_sd) in enumerate(gains):
             dt_s = (k + 1) * period_s
             params["gain_fast"][0, k, i] = riccati_gain(position_sd, velocity_sd, watch.fast_walk, dt_s)
             params["gain_slow"][0, k, i] = riccati_gain(position_sd, velocity_sd, watch.slow_walk, dt_s)

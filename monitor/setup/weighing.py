@@ -16,7 +16,7 @@ from monitor.kernels.dynamics import REVOLUTE
 from monitor.robot.robot import Robot
 from monitor.robot.shape import bodies
 from monitor.robot.tree import WORLD, Tree
-from monitor.setup.calibration import Band
+from monitor.setup.calibration import Band, body_limit
 from monitor.setup.config import Config
 
 Floats = NDArray[np.float64]
@@ -61,7 +61,7 @@ def outline(tree: Tree, config: Config, rated: Floats, model: Any) -> Outline:
         telling=np.array(
             [_telling(tree, rated, axis, centre) for axis, centre in zip(body.axis, body.centre, strict=True)]
         ),
-        feet=tuple(foot.name for foot in config.robot.foot),
+        feet=tuple(foot.name for foot in config.robot.foot if base),
         weight=max(weight, 1.0),
         carrier=_carrier(tree, config)[0],
         payload=config.explain.largest_load_kg,
@@ -158,7 +158,8 @@ def candidates(outline_: Outline) -> Candidates:
     """Return all explanations of a robot with their candidates."""
     found = tuple(explain.explanations(outline_))
     every = [(i, one) for i, explanation in enumerate(found) for one in explanation.candidates]
-    constant = tuple(pair for pair in every if pair[1].time_s is None)
+    # What predicts no residual is told by other means, and is no candidate of the evidence.
+    constant = tuple(pair for pair in every if pair[1].time_s is None and pair[1].sd)
     smooth = tuple(pair for pair in every if pair[1].time_s is not None)
     return Candidates(found, constant, smooth)
 
@@ -190,6 +191,7 @@ def fill_evidence(params: Any, tree: Tree, config: Config, found: Candidates) ->
     params["cusum_samples"] = max(1, round(BLOCK_S / period_s))
     params["other_sd"] = OTHER * params["rated"]
     _fill_bodies(params, tree, config)
+    _fill_feet(params, tree, config)
     _fill_candidates(params, found, dt)
     settings = config.explain
     params["sure"], params["sure_ns"] = settings.lasting_probability, round(1e9 * settings.lasting_s)
@@ -198,6 +200,8 @@ def fill_evidence(params: Any, tree: Tree, config: Config, found: Candidates) ->
         params["of_family"][0, number] = explain.NAMES.index(first.family)
         params["of_index"][0, number] = first.number
         params["of_sd"][0, number] = _lasting_sd(explanation)
+        if first.family == "foothold-lost":
+            params["foothold_of"][0, first.number] = number
     rates = [settings.nothing_per_h, settings.other_per_h, *(x.rate_per_h for x in found.explanations)]
     params["log_rate"] = np.log(rates)
 
@@ -215,7 +219,7 @@ def _load_centre(tree: Tree, config: Config, axis: int) -> Floats:
 
 def _lasting_sd(explanation: Explanation) -> Floats:
     """Return the prior sd of the parameters an explanation has when it lasts (LASTING)."""
-    constants = tuple(one.sd[0] for one in explanation.candidates if one.time_s is None)
+    constants = tuple(one.sd[0] for one in explanation.candidates if one.time_s is None and one.sd)
     settled = next((one.sd for one in explanation.candidates if one.settles == len(one.sd) <= LASTING), ())
     values = constants or settled
     sd = np.zeros(LASTING)
@@ -230,9 +234,26 @@ def _fill_bodies(params: Any, tree: Tree, config: Config) -> None:
         place = next(place for place in tree.links if place.name == foot.link and place.axis != WORLD)
         params["foot_axis"][0, i] = place.axis
         params["foot_point"][0, i] = place.R @ foot.point + place.p
+        params["foot_radius"][0, i] = foot.radius
     axis = _carrier(tree, config)[1]
     params["load_axis"] = axis
     params["load_centre"] = _load_centre(tree, config, axis)
+
+
+def _fill_feet(params: Any, tree: Tree, config: Config) -> None:
+    """Set what is known of feet that stand beforehand, and how punctual they are."""
+    gravity, watch = np.array(config.robot.gravity_vector), config.watch
+    strength = float(np.linalg.norm(gravity))
+    params["up"] = -gravity / strength if strength else (0.0, 0.0, 1.0)
+    weight = float(tree.arrays.E[:, 3, 3].sum()) * strength
+    params["foot_force_sd"] = watch.foot_force_ratio * max(weight, 1.0)
+    params["foot_guard_ns"] = round(1e9 * watch.foot_guard_s)
+    params["foot_lands_ns"] = round(1e9 * watch.foot_landing_s)
+    params["foot_lost_ns"] = round(1e9 * watch.foot_lost_s)
+    params["foot_early_ns"] = round(1e9 * watch.foot_early_s)
+    params["foot_share"] = body_limit(3) / body_limit(tree.n)
+    for feet in range(len(config.robot.foot) + 1):
+        params["body_share"][0, feet] = body_limit(max(tree.n - 3 * feet, 1)) / body_limit(tree.n)
 
 
 def _fill_candidates(params: Any, found: Candidates, dt: float) -> None:
