@@ -18,7 +18,7 @@ from scipy.optimize import minimize_scalar, nnls
 
 from monitor.commission.drive import Samples, Trace, run
 from monitor.errors import SessionError
-from monitor.kernels.band import BLIND, FLOOR, STANDS, STANDS_SQUARED
+from monitor.kernels.band import BLIND, FLOOR, INERTIA, NOISE, STANDS, STANDS_SQUARED
 from monitor.setup.build import Setup
 from monitor.setup.calibration import Band
 from monitor.setup.weighing import SLOW_S
@@ -42,6 +42,11 @@ _SHAPE_SD, _LARGEST_SHAPE = 0.1, 0.3
 _REVERSALS = [STANDS, STANDS_SQUARED]
 _CALM, _TOLERANCE, _LARGEST_WIDENING, _REFERENCE_BLOCKS = 0.02, 1.15, 64.0, 2000.0
 _WIDENING_EVERY = 4
+# Causes of a base, which has neither drives nor friction (the floor comes first, see `_causes`).
+_OF_BASE = [FLOOR, NOISE, INERTIA]
+# Least weights of its sensors' noise, fast and slow: legs that stand may seem to explain all of a residual. And the
+# share of slow noise: what lasts is what legs hide.
+_BASE_NOISE, _BASE_SLOW = (0.5, 0.05), 0.05
 # Statistics that open events; each gets its share of the wanted rate.
 _STATISTICS = ("row", "body", "sums")
 
@@ -225,7 +230,12 @@ def _shape(setup: Setup, band: Band, recordings: Sequence[Samples], traces: Sequ
         for weight, name, no_cause in ((fast, "fast", "known"), (slow, "slow", "known_slow")):
             known = np.concatenate([getattr(one, no_cause)[k, i] for one, k in zip(seen, taken, strict=True)])
             r = np.concatenate([getattr(one, name)[k, i] for one, k in zip(seen, taken, strict=True)])
-            weight[i] = _causes(cause, r, known, (_LEAST_FLOOR * rated[i]) ** 2)
+            allowed = slice(None) if i >= setup.sizes.base else _OF_BASE
+            weight[i] = 0.0
+            weight[i, allowed] = _causes(cause[:, allowed], r, known, (_LEAST_FLOOR * rated[i]) ** 2)
+        if i < setup.sizes.base:
+            fast[i, NOISE], slow[i, NOISE] = max(fast[i, NOISE], _BASE_NOISE[0]), max(slow[i, NOISE], _BASE_NOISE[1])
+            continue
         fast[i, _REVERSALS] *= _widening(seen, i, fast[i], round(_BLOCK_S / dt_s))
         if setup.sizes.base:
             # A leg stands long where it cannot be looked at, and a joint that stands hides friction both ways.
@@ -239,7 +249,7 @@ def _shape(setup: Setup, band: Band, recordings: Sequence[Samples], traces: Sequ
         fast=fast,
         slow=slow,
         rho=_own(_correlation(np.concatenate(z)[::_EVERY]), setup.sizes.base),
-        slow_share=_slow_share(z, dt_s),
+        slow_share=np.where(np.arange(len(rated)) < setup.sizes.base, _BASE_SLOW, _slow_share(z, dt_s)),
         cusum_sd=np.maximum(lasting, _LEAST_LASTING * rated),
     )
 

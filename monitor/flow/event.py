@@ -56,7 +56,7 @@ def into_band(params: Block, inputs: Block, state: Block, outputs: Block) -> Non
         out["band_fast"][i] = c["row_limit"] * math.sqrt(s["R"][i, i])
         out["band_slow"][i] = c["row_limit"] * math.sqrt(s["var_slow"][i] + s["explained_var"][i])
         out["ratio"][i] = abs(s["left"][i]) / out["band_fast"][i]
-        s["alone"][i] = s["left"][i]
+        s["alone"][i], s["beside"][i] = s["left"][i], s["left"][i]
     s["body_ratio"] = total / c["body_limit"]
     if floating:
         _beside_feet(params, inputs, state, outputs)
@@ -150,7 +150,7 @@ def judge(params: Block, inputs: Block, state: Block, outputs: Block) -> None:
     lost = feet.lost(params, inputs, state, outputs)
     row = band.largest(out["ratio"], x["judged"])
     ratio = max(out["ratio"][row], s["body_ratio"]) if row >= 0 else 0.0
-    if ratio < c["onset_ratio"] and lost < 0:
+    if max(ratio, s["foot_now"]) < c["onset_ratio"] and lost < 0:
         s["event_quiet_ns"] = t_ns
     s["step_due"] = 1 if _remember(params, state) else 0
     if ratio > 1.0 and (s["event_open"] == 0 or s["event_drifted"] != 0):
@@ -252,7 +252,7 @@ def _remember(params: Block, state: Block) -> bool:
     for i in range(s["left"].shape[0]):
         s["ring_a"][k, i] = s["a"][i] + s["e_slow"][i]
     s["ring_r"][k] = s["left"]
-    s["ring_alone"][k] = s["alone"]
+    s["ring_beside"][k] = s["beside"]
     s["ring_foot_J"][k] = s["foot_J"]
     s["ring_carries"][k] = s["foot_carries"]
     s["ring_var"][k] = s["var_fast"]

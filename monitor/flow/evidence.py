@@ -244,7 +244,7 @@ def _noise(params: Block, inputs: Block, state: Block, entry: int) -> None:
         stands = s["ring_stand"][entry, i]
         var = s["ring_var"][entry, i] - stands
         # What an explanation cannot get right of a large residual is as smooth as the residual: slow noise.
-        rough = (c["model_error"] * s["ring_alone"][entry, i]) ** 2
+        rough = (c["model_error"] * s["ring_beside"][entry, i]) ** 2
         slow = c["slow_share"][i] * var + stands + s["ring_extra"][entry, i] + c["cusum_sd"][i] ** 2
         s["x_d"][i] = math.sqrt(slow + rough)
         s["x_y"][i] = (1.0 - c["slow_share"][i]) * var + 0.01 * stands

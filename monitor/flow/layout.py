@@ -497,6 +497,7 @@ def state_fields(s: Sizes) -> list[Field]:
         ("foot_felt_ns", i8, (s.F,)),  # when it was last felt to carry, or need not
         ("loaded", i8, (n,)),  # 1: the row feels a foot that may carry
         ("inverse", f8, (n, n)),  # of R_factor
+        ("beside", f8, (n,)),  # N m: left beside the likeliest forces of the feet that may carry
         ("alone", f8, (n,)),  # N m: what a row has more than all others predict; and its sd
         ("alone_sd", f8, (n,)),
         ("alone_slow", f8, (2, n)),  # the same of the slow residual, at the last evidence step
@@ -506,6 +507,7 @@ def state_fields(s: Sizes) -> list[Field]:
         ("foot_covariance", f8, (3, 3)),
         ("foot_ratio", f8, (s.F, 3)),  # how far the force of a foot stands out, least of the last moments
         ("foot_ratio_ns", i8, (s.F, 3)),
+        ("foot_now", f8, ()),  # the largest of this sample, however short
         ("grounded", i8, ()),
         ("slow_ratio", f8, (n,)),  # as outputs.ratio, of the slow residual at the last evidence step
         ("slow_body_ratio", f8, ()),
@@ -526,7 +528,7 @@ def state_fields(s: Sizes) -> list[Field]:
         ("ring_extra", f8, (RING, n)),
         ("ring_feature", f8, (RING, n, FEATURES)),
         ("ring_loud", i8, (RING,)),  # 1: something stood out
-        ("ring_alone", f8, (RING, n)),
+        ("ring_beside", f8, (RING, n)),
         ("ring_foot_J", f8, (RING, s.F, 3, n)),
         ("ring_carries", i8, (RING, s.F)),
         ("ring_head", i8, ()),  # entries written so far
