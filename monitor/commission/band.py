@@ -44,8 +44,8 @@ _CALM, _TOLERANCE, _LARGEST_WIDENING, _REFERENCE_BLOCKS = 0.02, 1.15, 64.0, 2000
 _WIDENING_EVERY = 4
 # Causes of a base, which has neither drives nor friction (the floor comes first, see `_causes`).
 _OF_BASE = [FLOOR, NOISE, INERTIA]
-# Least weights of its sensors' noise, fast and slow: legs that stand may seem to explain all of a residual. And the
-# share of slow noise: what lasts is what legs hide.
+# Least weights of its sensors' noise, fast and slow: legs that stand may seem to explain all of a residual.
+# And the share of slow noise: what lasts is what legs hide.
 _BASE_NOISE, _BASE_SLOW = (0.5, 0.05), 0.05
 # Statistics that open events; each gets its share of the wanted rate.
 _STATISTICS = ("row", "body", "sums")
@@ -157,8 +157,8 @@ def without_limits(band: Band) -> Band:
 class _Seen(NamedTuple):
     """What a trace shows: residuals with what friction explains taken off, all (T,n) but cause (T,n,C).
 
-    `known` is the part of the variance that is no cause, and of the slow residual's; `counted` says which rows
-    count.
+    `known` is the part of the variance that is no cause, and of the slow residual's; `counted` says which
+    rows count.
     """
 
     cause: Floats
@@ -184,12 +184,13 @@ def _base_seen(seen: _Seen, setup: Setup, trace: Trace, hoisted: bool) -> _Seen:
     if not b or hoisted:
         return seen
     blind = BLIND * setup.params["rated"][0, :b] ** 2
-    fast, slow, known, known_slow, counted = (one.copy() for one in seen[1:])
+    fast, slow, known, known_slow = (one.copy() for one in seen[1:5])
+    counted = seen.counted.copy()
     fast[:, :b], slow[:, :b] = trace.alone[:, 0, :b], trace.alone[:, 2, :b]
     lasting = setup.params["cusum_sd"][0, :b] ** 2
-    for one, sd, own in ((known, 1, 0.0), (known_slow, 3, lasting)):
-        own = blind + trace.variance[:, sd // 2, :b] + own
-        one[:, :b] = np.maximum(trace.alone[:, sd, :b] ** 2 - own, 0.0)
+    for k, (one, more) in enumerate(((known, 0.0), (known_slow, lasting))):
+        own = blind + trace.variance[:, k, :b] + more
+        one[:, :b] = np.maximum(trace.alone[:, 2 * k + 1, :b] ** 2 - own, 0.0)
     counted[:, :b] = (trace.settling == 0)[:, None]
     return _Seen(seen.cause, fast, slow, known, known_slow, counted)
 
@@ -197,7 +198,8 @@ def _base_seen(seen: _Seen, setup: Setup, trace: Trace, hoisted: bool) -> _Seen:
 def _base_floor(setup: Setup, band: Band, recordings: Sequence[Samples]) -> Band:
     """Return the band with the floors of a base's rows raised to what these have beyond all other rows.
 
-    What legs that stand hide is no independent noise of six rows; each row is to be as wide as it is seen to be.
+    What legs that stand hide is no independent noise of six rows; each row is to be as wide as it is seen to
+    be.
     """
     fast, slow = band.fast.copy(), band.slow.copy()
     for _ in range(2):
@@ -205,7 +207,9 @@ def _base_floor(setup: Setup, band: Band, recordings: Sequence[Samples]) -> Band
         taken = [(trace.settling == 0) & (trace.alone[:, 3, 0] > 0.0) for trace in traces]
         for k, weight in enumerate((fast, slow)):
             alone, sd = (
-                np.concatenate([t.alone[m, 2 * k + j, : setup.sizes.base] for t, m in zip(traces, taken, strict=True)])
+                np.concatenate(
+                    [t.alone[m, 2 * k + j, : setup.sizes.base] for t, m in zip(traces, taken, strict=True)]
+                )
                 for j in range(2)
             )
             excess = np.minimum(alone**2, _CLIP**2 * sd**2) - sd**2
@@ -234,11 +238,15 @@ def _shape(setup: Setup, band: Band, recordings: Sequence[Samples], traces: Sequ
             weight[i] = 0.0
             weight[i, allowed] = _causes(cause[:, allowed], r, known, (_LEAST_FLOOR * rated[i]) ** 2)
         if i < setup.sizes.base:
-            fast[i, NOISE], slow[i, NOISE] = max(fast[i, NOISE], _BASE_NOISE[0]), max(slow[i, NOISE], _BASE_NOISE[1])
+            fast[i, NOISE], slow[i, NOISE] = (
+                max(fast[i, NOISE], _BASE_NOISE[0]),
+                max(slow[i, NOISE], _BASE_NOISE[1]),
+            )
             continue
         fast[i, _REVERSALS] *= _widening(seen, i, fast[i], round(_BLOCK_S / dt_s))
         if setup.sizes.base:
-            # A leg stands long where it cannot be looked at, and a joint that stands hides friction both ways.
+            # A leg stands long where it cannot be looked at, and a joint that stands hides friction both
+            # ways.
             hidden = setup.model.coulomb[i] ** 2 / 3.0
             for weight in (fast, slow):
                 weight[i, STANDS_SQUARED] += max(hidden - weight[i, _REVERSALS].sum(), 0.0)

@@ -17,8 +17,8 @@ from monitor.setup.build import Setup
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
 
-# How long before it is planned to a foot may meet ground, and how long after its planned lift-off the residual
-# may still feel it [s].
+# How long before it is planned to a foot may meet ground, and how long after its planned lift-off the
+# residual may still feel it [s].
 _EARLY_S, _LATE_S = 0.02, 0.05
 
 
@@ -51,8 +51,8 @@ class Samples(NamedTuple):
 class Trace(NamedTuple):
     """What the step made of it, by sample: residuals (T,n), causes (T,n,C), features, variances, ratios.
 
-    alone (T,4,n) is what a row has beyond what all others predict, and its sd, see kernels/feet.py, fast and slow. free (T,n) is
-    1 where a row feels no force that is not known, judged (n,) where one is judged.
+    alone (T,4,n) is what a row has beyond what all others predict, and its sd, see kernels/feet.py, fast and
+    slow. free (T,n) is 1 where a row feels no force that is not known, judged (n,) where one is judged.
     """
 
     r_fast: Floats

@@ -1,9 +1,10 @@
 """Mass and centre of mass of the trunk of a walker, from what its legs carry while it stands.
 
-Joints of legs that swing, or hang from a hoisted robot, say nothing of the body they hang from. When the robot
-stands, its legs' torques tell the forces of the feet, and the rows of the base what these leave over: a trunk
-that is heavier by dm and has its first moment off by dh leaves `-dm a` and `-dh x a`, a its acceleration without
-gravity. This is fitted to the slow residual, by least squares with the weights of its own uncertainty.
+Joints of legs that swing, or hang from a hoisted robot, say nothing of the body they hang from. When the
+robot stands, its legs' torques tell the forces of the feet, and the rows of the base what these leave over:
+a trunk that is heavier by dm and has its first moment off by dh leaves `-dm a` and `-dh x a`, a its
+acceleration without gravity. This is fitted to the slow residual, by least squares with the weights of its
+own uncertainty.
 """
 
 from __future__ import annotations
@@ -21,9 +22,11 @@ from monitor.setup.calibration import Model
 
 Floats = NDArray[np.float64]
 
-# Samples between those looked at, and how many of these count as one: friction that standing joints hide stays.
+# Samples between those looked at, and how many of these count as one: friction that standing joints hide
+# stays.
 _EVERY, _CORRELATED = 20, 50.0
-# How far off a description is before, as shares: sd of mass, and of the centre of mass in units of the trunk's size.
+# How far off a description is before, as shares: sd of mass, and of the centre of mass in units of the
+# trunk's size.
 _MASS_SD, _CENTRE_SD = 0.1, 0.2
 _LEAST = 0.02  # of rated, sd
 
@@ -31,8 +34,8 @@ _LEAST = 0.02  # of rated, sd
 def weighed(setup: Setup, recordings: Sequence[Samples]) -> Model:
     """Return the model of a setup with the trunk that recordings of it standing show.
 
-    The setup must open no event on the way (see `commission.band.without_limits`). Recordings of a hoisted robot
-    are left aside.
+    The setup must open no event on the way (see `commission.band.without_limits`). Recordings of a hoisted
+    robot are left aside.
     """
     trunk = setup.sizes.base - 1
     E = setup.model.E
@@ -55,7 +58,7 @@ def weighed(setup: Setup, recordings: Sequence[Samples]) -> Model:
 
 
 def _sums(setup: Setup, samples: Samples) -> tuple[Floats, Floats]:
-    """Return information (4,4) and its product with the change of mass and first moment (4,) of one recording."""
+    """Return information (4,4) of one recording, and it times the change of mass and first moment (4,)."""
     trace = run(setup, samples, judge_base=False)
     taken = np.flatnonzero((trace.settling == 0) & (trace.alone[:, 3, 0] > 0.0))[::_EVERY]
     g = np.array(setup.config.robot.gravity_vector)
@@ -72,7 +75,8 @@ def _sums(setup: Setup, samples: Samples) -> tuple[Floats, Floats]:
     H[:, 3:, 0] = -up
     for k in range(3):
         H[:, :3, 1 + k] = -np.cross(np.eye(3)[k], up)
-    # What the legs do not know; what else the base's rows are held to be off by may be the very error looked for.
+    # What the legs do not know; what else the base's rows are held to be off by may be the very error looked
+    # for.
     rated = setup.params["rated"][0, :6]
     own = trace.variance[taken, 1, :6] + setup.params["cusum_sd"][0, :6] ** 2
     unknown = np.maximum(sd**2 - BLIND * rated**2 - own, 0.0) + (_LEAST * rated) ** 2

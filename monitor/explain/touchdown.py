@@ -1,7 +1,7 @@
 """A foot that meets ground although it is not planned to: `r = J' f` where it does, its force smooth in time.
 
-Ground pushes and does not pull, and more along its normal than sideways. The normal is taken to be up, against
-gravity: nobody says how the ground slopes.
+Ground pushes and does not pull, and more along its normal than sideways. The normal is taken to be up,
+against gravity: nobody says how the ground slopes.
 """
 
 from __future__ import annotations
@@ -18,7 +18,9 @@ Ints = NDArray[np.int64]
 NAME = "touchdown"
 # Standard deviations of the force as shares of the weight: normal, sideways.
 NORMAL_SD, SIDEWAYS_SD = 0.4, 0.15
-TIME_S, SETTLED = 0.03, 0.3  # the normal force comes so fast, and wavers by so much of its variance
+# How fast the force comes, in a step that is meant or in a stumble; the normal one wavers by so much of its
+# variance.
+TIMES_S, SETTLED = (0.03, 0.008), 0.3
 
 
 def explanations(outline: Outline) -> list[Explanation]:
@@ -31,7 +33,10 @@ def explanations(outline: Outline) -> list[Explanation]:
             None,
             foot,
             rate,
-            (Candidate(NAME, i, "unplanned", sd, "N", 1.0, TIME_S, 1, SETTLED, 1.0, one_sided=True),),
+            tuple(
+                Candidate(NAME, i, "unplanned", sd, "N", 0.5, time_s, 1, SETTLED, 1.0, one_sided=True)
+                for time_s in TIMES_S
+            ),
         )
         for i, foot in enumerate(outline.feet)
     ]
@@ -44,8 +49,8 @@ def rows(
 ) -> None:  # fmt: skip
     """Fill H (n, >= 3) with torque per unit of force up and along two level axes, on a foot.
 
-    It acts `radius` below the point (3) of the body of an axis, given in the body frame. up (3) is a unit vector;
-    twists S (N,6) and poses R (N+1,3,3), p (N+1,3) are from one origin.
+    It acts `radius` below the point (3) of the body of an axis, given in the body frame. up (3) is a unit
+    vector; twists S (N,6) and poses R (N+1,3,3), p (N+1,3) are from one origin.
     """
     for i in range(H.shape[0]):
         for j in range(3):

@@ -156,7 +156,7 @@ class ConditionKeeper:
         self._show()
 
     def _may_judge(self) -> bool:
-        """Return whether unexplained torque means anything: not calibrating, forces on feet known or planned."""
+        """Return whether unexplained torque means anything: not calibrating, nor held by unknown forces."""
         known = self._condition
         if self._facts.floating and (
             known is None or self._stale or known.support not in ("ground", "hoisted", "carried")

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+from typing import Any
 
 from monitor.explain import foothold
 from monitor.flow.layout import Block
@@ -50,7 +51,7 @@ def stand(params: Block, inputs: Block, state: Block, outputs: Block) -> None:
 
 
 @kernel
-def widen(params: Block, state: Block, R: Block) -> None:
+def widen(params: Block, state: Block, R: Any) -> None:
     """Add to R (n,n) the forces of all feet of a robot on the ground, planned to stand or not."""
     s = state[0]
     if s["grounded"] != 0:
@@ -67,7 +68,8 @@ def dofs_taken(state: Block) -> int:
 
 @kernel
 def forces(params: Block, state: Block, outputs: Block) -> float:
-    """Fill the forces of feet, and what they leave over; return how far those stand out that should be none, as a share of their limit.
+    """Fill the forces of feet, and what they leave over; return how far those stand out that should be none,
+    as a share of their limit.
 
     That of a foot which is not planned to stand counts once it has lasted for a while: feet meet ground some
     milliseconds before they are planned to.
@@ -96,7 +98,10 @@ def forces(params: Block, state: Block, outputs: Block) -> float:
             ratio = feet.standing_out(out["foot_force"][f], s["foot_covariance"])
             ratio /= c["foot_share"] * c["body_limit"]
         s["foot_now"] = max(s["foot_now"], ratio)
-        largest = max(largest, _lasting(ratio, s["at_ns"], c["foot_early_ns"], s["foot_ratio"][f], s["foot_ratio_ns"][f]))
+        largest = max(
+            largest,
+            _lasting(ratio, s["at_ns"], c["foot_early_ns"], s["foot_ratio"][f], s["foot_ratio_ns"][f]),
+        )
     return largest
 
 
@@ -111,12 +116,12 @@ def _lasting(ratio: float, t_ns: int, early_ns: int, ratios: Block, since_ns: Bl
             ratios[k], since_ns[k] = ratios[k + 1], since_ns[k + 1]
         ratios[2], since_ns[2] = ratio, t_ns
     ratios[2] = min(ratios[2], ratio)
-    return min(ratios[0], ratios[1], ratios[2])
+    return float(min(ratios[0], ratios[1], ratios[2]))
 
 
 @kernel
 def lost(params: Block, inputs: Block, state: Block, outputs: Block) -> int:
-    """Return a foot that has lost its hold, or -1: for some time it was more likely without force than not."""
+    """Return a foot that has lost its hold, or -1: for a time it was likelier without force than with."""
     c, x, s, out = params[0], inputs[0], state[0], outputs[0]
     t_ns, found = s["at_ns"], -1
     for f in range(s["foot_carries"].shape[0]):
@@ -143,7 +148,7 @@ def lost(params: Block, inputs: Block, state: Block, outputs: Block) -> int:
 
 
 @kernel
-def widen_at(params: Block, state: Block, entry: int, R: Block) -> None:
+def widen_at(params: Block, state: Block, entry: int, R: Any) -> None:
     """Add to R (n,n) the forces of the feet that may have carried at an entry of the ring."""
     s = state[0]
     for f in range(s["foot_carries"].shape[0]):

@@ -133,7 +133,7 @@ class JointsFormat:
         return JointSample(seq, t_ns, body + (self._nothing_more if plain else self._more(message, order)))
 
     def _more(self, message: dict[str, Any], order: tuple[int, ...] | None) -> bytes:
-        """Return base state, commanded torque and feet as `inputs` holds them; check what else may be sent."""
+        """Return base, commanded torque and feet as `inputs` holds them; check what else may be sent."""
         base = _base(message.get("base")) if self.floating else _NO_BASE
         tau_cmd = message.get("tau_cmd")
         commanded = self._no_command if tau_cmd is None else self._array("tau_cmd", tau_cmd, order)

@@ -27,8 +27,8 @@ def jacobian(
 ) -> None:  # fmt: skip
     """Fill J (3,n): velocity, world axes, of where a foot on the body of an axis meets ground.
 
-    That is `radius` below its point (3, body frame), against up (3). Joint twists S (N,6) and poses R (N+1,3,3),
-    p (N+1,3) are from one origin.
+    That is `radius` below its point (3, body frame), against up (3). Joint twists S (N,6) and poses R
+    (N+1,3,3), p (N+1,3) are from one origin.
     """
     for k in range(3):
         for i in range(J.shape[1]):
@@ -122,4 +122,4 @@ def standing_out(f: Floats, C: Floats) -> float:
     g = C[0, 0] * C[1, 1] - C[0, 1] * C[0, 1]
     total = a * f[0] * f[0] + d * f[1] * f[1] + g * f[2] * f[2]
     total += 2.0 * (b * f[0] * f[1] + c * f[0] * f[2] + e * f[1] * f[2])
-    return total / (C[0, 0] * a + C[0, 1] * b + C[0, 2] * c)
+    return float(total / (C[0, 0] * a + C[0, 1] * b + C[0, 2] * c))

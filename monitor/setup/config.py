@@ -203,7 +203,7 @@ class FootConfig(Table):
     )
     point: Vector3 = Field(
         default=(0.0, 0.0, 0.0),
-        description="Where it touches ground, or the centre of a foot that is a ball; in axes of the link [m].",
+        description="Where it meets ground, or the centre of a foot that is a ball; axes of the link [m].",
     )
     radius: NotNegative = Field(
         default=0.0, description="Of a foot that is a ball: ground is met so far below its centre [m]."
@@ -471,7 +471,7 @@ class WatchConfig(Table):
     )
     foot_force_ratio: Positive = Field(
         default=0.4,
-        description="How large each component of the force of a foot that stands is, as a share of the weight.",
+        description="How large each component of a standing foot's force is, as a share of the weight.",
     )
     foot_guard_s: NotNegative = Field(
         default=0.04,

@@ -1,11 +1,12 @@
-"""What the monitor makes of the simulated walker, by motion: false events, pushes, footholds, faults by phase.
+"""What the monitor makes of the simulated walker, by motion: false events, pushes, footholds, faults.
 
     python -m tests.worlds.score_walker [--motions stand,crawl,trot,hoisted] [--robots 1] [--sessions 4]
         [--quiet 2] [--held-out]
 
-Model, band and limits are fitted to fault-free sessions of the same robot, other ones than those judged: hoisted,
-crawl and trot for the model, all motions for the band. `--quiet` is the number of fault-free sessions of a minute
-per motion that are searched for false events. Without `--held-out` seeds below 1000 are taken, those of tuning.
+Model, band and limits are fitted to fault-free sessions of the same robot, other ones than those judged:
+hoisted, crawl and trot for the model, all motions for the band. `--quiet` is the number of fault-free
+sessions of a minute per motion that are searched for false events. Without `--held-out` seeds below 1000 are
+taken, those of tuning.
 """
 
 from __future__ import annotations
@@ -170,7 +171,9 @@ def _promptly(truth: WalkerTruth, opened: Sequence[Event]) -> str:
     by = truth.start_s + _PROMPT_S
     if not any(e.opened_s <= by for e in opened):
         return "noticed too late" if opened else "missed"
-    named = [v for e in opened for t, v in e.said if t <= by and v.verdict == truth.kind and v.link == truth.foot]
+    named = [
+        v for e in opened for t, v in e.said if t <= by and v.verdict == truth.kind and v.link == truth.foot
+    ]
     if named:
         return "named in time"
     late = any(v.verdict == truth.kind and v.link == truth.foot for e in opened for _, v in e.said)
