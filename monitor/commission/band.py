@@ -16,7 +16,7 @@ import numpy as np
 from numpy.typing import NDArray
 from scipy.optimize import minimize_scalar, nnls
 
-from monitor.commission.drive import Samples, Trace, run
+from monitor.commission.drive import SLOW_LATE_S, Samples, Trace, free_rows, run
 from monitor.errors import SessionError
 from monitor.kernels.band import BLIND, FLOOR, INERTIA, NOISE, STANDS, STANDS_SQUARED
 from monitor.setup.build import Setup
@@ -158,7 +158,7 @@ class _Seen(NamedTuple):
     """What a trace shows: residuals with what friction explains taken off, all (T,n) but cause (T,n,C).
 
     `known` is the part of the variance that is no cause, and of the slow residual's; `counted` says which
-    rows count.
+    rows count, `counted_slow` the same of the slow one.
     """
 
     cause: Floats
@@ -167,12 +167,15 @@ class _Seen(NamedTuple):
     known: Floats
     known_slow: Floats
     counted: Bools
+    counted_slow: Bools
 
 
-def _seen(trace: Trace) -> _Seen:
+def _seen(setup: Setup, samples: Samples, trace: Trace) -> _Seen:
     explained, known = trace.explained, trace.variance[:, 2]
-    counted = (trace.settling == 0)[:, None] & (trace.free != 0)
-    return _Seen(trace.cause, trace.r_fast - explained, trace.r_slow - explained, known, known, counted)
+    settled = (trace.settling == 0)[:, None]
+    counted = settled & (trace.free != 0)
+    slow = settled & (free_rows(setup, samples, SLOW_LATE_S) != 0)
+    return _Seen(trace.cause, trace.r_fast - explained, trace.r_slow - explained, known, known, counted, slow)
 
 
 def _base_seen(seen: _Seen, setup: Setup, trace: Trace, hoisted: bool) -> _Seen:
@@ -185,14 +188,14 @@ def _base_seen(seen: _Seen, setup: Setup, trace: Trace, hoisted: bool) -> _Seen:
         return seen
     blind = BLIND * setup.params["rated"][0, :b] ** 2
     fast, slow, known, known_slow = (one.copy() for one in seen[1:5])
-    counted = seen.counted.copy()
+    counted, counted_slow = seen.counted.copy(), seen.counted_slow.copy()
     fast[:, :b], slow[:, :b] = trace.alone[:, 0, :b], trace.alone[:, 2, :b]
     lasting = setup.params["cusum_sd"][0, :b] ** 2
     for k, (one, more) in enumerate(((known, 0.0), (known_slow, lasting))):
         own = blind + trace.variance[:, k, :b] + more
         one[:, :b] = np.maximum(trace.alone[:, 2 * k + 1, :b] ** 2 - own, 0.0)
-    counted[:, :b] = (trace.settling == 0)[:, None]
-    return _Seen(seen.cause, fast, slow, known, known_slow, counted)
+    counted[:, :b] = counted_slow[:, :b] = (trace.settling == 0)[:, None]
+    return _Seen(seen.cause, fast, slow, known, known_slow, counted, counted_slow)
 
 
 def _base_floor(setup: Setup, band: Band, recordings: Sequence[Samples]) -> Band:
@@ -219,22 +222,25 @@ def _base_floor(setup: Setup, band: Band, recordings: Sequence[Samples]) -> Band
 
 def _shape(setup: Setup, band: Band, recordings: Sequence[Samples], traces: Sequence[Trace]) -> Band:
     """Return the band with all but its limits fitted to traces in which no event was opened."""
-    seen, rated = [_seen(trace) for trace in traces], setup.params["rated"][0]
+    rated = setup.params["rated"][0]
     seen = [
-        _base_seen(one, setup, trace, samples.hoisted)
-        for one, trace, samples in zip(seen, traces, recordings, strict=True)
+        _base_seen(_seen(setup, samples, trace), setup, trace, samples.hoisted)
+        for trace, samples in zip(traces, recordings, strict=True)
     ]
     dt_s = 1e-9 * float(setup.params["period_ns"][0])
     fast, slow = band.fast.copy(), band.slow.copy()
     for i in range(len(rated)):
-        taken = [np.flatnonzero(one.counted[:, i])[::_EVERY] for one in seen]
-        if sum(map(len, taken)) < _LEAST_SAMPLES:
-            continue
-        cause = np.concatenate([one.cause[k, i] for one, k in zip(seen, taken, strict=True)])
-        for weight, name, no_cause in ((fast, "fast", "known"), (slow, "slow", "known_slow")):
-            known = np.concatenate([getattr(one, no_cause)[k, i] for one, k in zip(seen, taken, strict=True)])
-            r = np.concatenate([getattr(one, name)[k, i] for one, k in zip(seen, taken, strict=True)])
-            allowed = slice(None) if i >= setup.sizes.base else _OF_BASE
+        allowed = slice(None) if i >= setup.sizes.base else _OF_BASE
+        for weight, name, no_cause, which in (
+            (fast, "fast", "known", "counted"), (slow, "slow", "known_slow", "counted_slow"),
+        ):  # fmt: skip
+            taken = [np.flatnonzero(getattr(one, which)[:, i])[::_EVERY] for one in seen]
+            if sum(map(len, taken)) < _LEAST_SAMPLES:
+                continue
+            cause, r, known = (
+                np.concatenate([x[k, i] for x, k in zip(parts, taken, strict=True)])
+                for parts in zip(*((one.cause, getattr(one, name), getattr(one, no_cause)) for one in seen))
+            )
             weight[i] = 0.0
             weight[i, allowed] = _causes(cause[:, allowed], r, known, (_LEAST_FLOOR * rated[i]) ** 2)
         if i < setup.sizes.base:
@@ -270,7 +276,7 @@ def _normalised(seen: _Seen, weights: Floats) -> Floats:
 
 def _lasting(seen: Sequence[_Seen], length: int) -> Floats:
     """Return the root mean square (n,) of the means of moving joints' slow residuals over so many samples."""
-    moving = [np.where(x.counted & (x.cause[:, :, STANDS] < _STANDING), x.slow, 0.0) for x in seen]
+    moving = [np.where(x.counted_slow & (x.cause[:, :, STANDS] < _STANDING), x.slow, 0.0) for x in seen]
     means = np.concatenate([_block_means(one, length) for one in moving])
     return np.asarray(np.sqrt(np.mean(means**2, axis=0)))
 

@@ -18,8 +18,8 @@ Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
 
 # How long before it is planned to a foot may meet ground, and how long after its planned lift-off the
-# residual may still feel it [s].
-_EARLY_S, _LATE_S = 0.02, 0.05
+# residual may still feel it, fast and slow [s].
+_EARLY_S, LATE_S, SLOW_LATE_S = 0.02, 0.05, 0.2
 
 
 class Samples(NamedTuple):
@@ -71,8 +71,10 @@ class Trace(NamedTuple):
     judged: Ints
 
 
-def free_rows(setup: Setup, samples: Samples) -> Ints:
+def free_rows(setup: Setup, samples: Samples, late_s: float = LATE_S) -> Ints:
     """Return 1 for each sample and row (T,n) that feels no force of a foot on the ground or a hoist, else 0.
+
+    For so long after its planned lift-off (late_s) a foot may still be felt.
 
     Raises
     ------
@@ -94,7 +96,7 @@ def free_rows(setup: Setup, samples: Samples) -> Ints:
         free[:, : sizes.base] = 0
         return free
     rate_hz = 1e9 / float(params["period_ns"])
-    early, late = round(_EARLY_S * rate_hz), round(_LATE_S * rate_hz)
+    early, late = round(_EARLY_S * rate_hz), round(late_s * rate_hz)
     # Of a stretch with its centre in the middle the first half reaches back in time, the second ahead.
     reach = np.zeros(2 * max(early, late) + 1, bool)
     reach[max(early, late) - early : max(early, late) + late + 1] = True

@@ -12,7 +12,7 @@ from collections.abc import Sequence
 import numpy as np
 from numpy.typing import NDArray
 
-from monitor.commission.drive import Samples, run
+from monitor.commission.drive import SLOW_LATE_S, Samples, free_rows, run
 from monitor.kernels.ledger import WIDTHS
 from monitor.setup.build import Setup
 from monitor.setup.calibration import Model
@@ -31,11 +31,12 @@ def bent(setup: Setup, recordings: Sequence[Samples]) -> Model:
     The setup must open no event on the way (see `commission.band.without_limits`).
     """
     traces = [run(setup, one) for one in recordings]
+    unloaded = [free_rows(setup, one, SLOW_LATE_S) for one in recordings]
     v0, rated = setup.params["friction_velocity"][0], setup.params["rated"][0]
     model = setup.model
     coulomb, viscous, bend = model.coulomb.copy(), model.viscous.copy(), model.bend.copy()
     for i in range(setup.sizes.base, setup.sizes.n):
-        free = [(t.settling == 0) & (t.free[:, i] != 0) for t in traces]
+        free = [(t.settling == 0) & (rows[:, i] != 0) for t, rows in zip(traces, unloaded, strict=True)]
         v = np.concatenate([t.feature[k, i, 2][::_EVERY] for t, k in zip(traces, free, strict=True)])
         r = np.concatenate([t.r_slow[k, i][::_EVERY] for t, k in zip(traces, free, strict=True)])
         moves = np.abs(v) > _MOVES * v0[i]

@@ -36,7 +36,8 @@ def explanations(outline: Outline) -> list[Explanation]:
 def fill(
     family: int, index: int, feature: Floats, slope: Floats, M: Floats,
     body_axis: Ints, body_centre: Floats, foot_axis: Ints, foot_point: Floats, foot_radius: Floats,
-    up: Floats, load_axis: int, load_centre: Floats, parent: Ints, dof: Ints, S: Floats, V: Floats, Vd: Floats,
+    up: Floats, load_axis: int, load_centre: Floats, parent: Ints, dof: Ints,
+    S: Floats, V: Floats, Vd: Floats,
     R: Floats, p: Floats, H: Floats,
 ) -> None:  # fmt: skip
     """Fill the columns H (n,6) of a candidate: torque per unit of its parameters, as many as it has.
