@@ -48,7 +48,7 @@ _OF_BASE = [FLOOR, NOISE, INERTIA]
 # And the share of slow noise: what lasts is what legs hide.
 _BASE_NOISE, _BASE_SLOW = (0.5, 0.05), 0.05
 # Statistics that open events; each gets its share of the wanted rate.
-_STATISTICS = ("row", "body", "sums")
+_STATISTICS = ("row", "body", "sums", "foot")
 
 
 @dataclass(frozen=True)
@@ -86,8 +86,8 @@ class BandFit(NamedTuple):
     band : Band
         The band with limits for one false alarm per `wanted_s` of motion.
     tails : mapping of str to Tail
-        Of the square of the largest row (`row`), of all rows together (`body`) and of the sums (`sums`), by
-        blocks of a second.
+        Of the square of the largest row (`row`), of all rows together (`body`), of the sums (`sums`) and, for
+        walkers, of the feet (`foot`), by blocks of a second.
     judged_s, wanted_s : float
         Time that was judged, and the mean time between false alarms that the limits are for [s].
     """
@@ -107,7 +107,7 @@ class BandFit(NamedTuple):
 
     def in_words(self) -> str:
         """Return what the limits rest on."""
-        clusters = " and ".join(f"{self.tails[name].clusters} ({name})" for name in _STATISTICS)
+        clusters = " and ".join(f"{one.clusters} ({name})" for name, one in self.tails.items())
         text = (
             f"limits for one false alarm in {self.wanted_s:.4g} s rest on {self.judged_s:.4g} s of motion, "
             f"their tails on {clusters} clusters"
@@ -151,7 +151,9 @@ def fit_band(setup: Setup, recordings: Sequence[Samples], wanted_s: float) -> Ba
 
 def without_limits(band: Band) -> Band:
     """Return the band with limits that open no event: during one, friction would not be tracked."""
-    return replace(band, row_limit=_UNLIMITED, body_limit=_UNLIMITED, cusum_limit=_UNLIMITED)
+    return replace(
+        band, row_limit=_UNLIMITED, body_limit=_UNLIMITED, cusum_limit=_UNLIMITED, foot_limit=_UNLIMITED
+    )
 
 
 class _Seen(NamedTuple):
@@ -239,7 +241,9 @@ def _shape(setup: Setup, band: Band, recordings: Sequence[Samples], traces: Sequ
                 continue
             cause, r, known = (
                 np.concatenate([x[k, i] for x, k in zip(parts, taken, strict=True)])
-                for parts in zip(*((one.cause, getattr(one, name), getattr(one, no_cause)) for one in seen))
+                for parts in zip(
+                    *((one.cause, getattr(one, name), getattr(one, no_cause)) for one in seen), strict=True
+                )
             )
             weight[i] = 0.0
             weight[i, allowed] = _causes(cause[:, allowed], r, known, (_LEAST_FLOOR * rated[i]) ** 2)
@@ -374,7 +378,7 @@ def _block_maxima(x: Floats, length: int) -> Floats:
 
 
 def limited(setup: Setup, band: Band, recordings: Sequence[Samples], wanted_s: float) -> BandFit:
-    """Return the band with limits of its statistics for one false alarm per `wanted_s`, a third by each.
+    """Return the band with limits of its statistics for one false alarm per `wanted_s`, as many by each.
 
     Raises
     ------
@@ -392,22 +396,29 @@ def limited(setup: Setup, band: Band, recordings: Sequence[Samples], wanted_s: f
             f"at least {_LEAST_BLOCKS}",
             "Record longer: limits rest on what is rare.",
         )
-    tails = {name: tail([one[:, k] for one in blocks]) for k, name in enumerate(_STATISTICS)}
-    row, body, sums = (one.level(len(_STATISTICS) * wanted_s / _BLOCK_S) for one in tails.values())
+    names = _STATISTICS if setup.sizes.base and setup.sizes.F else _STATISTICS[:-1]
+    tails = {name: tail([one[:, k] for one in blocks]) for k, name in enumerate(names)}
+    row, body, sums, *foot = (one.level(len(names) * wanted_s / _BLOCK_S) for one in tails.values())
     limits = replace(
-        band, row_limit=max(math.sqrt(row), _LEAST_ROW), body_limit=body, cusum_limit=max(sums, _LEAST_CUSUM)
+        band,
+        row_limit=max(math.sqrt(row), _LEAST_ROW),
+        body_limit=body,
+        cusum_limit=max(sums, _LEAST_CUSUM),
+        foot_limit=foot[0] if foot else band.foot_limit,
     )
     return BandFit(limits, tails, count * _BLOCK_S, wanted_s)
 
 
 def _maxima(trace: Trace, length: int) -> Floats:
-    """Return the largest of each statistic (blocks,3) over blocks that are settled and judged all through.
+    """Return the largest of each statistic (blocks,4) over blocks that are settled and judged all through.
 
     The trace is one without limits. The square of a row is taken: of normal noise it has an exponential tail,
     as the other two.
     """
     row = np.where(trace.judged != 0, _UNLIMITED * trace.ratio, 0.0).max(axis=1)
-    statistics = np.column_stack([row**2, _UNLIMITED * trace.body_ratio, trace.cusum])
+    statistics = np.column_stack(
+        [row**2, _UNLIMITED * trace.body_ratio, trace.cusum, _UNLIMITED * trace.foot]
+    )
     counted = trace.settling == 0
     kept = _block_maxima(~counted, length) == 0
     return np.asarray(_block_maxima(statistics, length)[kept])

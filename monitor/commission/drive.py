@@ -52,7 +52,8 @@ class Trace(NamedTuple):
     """What the step made of it, by sample: residuals (T,n), causes (T,n,C), features, variances, ratios.
 
     alone (T,4,n) is what a row has beyond what all others predict, and its sd, see kernels/feet.py, fast and
-    slow. free (T,n) is 1 where a row feels no force that is not known, judged (n,) where one is judged.
+    slow. foot (T,) is how far the force of a foot that should be none stands out. free (T,n) is 1 where a row
+    feels no force that is not known, judged (n,) where one is judged.
     """
 
     r_fast: Floats
@@ -67,6 +68,7 @@ class Trace(NamedTuple):
     open: Ints
     settling: Ints
     alone: Floats
+    foot: Floats
     free: Ints
     judged: Ints
 
@@ -134,7 +136,7 @@ def _run(
     params: Block, inputs: Block, state: Block, outputs: Block,
     t_ns: Ints, q: Floats, qd: Floats, tau: Floats, base: Floats, feet: Ints,
     r_fast: Floats, r_slow: Floats, explained: Floats, cause: Floats, feature: Floats, variance: Floats,
-    ratio: Floats, body: Floats, cusum: Floats, is_open: Ints, settling: Ints, alone: Floats,
+    ratio: Floats, body: Floats, cusum: Floats, is_open: Ints, settling: Ints, alone: Floats, foot: Floats,
 ) -> None:  # fmt: skip
     s, out = state[0], outputs[0]
     for k in range(t_ns.shape[0]):
@@ -158,6 +160,7 @@ def _run(
         alone[k, 1] = s["alone_sd"]
         alone[k, 2] = s["alone_slow"][0]
         alone[k, 3] = s["alone_slow"][1]
+        foot[k] = s["foot_lasts"]
 
 
 def ready(setup: Setup, samples: Samples) -> Blocks:
@@ -207,6 +210,7 @@ def run(setup: Setup, samples: Samples, judge_base: bool = True) -> Trace:
         open=np.zeros(T, np.int64),
         settling=np.zeros(T, np.int64),
         alone=np.zeros((T, 4, n)),
+        foot=np.zeros(T),
         free=free,
         judged=blocks.inputs["judged"][0].copy(),
     )

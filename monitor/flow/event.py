@@ -103,8 +103,7 @@ def _beside_feet(params: Block, inputs: Block, state: Block, outputs: Block) -> 
         out["band_fast"][i] = c["row_limit"] * s["alone_sd"][i]
         out["ratio"][i] = max(abs(s["alone"][i]) / out["band_fast"][i], s["slow_ratio"][i])
     s["body_ratio"] = max(s["body_ratio"] / share, s["slow_body_ratio"])
-    s["body_ratio"] = max(s["body_ratio"], feet.forces(params, state, outputs))
-    out["body_ratio"] = s["body_ratio"]
+    feet.forces(params, state, outputs)
 
 
 @kernel
@@ -149,7 +148,7 @@ def judge(params: Block, inputs: Block, state: Block, outputs: Block) -> None:
     drifted = _sum_up(params, inputs, state)
     lost = feet.lost(params, inputs, state, outputs)
     row = band.largest(out["ratio"], x["judged"])
-    ratio = max(out["ratio"][row], s["body_ratio"]) if row >= 0 else 0.0
+    ratio = max(out["ratio"][row], s["body_ratio"], s["foot_lasts"]) if row >= 0 else 0.0
     if max(ratio, s["foot_now"]) < c["onset_ratio"] and lost < 0:
         s["event_quiet_ns"] = t_ns
     s["step_due"] = 1 if _remember(params, state) else 0

@@ -67,16 +67,14 @@ def dofs_taken(state: Block) -> int:
 
 
 @kernel
-def forces(params: Block, state: Block, outputs: Block) -> float:
-    """Fill the forces of feet, and what they leave over; return how far those stand out that should be none,
-    as a share of their limit.
+def forces(params: Block, state: Block, outputs: Block) -> None:
+    """Fill the forces of feet, what they leave over, and how far those stand out that should be none.
 
     That of a foot which is not planned to stand counts once it has lasted for a while: feet meet ground some
     milliseconds before they are planned to.
     """
     c, s, out = params[0], state[0], outputs[0]
-    largest = 0.0
-    s["foot_now"] = 0.0
+    s["foot_lasts"], s["foot_now"] = 0.0, 0.0
     s["beside"][:] = s["left"]
     for f in range(s["foot_carries"].shape[0]):
         if s["grounded"] == 0:
@@ -96,13 +94,12 @@ def forces(params: Block, state: Block, outputs: Block) -> float:
                     s["beside"][i] -= s["foot_J"][f, k, i] * out["foot_force"][f, k]
         else:
             ratio = feet.standing_out(out["foot_force"][f], s["foot_covariance"])
-            ratio /= c["foot_share"] * c["body_limit"]
+            ratio /= c["foot_limit"]
         s["foot_now"] = max(s["foot_now"], ratio)
-        largest = max(
-            largest,
+        s["foot_lasts"] = max(
+            s["foot_lasts"],
             _lasting(ratio, s["at_ns"], c["foot_early_ns"], s["foot_ratio"][f], s["foot_ratio_ns"][f]),
         )
-    return largest
 
 
 @kernel

@@ -286,8 +286,8 @@ def params_fields(s: Sizes) -> list[Field]:
         ("foot_lost_ns", i8, ()),  # and may be without force for so long
         ("foothold_of", i8, (s.F,)),  # explanation of a lost foothold, by foot
         ("foot_early_ns", i8, ()),  # a foot may meet ground so long before it is planned to
-        ("foot_share", f8, ()),  # of body_limit: for the three components of the force of a foot
-        ("body_share", f8, (s.F + 1,)),  # of it, by feet on the ground: each takes three from what is judged
+        ("foot_limit", f8, ()),  # of the squared normalised force of a foot that should feel none
+        ("body_share", f8, (s.F + 1,)),  # of body_limit, by feet on the ground: each takes three components
         ("load_axis", i8, ()),
         ("load_centre", f8, (3,)),
         ("other_sd", f8, (n,)),  # N m: of something else
@@ -507,6 +507,7 @@ def state_fields(s: Sizes) -> list[Field]:
         ("foot_covariance", f8, (3, 3)),
         ("foot_ratio", f8, (s.F, 3)),  # how far the force of a foot stands out, least of the last moments
         ("foot_ratio_ns", i8, (s.F, 3)),
+        ("foot_lasts", f8, ()),  # the largest of those least ones
         ("foot_now", f8, ()),  # the largest of this sample, however short
         ("grounded", i8, ()),
         ("slow_ratio", f8, (n,)),  # as outputs.ratio, of the slow residual at the last evidence step

@@ -72,6 +72,8 @@ class Band:
         How far the model is off for a second or more [N m]; the sums count it beside the noise.
     cusum_limit : float
         Sum of normalised block means, less the reference, that opens an event.
+    foot_limit : float
+        Squared normalised force of a foot that should feel none, that opens an event.
     """
 
     fast: Floats
@@ -83,6 +85,7 @@ class Band:
     body_limit: float
     cusum_sd: Floats
     cusum_limit: float
+    foot_limit: float
 
 
 @dataclass(frozen=True, eq=False)
@@ -128,6 +131,7 @@ def default_band(rated: Floats, coulomb: Floats, viscous: Floats) -> Band:
         body_limit=body_limit(n),
         cusum_sd=_LASTING * rated,
         cusum_limit=CUSUM_LIMIT,
+        foot_limit=body_limit(3),
     )
 
 
@@ -169,6 +173,7 @@ class _BandTable(Table):
     body_limit: float = Field(description="Limit of all rows together.", gt=0)
     cusum_sd: Row = Field(description="Lasting error of the model of each row [N m].")
     cusum_limit: float = Field(description="Limit of the sums.", gt=0)
+    foot_limit: float = Field(description="Limit of the force of a foot that should feel none.", gt=0)
 
 
 class _File(Table):
@@ -305,7 +310,11 @@ def _band(where: str, table: _BandTable, n: int) -> Band:
             "a correlation matrix: symmetric, ones on the diagonal, positive definite",
         )
     return Band(
-        **arrays, row_limit=table.row_limit, body_limit=table.body_limit, cusum_limit=table.cusum_limit
+        **arrays,
+        row_limit=table.row_limit,
+        body_limit=table.body_limit,
+        cusum_limit=table.cusum_limit,
+        foot_limit=table.foot_limit,
     )
 
 

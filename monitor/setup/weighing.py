@@ -171,6 +171,7 @@ def fill_band(params: Any, band: Band) -> None:
     params["track_sd"] = band.track_sd
     params["row_limit"], params["body_limit"] = band.row_limit, band.body_limit
     params["cusum_sd"], params["cusum_limit"] = band.cusum_sd, band.cusum_limit
+    params["foot_limit"] = band.foot_limit
     params["cusum_reference"] = 2.0
     params["quiet_ratio"], params["onset_ratio"] = 0.6, 0.4
     params["hold_s"], params["model_error"] = HOLD_S, MODEL_ERROR
@@ -251,7 +252,6 @@ def _fill_feet(params: Any, tree: Tree, config: Config) -> None:
     params["foot_lands_ns"] = round(1e9 * watch.foot_landing_s)
     params["foot_lost_ns"] = round(1e9 * watch.foot_lost_s)
     params["foot_early_ns"] = round(1e9 * watch.foot_early_s)
-    params["foot_share"] = body_limit(3) / body_limit(tree.n)
     for feet in range(len(config.robot.foot) + 1):
         params["body_share"][0, feet] = body_limit(max(tree.n - 3 * feet, 1)) / body_limit(tree.n)
 
