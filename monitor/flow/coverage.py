@@ -158,10 +158,10 @@ class ConditionKeeper:
     def _may_judge(self) -> bool:
         """Return whether unexplained torque means anything: not calibrating, nor held by unknown forces."""
         known = self._condition
-        if self._facts.floating and (
-            known is None or self._stale or known.support not in ("ground", "hoisted", "carried")
-        ):
-            return False
+        if self._facts.floating:
+            support = None if known is None or self._stale else known.support
+            if support not in ("ground", "hoisted", "carried") or (support == "ground" and self._feet_unknown):
+                return False
         return known is None or known.mode != "calibrating"
 
     def _joint(self, i: int) -> tuple[Coverage, Reason]:
@@ -183,10 +183,10 @@ class ConditionKeeper:
             return Coverage.CONDITIONAL, Reason.CONDITION_UNKNOWN
         if self._facts.floating and known.support in _HELD:
             return Coverage.CONDITIONAL, Reason.HELD
-        if not known.payload_known or (known.payload is not None and self._facts.tool is None):
-            return Coverage.CONDITIONAL, Reason.PAYLOAD_UNKNOWN
         if self._feet_unknown:
             return Coverage.CONDITIONAL, Reason.FEET_UNKNOWN
+        if not known.payload_known or (known.payload is not None and self._facts.tool is None):
+            return Coverage.CONDITIONAL, Reason.PAYLOAD_UNKNOWN
         if self._since_start:
             return Coverage.CONDITIONAL, Reason.SINCE_START
         return Coverage.WATCHING, Reason.NONE

@@ -463,7 +463,7 @@ def posterior(params: Block, state: Block, outputs: Block) -> None:
     for k in range(s["smooth_log"].shape[0]):
         p[2 + c["smooth_of"][k]] += math.exp(s["smooth_log"][k] - top + c["smooth_share"][k])
     for f in range(s["foothold_log"].shape[0]):
-        p[2 + c["foothold_of"][f]] = math.exp(s["null_log"] + s["foothold_log"][f] - top)
+        p[2 + c["foothold_of"][f]] += math.exp(s["null_log"] + s["foothold_log"][f] - top)
     total = 0.0
     for i in range(X):
         p[i] *= math.exp(c["log_rate"][i])

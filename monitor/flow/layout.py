@@ -137,9 +137,9 @@ class Reason(IntEnum):
     CALIBRATING = 8
     STOPPED = 9  # a stop is in force: the drives may be braking or about to lose power
     HELD = 10  # floating base: people or a dock hold the body, with forces nobody knows
-    PAYLOAD_UNKNOWN = 11
-    SINCE_START = 12  # something was there already when the judgement began
-    FEET_UNKNOWN = 13  # on the ground, and nobody says which feet are planned to stand
+    FEET_UNKNOWN = 11  # on the ground, and nobody says which feet are planned to stand
+    PAYLOAD_UNKNOWN = 12
+    SINCE_START = 13  # something was there already when the judgement began
 
 
 class Notice(IntEnum):
