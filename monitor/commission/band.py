@@ -48,7 +48,7 @@ _OF_BASE = [FLOOR, NOISE, INERTIA]
 # And the share of slow noise: what lasts is what legs hide.
 _BASE_NOISE, _BASE_SLOW = (0.5, 0.05), 0.05
 # Statistics that open events; each gets its share of the wanted rate.
-_STATISTICS = ("row", "body", "sums", "foot")
+_STATISTICS = ("row", "body", "sums", "slow", "foot")
 
 
 @dataclass(frozen=True)
@@ -87,7 +87,7 @@ class BandFit(NamedTuple):
         The band with limits for one false alarm per `wanted_s` of motion.
     tails : mapping of str to Tail
         Of the square of the largest row (`row`), of all rows together (`body`), of the sums (`sums`) and, for
-        walkers, of the feet (`foot`), by blocks of a second.
+        walkers, of all rows' slow residual (`slow`) and of feet (`foot`), by blocks of a second.
     judged_s, wanted_s : float
         Time that was judged, and the mean time between false alarms that the limits are for [s].
     """
@@ -152,8 +152,9 @@ def fit_band(setup: Setup, recordings: Sequence[Samples], wanted_s: float) -> Ba
 def without_limits(band: Band) -> Band:
     """Return the band with limits that open no event: during one, friction would not be tracked."""
     return replace(
-        band, row_limit=_UNLIMITED, body_limit=_UNLIMITED, cusum_limit=_UNLIMITED, foot_limit=_UNLIMITED
-    )
+        band, row_limit=_UNLIMITED, body_limit=_UNLIMITED, cusum_limit=_UNLIMITED,
+        slow_limit=_UNLIMITED, foot_limit=_UNLIMITED,
+    )  # fmt: skip
 
 
 class _Seen(NamedTuple):
@@ -396,7 +397,7 @@ def limited(setup: Setup, band: Band, recordings: Sequence[Samples], wanted_s: f
             f"at least {_LEAST_BLOCKS}",
             "Record longer: limits rest on what is rare.",
         )
-    names = _STATISTICS if setup.sizes.base and setup.sizes.F else _STATISTICS[:-1]
+    names = _STATISTICS if setup.sizes.base and setup.sizes.F else _STATISTICS[:3]
     tails = {name: tail([one[:, k] for one in blocks]) for k, name in enumerate(names)}
     row, body, sums, *foot = (one.level(len(names) * wanted_s / _BLOCK_S) for one in tails.values())
     limits = replace(
@@ -404,20 +405,21 @@ def limited(setup: Setup, band: Band, recordings: Sequence[Samples], wanted_s: f
         row_limit=max(math.sqrt(row), _LEAST_ROW),
         body_limit=body,
         cusum_limit=max(sums, _LEAST_CUSUM),
-        foot_limit=foot[0] if foot else band.foot_limit,
+        slow_limit=foot[0] if foot else band.slow_limit,
+        foot_limit=foot[1] if foot else band.foot_limit,
     )
     return BandFit(limits, tails, count * _BLOCK_S, wanted_s)
 
 
 def _maxima(trace: Trace, length: int) -> Floats:
-    """Return the largest of each statistic (blocks,4) over blocks that are settled and judged all through.
+    """Return the largest of each statistic (blocks,5) over blocks that are settled and judged all through.
 
     The trace is one without limits. The square of a row is taken: of normal noise it has an exponential tail,
     as the other two.
     """
     row = np.where(trace.judged != 0, _UNLIMITED * trace.ratio, 0.0).max(axis=1)
     statistics = np.column_stack(
-        [row**2, _UNLIMITED * trace.body_ratio, trace.cusum, _UNLIMITED * trace.foot]
+        [row**2, _UNLIMITED * trace.body_ratio, trace.cusum, *(_UNLIMITED * trace.foot.T)]
     )
     counted = trace.settling == 0
     kept = _block_maxima(~counted, length) == 0

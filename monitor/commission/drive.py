@@ -52,8 +52,8 @@ class Trace(NamedTuple):
     """What the step made of it, by sample: residuals (T,n), causes (T,n,C), features, variances, ratios.
 
     alone (T,4,n) is what a row has beyond what all others predict, and its sd, see kernels/feet.py, fast and
-    slow. foot (T,) is how far the force of a foot that should be none stands out. free (T,n) is 1 where a row
-    feels no force that is not known, judged (n,) where one is judged.
+    slow. foot (T,2) is how far the slow residual of all rows stands out beside feet, and the force of a
+    foot that should be none. free (T,n) is 1 where a row feels no force that is not known, judged (n,) where one is judged.
     """
 
     r_fast: Floats
@@ -160,7 +160,8 @@ def _run(
         alone[k, 1] = s["alone_sd"]
         alone[k, 2] = s["alone_slow"][0]
         alone[k, 3] = s["alone_slow"][1]
-        foot[k] = s["foot_lasts"]
+        foot[k, 0] = s["slow_body_ratio"]
+        foot[k, 1] = s["foot_lasts"]
 
 
 def ready(setup: Setup, samples: Samples) -> Blocks:
@@ -210,7 +211,7 @@ def run(setup: Setup, samples: Samples, judge_base: bool = True) -> Trace:
         open=np.zeros(T, np.int64),
         settling=np.zeros(T, np.int64),
         alone=np.zeros((T, 4, n)),
-        foot=np.zeros(T),
+        foot=np.zeros((T, 2)),
         free=free,
         judged=blocks.inputs["judged"][0].copy(),
     )

@@ -160,7 +160,9 @@ class ConditionKeeper:
         known = self._condition
         if self._facts.floating:
             support = None if known is None or self._stale else known.support
-            if support not in ("ground", "hoisted", "carried") or (support == "ground" and self._feet_unknown):
+            if support not in ("ground", "hoisted", "carried") or (
+                support == "ground" and self._feet_unknown
+            ):
                 return False
         return known is None or known.mode != "calibrating"
 

@@ -80,19 +80,19 @@ def _beside_feet(params: Block, inputs: Block, state: Block, outputs: Block) -> 
             s["white"][i] = s["explained_var"][i] + c["cusum_sd"][i] ** 2
             if x["judged"][i] == 0:
                 s["white"][i] += band.BLIND * c["rated"][i] ** 2
-        band.covariance(s["var_slow"], c["rho"], s["white"], s["x_R"])
-        lasting.widen(state, s["x_R"])
-        feet.widen(params, state, s["x_R"])
-        evidence.factor(s["x_R"], s["x_factor"])
+        band.covariance(s["var_slow"], c["rho"], s["white"], s["slow_R"])
+        lasting.widen(state, s["slow_R"])
+        feet.widen(params, state, s["slow_R"])
+        evidence.factor(s["slow_R"], s["slow_factor"])
         for i in range(n):
             s["white"][i] = s["r_slow"][i] - s["explained"][i]
-        evidence.whiten(s["x_factor"], s["white"])
-        feet_kernels.invert(s["x_factor"], s["inverse"])
+        evidence.whiten(s["slow_factor"], s["white"])
+        feet_kernels.invert(s["slow_factor"], s["inverse"])
         feet_kernels.pulls(s["inverse"], s["white"], s["pull"], s["alone"], s["alone_sd"])
         s["slow_body_ratio"] = 0.0
         for i in range(n):
             s["slow_ratio"][i] = abs(s["alone"][i]) / (c["row_limit"] * s["alone_sd"][i])
-            s["slow_body_ratio"] += s["white"][i] ** 2 / (share * c["body_limit"])
+            s["slow_body_ratio"] += s["white"][i] ** 2 / (share * c["slow_limit"])
             out["band_slow"][i] = c["row_limit"] * s["alone_sd"][i]
             s["alone_slow"][0, i], s["alone_slow"][1, i] = s["alone"][i], s["alone_sd"][i]
         s["white"][:] = s["left"]
@@ -102,7 +102,7 @@ def _beside_feet(params: Block, inputs: Block, state: Block, outputs: Block) -> 
     for i in range(n):
         out["band_fast"][i] = c["row_limit"] * s["alone_sd"][i]
         out["ratio"][i] = max(abs(s["alone"][i]) / out["band_fast"][i], s["slow_ratio"][i])
-    s["body_ratio"] = max(s["body_ratio"] / share, s["slow_body_ratio"])
+    s["body_ratio"] /= share
     feet.forces(params, state, outputs)
 
 
@@ -143,12 +143,16 @@ def judge(params: Block, inputs: Block, state: Block, outputs: Block) -> None:
             end(state, outputs)
         s["ring_held"] = 0
         s["sampled"] = 0
+        s["slow_ratio"][:] = 0.0
+        s["slow_body_ratio"] = 0.0
         s["event_quiet_ns"] = t_ns
         return
     drifted = _sum_up(params, inputs, state)
     lost = feet.lost(params, inputs, state, outputs)
     row = band.largest(out["ratio"], x["judged"])
-    ratio = max(out["ratio"][row], s["body_ratio"], s["foot_lasts"]) if row >= 0 else 0.0
+    ratio = 0.0
+    if row >= 0:
+        ratio = max(out["ratio"][row], s["body_ratio"], s["slow_body_ratio"], s["foot_lasts"])
     if max(ratio, s["foot_now"]) < c["onset_ratio"] and lost < 0:
         s["event_quiet_ns"] = t_ns
     s["step_due"] = 1 if _remember(params, state) else 0

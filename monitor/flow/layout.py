@@ -286,6 +286,7 @@ def params_fields(s: Sizes) -> list[Field]:
         ("foot_lost_ns", i8, ()),  # and may be without force for so long
         ("foothold_of", i8, (s.F,)),  # explanation of a lost foothold, by foot
         ("foot_early_ns", i8, ()),  # a foot may meet ground so long before it is planned to
+        ("slow_limit", f8, ()),  # as body_limit, of the slow residual of a walker
         ("foot_limit", f8, ()),  # of the squared normalised force of a foot that should feel none
         ("body_share", f8, (s.F + 1,)),  # of body_limit, by feet on the ground: each takes three components
         ("load_axis", i8, ()),
@@ -501,7 +502,8 @@ def state_fields(s: Sizes) -> list[Field]:
         ("alone", f8, (n,)),  # N m: what a row has more than all others predict; and its sd
         ("alone_sd", f8, (n,)),
         ("alone_slow", f8, (2, n)),  # the same of the slow residual, at the last evidence step
-        ("x_R", f8, (n, n)),
+        ("slow_R", f8, (n, n)),
+        ("slow_factor", f8, (n, n)),
         ("pull", f8, (n,)),  # R^-1 left
         ("foot_white", f8, (3, n)),
         ("foot_covariance", f8, (3, 3)),

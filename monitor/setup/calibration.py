@@ -72,6 +72,8 @@ class Band:
         How far the model is off for a second or more [N m]; the sums count it beside the noise.
     cusum_limit : float
         Sum of normalised block means, less the reference, that opens an event.
+    slow_limit : float
+        As `body_limit`, of the slow residual of a walker.
     foot_limit : float
         Squared normalised force of a foot that should feel none, that opens an event.
     """
@@ -85,6 +87,7 @@ class Band:
     body_limit: float
     cusum_sd: Floats
     cusum_limit: float
+    slow_limit: float
     foot_limit: float
 
 
@@ -131,6 +134,7 @@ def default_band(rated: Floats, coulomb: Floats, viscous: Floats) -> Band:
         body_limit=body_limit(n),
         cusum_sd=_LASTING * rated,
         cusum_limit=CUSUM_LIMIT,
+        slow_limit=body_limit(n),
         foot_limit=body_limit(3),
     )
 
@@ -173,6 +177,7 @@ class _BandTable(Table):
     body_limit: float = Field(description="Limit of all rows together.", gt=0)
     cusum_sd: Row = Field(description="Lasting error of the model of each row [N m].")
     cusum_limit: float = Field(description="Limit of the sums.", gt=0)
+    slow_limit: float = Field(description="Limit of all rows together, slow residual.", gt=0)
     foot_limit: float = Field(description="Limit of the force of a foot that should feel none.", gt=0)
 
 
@@ -314,6 +319,7 @@ def _band(where: str, table: _BandTable, n: int) -> Band:
         row_limit=table.row_limit,
         body_limit=table.body_limit,
         cusum_limit=table.cusum_limit,
+        slow_limit=table.slow_limit,
         foot_limit=table.foot_limit,
     )
 

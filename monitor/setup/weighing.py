@@ -21,15 +21,16 @@ from monitor.setup.config import Config
 
 Floats = NDArray[np.float64]
 
-EVIDENCE_S = 0.004  # between evidence steps
 SLOW_S = 1.5  # correlation of slow noise
-STAGES = 4
+# Rhythm of evidence by degrees of freedom: time between steps [s], stages of a step
+# A walker has many more candidates, and each costs more; no sample may cost too much.
+RHYTHM = {10: (0.004, 4), 1000: (0.008, 16)}
 BLOCK_S = 0.1  # of the sums
 HOLD_S = 0.03
 LEAST = 0.12  # prior sd: smaller ones are no fault
 MODEL_ERROR = 0.03
 TRACK_S = 120.0
-TRACK_NOISE = 20.0
+TRACK_NOISE_S = 0.08  # as long the noise of friction tracking counts as one
 TRACK_CLIP = 2.5
 OTHER = 0.2  # of rated
 # Postures that are tried, and the share below which a change is rounding.
@@ -171,7 +172,7 @@ def fill_band(params: Any, band: Band) -> None:
     params["track_sd"] = band.track_sd
     params["row_limit"], params["body_limit"] = band.row_limit, band.body_limit
     params["cusum_sd"], params["cusum_limit"] = band.cusum_sd, band.cusum_limit
-    params["foot_limit"] = band.foot_limit
+    params["slow_limit"], params["foot_limit"] = band.slow_limit, band.foot_limit
     params["cusum_reference"] = 2.0
     params["quiet_ratio"], params["onset_ratio"] = 0.6, 0.4
     params["hold_s"], params["model_error"] = HOLD_S, MODEL_ERROR
@@ -180,14 +181,15 @@ def fill_band(params: Any, band: Band) -> None:
 def fill_evidence(params: Any, tree: Tree, config: Config, found: Candidates) -> None:
     """Set the rhythm of evidence, the bodies, the candidates and their rates."""
     period_s = 1.0 / config.input.rate_hz
-    samples = max(1, round(EVIDENCE_S / period_s))
+    between_s, stages = next(rhythm for most, rhythm in RHYTHM.items() if tree.n <= most)
+    samples = max(1, round(between_s / period_s))
     dt = samples * period_s
-    params["evidence_samples"], params["evidence_stages"] = samples, STAGES
+    params["evidence_samples"], params["evidence_stages"] = samples, stages
     params["column_lag"] = round(_lag_s(params) / dt)
-    params["stages_at_once"] = math.ceil(STAGES / samples)
+    params["stages_at_once"] = math.ceil(stages / samples)
     params["slow_keep"] = math.exp(-dt / SLOW_S)
     params["track_keep"] = math.exp(-dt / TRACK_S)
-    params["track_noise"], params["track_clip"] = TRACK_NOISE, TRACK_CLIP
+    params["track_noise"], params["track_clip"] = TRACK_NOISE_S / between_s, TRACK_CLIP
     params["least"] = LEAST
     params["cusum_samples"] = max(1, round(BLOCK_S / period_s))
     params["other_sd"] = OTHER * params["rated"]
