@@ -53,7 +53,8 @@ class Trace(NamedTuple):
 
     alone (T,4,n) is what a row has beyond what all others predict, and its sd, see kernels/feet.py, fast and
     slow. foot (T,2) is how far the slow residual of all rows stands out beside feet, and the force of a
-    foot that should be none. free (T,n) is 1 where a row feels no force that is not known, judged (n,) where one is judged.
+    foot that should be none. free (T,n) is 1 where a row feels no force that is not known, judged (n,)
+    where one is judged.
     """
 
     r_fast: Floats

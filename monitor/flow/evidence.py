@@ -8,7 +8,7 @@ from __future__ import annotations
 
 import math
 
-from monitor.explain import ACTUATOR, CONTACT, TOUCHDOWN, fill
+from monitor.explain import ACTUATOR, CONTACT, FOOTHOLD, TOUCHDOWN, fill
 from monitor.flow import feet, lasting
 from monitor.flow.layout import RING, Block, Notice
 from monitor.kernels import band
@@ -21,6 +21,8 @@ _STEP = 1e-5  # rad or m: for the slope of inverse dynamics
 _IMPOSSIBLE = -1e9  # a log evidence
 _RISE_S = 0.005  # of the fast residual
 _KNOWN_NS = 40_000_000  # certainty for so long suffices for what is known
+_FOOT_NS = 12_000_000  # certainty for so long suffices for what a foot met or missed
+_SHIFTS = 0.3
 _BEFORE = 10  # entries before the onset that tell the slow noise
 _PAUSE_NS = 50_000_000
 _NEAR = 0.1  # a smooth cause begins so near zero, in prior sd
@@ -150,6 +152,10 @@ def _conclude(params: Block, inputs: Block, state: Block, outputs: Block) -> boo
     if s["sure_of"] != best:
         s["sure_of"], s["sure_since_ns"] = best, s["at_ns"]
     sure_ns = s["at_ns"] - s["sure_since_ns"]
+    family = c["of_family"][best]
+    if (family in (TOUCHDOWN, FOOTHOLD)) and sure_ns > _FOOT_NS:
+        s["concluded"] = 1  # what follows is a stumble
+        return False
     known = lasting.slot_of(params, state, best) >= 0
     if known and sure_ns > _KNOWN_NS:
         return lasting.confirm(params, state, outputs, best)
@@ -240,6 +246,8 @@ def _prepare(params: Block, inputs: Block, state: Block) -> None:
 def _noise(params: Block, inputs: Block, state: Block, entry: int) -> None:
     """Fill R, the fast part of the noise at one entry, and x_d, the sd of the slow part."""
     c, x, s = params[0], inputs[0], state[0]
+    # What a joint hides that stands stays as it is; under a foot it changes with every shift of load.
+    stuck = 0.01 if c["rated"].shape[0] == c["tau_lag"].shape[0] else _SHIFTS
     for i in range(s["x_d"].shape[0]):
         stands = s["ring_stand"][entry, i]
         var = s["ring_var"][entry, i] - stands
@@ -247,7 +255,7 @@ def _noise(params: Block, inputs: Block, state: Block, entry: int) -> None:
         rough = (c["model_error"] * s["ring_beside"][entry, i]) ** 2
         slow = c["slow_share"][i] * var + stands + s["ring_extra"][entry, i] + c["cusum_sd"][i] ** 2
         s["x_d"][i] = math.sqrt(slow + rough)
-        s["x_y"][i] = (1.0 - c["slow_share"][i]) * var + 0.01 * stands
+        s["x_y"][i] = (1.0 - c["slow_share"][i]) * var + stuck * stands
         s["x_spread"][i] = rough / 16.0
         if x["judged"][i] == 0:
             s["x_spread"][i] += band.BLIND * c["rated"][i] ** 2

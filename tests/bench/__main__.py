@@ -1,4 +1,4 @@
-"""All benchmarks, side by side in one run, as ratios:  python -m tests.bench [dynamics|sample|replay|minute]
+"""All benchmarks, as ratios:  python -m tests.bench [dynamics|evidence|sample|replay|minute]
 
 Speed is reported here and asserted nowhere: a shared machine makes times, not ratios, wander.
 """
@@ -7,9 +7,15 @@ from __future__ import annotations
 
 import sys
 
-from tests.bench import dynamics, minute, replay, sample
+from tests.bench import dynamics, evidence, minute, replay, sample
 
-PARTS = {"dynamics": dynamics.run, "sample": sample.run, "replay": replay.run, "minute": minute.run}
+PARTS = {
+    "dynamics": dynamics.run,
+    "evidence": evidence.run,
+    "sample": sample.run,
+    "replay": replay.run,
+    "minute": minute.run,
+}
 
 
 def main() -> None:

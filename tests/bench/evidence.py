@@ -73,7 +73,6 @@ def _dynamics_us(setup: Setup) -> float:
     robot = Robot(setup.tree, setup.config.robot.gravity_vector)
     q, v = np.zeros(setup.tree.nq), np.zeros(setup.tree.n)
     q[3 if setup.sizes.base else 0] = 1.0
-    M, C, g = robot.dynamics(q, v)
     start, count = time.perf_counter_ns(), 20_000
     for _ in range(count):
         robot.dynamics(q, v)
@@ -88,11 +87,9 @@ def run() -> None:
         dynamics = _dynamics_us(setup)
         quiet, busy = took[~weighing], took[weighing]
         print(f"{name}: Robot.dynamics {dynamics:.1f} µs")
-        print(
-            f"  quiet {np.median(quiet):.1f} µs a sample (aim {quiet_bar:g}), {np.median(quiet) / dynamics:.1f} times that"
-        )
+        typical = np.median(quiet)
+        print(f"  quiet {typical:.1f} µs a sample (aim {quiet_bar:g}): {typical / dynamics:.1f} times that")
         if len(busy):
-            print(
-                f"  event open {busy.mean():.0f} µs on average (aim {open_bar:g}), {busy.mean() / dynamics:.0f} times that; "
-                f"99 % {np.quantile(busy, 0.99):.0f}, slowest {busy.max():.0f} µs (aim 250), of {len(busy)}"
-            )
+            mean, most = busy.mean(), np.quantile(busy, 0.99)
+            print(f"  event open {mean:.0f} µs (aim {open_bar:g}): {mean / dynamics:.0f} times that")
+            print(f"  99 % at most {most:.0f} µs, slowest {busy.max():.0f} µs (aim 250) of {len(busy)}")
