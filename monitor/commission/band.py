@@ -16,9 +16,9 @@ import numpy as np
 from numpy.typing import NDArray
 from scipy.optimize import minimize_scalar, nnls
 
-from monitor.commission.drive import Samples, Trace, run
+from monitor.commission.drive import SLOW_LATE_S, Samples, Trace, free_rows, run
 from monitor.errors import SessionError
-from monitor.kernels.band import FLOOR, STANDS, STANDS_SQUARED
+from monitor.kernels.band import BLIND, FLOOR, INERTIA, NOISE, STANDS, STANDS_SQUARED
 from monitor.setup.build import Setup
 from monitor.setup.calibration import Band
 from monitor.setup.weighing import SLOW_S
@@ -42,8 +42,13 @@ _SHAPE_SD, _LARGEST_SHAPE = 0.1, 0.3
 _REVERSALS = [STANDS, STANDS_SQUARED]
 _CALM, _TOLERANCE, _LARGEST_WIDENING, _REFERENCE_BLOCKS = 0.02, 1.15, 64.0, 2000.0
 _WIDENING_EVERY = 4
+# Causes of a base, which has neither drives nor friction (the floor comes first, see `_causes`).
+_OF_BASE = [FLOOR, NOISE, INERTIA]
+# Least weights of its sensors' noise, fast and slow: legs that stand may seem to explain all of a residual.
+# And the share of slow noise: what lasts is what legs hide.
+_BASE_NOISE, _BASE_SLOW = (0.5, 0.05), 0.05
 # Statistics that open events; each gets its share of the wanted rate.
-_STATISTICS = ("row", "slow", "body", "sums")
+_STATISTICS = ("row", "slow", "body", "sums", "slow_body", "foot")
 
 
 @dataclass(frozen=True)
@@ -81,8 +86,9 @@ class BandFit(NamedTuple):
     band : Band
         The band with limits for one false alarm per `wanted_s` of motion.
     tails : mapping of str to Tail
-        Of the square of the largest row, fast and slow (`row`, `slow`), of all rows together (`body`) and of
-        the sums (`sums`), by blocks of a second.
+        Of the square of the largest row, fast and slow (`row`, `slow`), of all rows together (`body`), of the
+        sums (`sums`) and, for walkers, of all rows' slow residual (`slow_body`) and of feet (`foot`), by
+        blocks of a second.
     judged_s, wanted_s : float
         Time that was judged, and the mean time between false alarms that the limits are for [s].
     """
@@ -102,7 +108,7 @@ class BandFit(NamedTuple):
 
     def in_words(self) -> str:
         """Return what the limits rest on."""
-        clusters = " and ".join(f"{self.tails[name].clusters} ({name})" for name in _STATISTICS)
+        clusters = " and ".join(f"{one.clusters} ({name})" for name, one in self.tails.items())
         text = (
             f"limits for one false alarm in {self.wanted_s:.4g} s rest on {self.judged_s:.4g} s of motion, "
             f"their tails on {clusters} clusters"
@@ -135,58 +141,141 @@ def fit_band(setup: Setup, recordings: Sequence[Samples], wanted_s: float) -> Ba
     band = without_limits(setup.band)
     for _ in range(2):
         # Tracked friction depends a little on the band, so once more.
-        band = _shape(setup, band, [run(setup.with_band(band), one) for one in recordings])
+        band = _shape(
+            setup, band, recordings, [run(setup.with_band(band), one, judge_base=False) for one in recordings]
+        )
+    standing = [one for one in recordings if not one.hoisted]
+    if setup.sizes.base and standing:
+        band = _base_floor(setup, band, standing)
     return limited(setup, band, recordings, wanted_s)
 
 
 def without_limits(band: Band) -> Band:
     """Return the band with limits that open no event: during one, friction would not be tracked."""
     far = _UNLIMITED
-    return replace(band, row_limit=far, slow_limit=far, body_limit=far, cusum_limit=far)
+    return replace(
+        band,
+        row_limit=far,
+        slow_limit=far,
+        body_limit=far,
+        cusum_limit=far,
+        slow_body_limit=far,
+        foot_limit=far,
+    )
 
 
 class _Seen(NamedTuple):
     """What a trace shows: residuals with what friction explains taken off, all (T,n) but cause (T,n,C).
 
-    `known` is the part of the variance that is no cause; `counted` says which rows count.
+    `known` is the part of the variance that is no cause, and of the slow residual's; `counted` says which
+    rows count, `counted_slow` the same of the slow one.
     """
 
     cause: Floats
     fast: Floats
     slow: Floats
     known: Floats
+    known_slow: Floats
     counted: Bools
+    counted_slow: Bools
 
 
-def _seen(trace: Trace) -> _Seen:
+def _seen(setup: Setup, samples: Samples, trace: Trace) -> _Seen:
     explained, known = trace.explained, trace.variance[:, 2]
-    counted = (trace.settling == 0)[:, None] & (trace.judged != 0)
-    return _Seen(trace.cause, trace.r_fast - explained, trace.r_slow - explained, known, counted)
+    settled = (trace.settling == 0)[:, None]
+    counted = settled & (trace.free != 0)
+    slow = settled & (free_rows(setup, samples, SLOW_LATE_S) != 0)
+    return _Seen(trace.cause, trace.r_fast - explained, trace.r_slow - explained, known, known, counted, slow)
 
 
-def _shape(setup: Setup, band: Band, traces: Sequence[Trace]) -> Band:
+def _base_seen(seen: _Seen, setup: Setup, trace: Trace, hoisted: bool) -> _Seen:
+    """Return the same for the rows of a base that stands: what its legs do not explain of their residuals.
+
+    How far the legs themselves are off is known by then, from the time they swing or hang.
+    """
+    b = setup.sizes.base
+    if not b or hoisted:
+        return seen
+    blind = BLIND * setup.params["rated"][0, :b] ** 2
+    fast, slow, known, known_slow = (one.copy() for one in seen[1:5])
+    counted, counted_slow = seen.counted.copy(), seen.counted_slow.copy()
+    fast[:, :b], slow[:, :b] = trace.alone[:, 0, :b], trace.alone[:, 2, :b]
+    lasting = setup.params["cusum_sd"][0, :b] ** 2
+    for k, (one, more) in enumerate(((known, 0.0), (known_slow, lasting))):
+        own = blind + trace.variance[:, k, :b] + more
+        one[:, :b] = np.maximum(trace.alone[:, 2 * k + 1, :b] ** 2 - own, 0.0)
+    counted[:, :b] = counted_slow[:, :b] = (trace.settling == 0)[:, None]
+    return _Seen(seen.cause, fast, slow, known, known_slow, counted, counted_slow)
+
+
+def _base_floor(setup: Setup, band: Band, recordings: Sequence[Samples]) -> Band:
+    """Return the band with the floors of a base's rows raised to what these have beyond all other rows.
+
+    What legs that stand hide is no independent noise of six rows; each row is to be as wide as it is seen to
+    be.
+    """
+    fast, slow = band.fast.copy(), band.slow.copy()
+    for _ in range(2):
+        traces = [run(setup.with_band(replace(band, fast=fast, slow=slow)), one) for one in recordings]
+        taken = [(trace.settling == 0) & (trace.alone[:, 3, 0] > 0.0) for trace in traces]
+        for k, weight in enumerate((fast, slow)):
+            alone, sd = (
+                np.concatenate(
+                    [t.alone[m, 2 * k + j, : setup.sizes.base] for t, m in zip(traces, taken, strict=True)]
+                )
+                for j in range(2)
+            )
+            excess = np.minimum(alone**2, _CLIP**2 * sd**2) - sd**2
+            weight[: setup.sizes.base, FLOOR] += np.maximum(excess.mean(axis=0), 0.0)
+    return replace(band, fast=fast, slow=slow)
+
+
+def _shape(setup: Setup, band: Band, recordings: Sequence[Samples], traces: Sequence[Trace]) -> Band:
     """Return the band with all but its limits fitted to traces in which no event was opened."""
-    seen, rated = [_seen(trace) for trace in traces], setup.params["rated"][0]
+    rated = setup.params["rated"][0]
+    seen = [
+        _base_seen(_seen(setup, samples, trace), setup, trace, samples.hoisted)
+        for trace, samples in zip(traces, recordings, strict=True)
+    ]
     dt_s = 1e-9 * float(setup.params["period_ns"][0])
     fast, slow = band.fast.copy(), band.slow.copy()
     for i in range(len(rated)):
-        taken = [np.flatnonzero(one.counted[:, i])[::_EVERY] for one in seen]
-        if sum(map(len, taken)) < _LEAST_SAMPLES:
+        allowed = slice(None) if i >= setup.sizes.base else _OF_BASE
+        for weight, name, no_cause, which in (
+            (fast, "fast", "known", "counted"), (slow, "slow", "known_slow", "counted_slow"),
+        ):  # fmt: skip
+            taken = [np.flatnonzero(getattr(one, which)[:, i])[::_EVERY] for one in seen]
+            if sum(map(len, taken)) < _LEAST_SAMPLES:
+                continue
+            cause, r, known = (
+                np.concatenate([x[k, i] for x, k in zip(parts, taken, strict=True)])
+                for parts in zip(
+                    *((one.cause, getattr(one, name), getattr(one, no_cause)) for one in seen), strict=True
+                )
+            )
+            weight[i] = 0.0
+            weight[i, allowed] = _causes(cause[:, allowed], r, known, (_LEAST_FLOOR * rated[i]) ** 2)
+        if i < setup.sizes.base:
+            fast[i, NOISE], slow[i, NOISE] = (
+                max(fast[i, NOISE], _BASE_NOISE[0]),
+                max(slow[i, NOISE], _BASE_NOISE[1]),
+            )
             continue
-        cause = np.concatenate([one.cause[k, i] for one, k in zip(seen, taken, strict=True)])
-        known = np.concatenate([one.known[k, i] for one, k in zip(seen, taken, strict=True)])
-        for weight, name in ((fast, "fast"), (slow, "slow")):
-            r = np.concatenate([getattr(one, name)[k, i] for one, k in zip(seen, taken, strict=True)])
-            weight[i] = _causes(cause, r, known, (_LEAST_FLOOR * rated[i]) ** 2)
         fast[i, _REVERSALS] *= _widening(seen, i, fast[i], round(_BLOCK_S / dt_s))
+        if setup.sizes.base:
+            # A leg stands long where it cannot be looked at, and a joint that stands hides friction both
+            # ways.
+            hidden = setup.model.coulomb[i] ** 2 / 3.0
+            for weight in (fast, slow):
+                weight[i, STANDS_SQUARED] += max(hidden - weight[i, _REVERSALS].sum(), 0.0)
     z = [_normalised(one, fast) for one in seen]
     lasting = _lasting(seen, int(setup.params["cusum_samples"][0]))
     return replace(
         band,
         fast=fast,
         slow=slow,
-        rho=_correlation(np.concatenate(z)[::_EVERY]),
-        slow_share=_slow_share(z, dt_s),
+        rho=_own(_correlation(np.concatenate(z)[::_EVERY]), setup.sizes.base),
+        slow_share=np.where(np.arange(len(rated)) < setup.sizes.base, _BASE_SLOW, _slow_share(z, dt_s)),
         cusum_sd=np.maximum(lasting, _LEAST_LASTING * rated),
     )
 
@@ -199,7 +288,7 @@ def _normalised(seen: _Seen, weights: Floats) -> Floats:
 
 def _lasting(seen: Sequence[_Seen], length: int) -> Floats:
     """Return the root mean square (n,) of the means of moving joints' slow residuals over so many samples."""
-    moving = [np.where(x.counted & (x.cause[:, :, STANDS] < _STANDING), x.slow, 0.0) for x in seen]
+    moving = [np.where(x.counted_slow & (x.cause[:, :, STANDS] < _STANDING), x.slow, 0.0) for x in seen]
     means = np.concatenate([_block_means(one, length) for one in moving])
     return np.asarray(np.sqrt(np.mean(means**2, axis=0)))
 
@@ -265,6 +354,13 @@ def _correlation(z: Floats) -> Floats:
     return 0.5 * (rho + rho.T)
 
 
+def _own(rho: Floats, base: int) -> Floats:
+    """Return the correlation without that of a base, whose rows share what legs that stand do not know."""
+    rho[:base], rho[:, :base] = 0.0, 0.0
+    rho[range(base), range(base)] = 1.0
+    return rho
+
+
 def _slow_share(z: Sequence[Floats], dt_s: float) -> Floats:
     """Return the share of slow noise, from the autocorrelation at a lag the fast part does not reach."""
     lag = max(1, round(_LAG_S / dt_s))
@@ -308,20 +404,23 @@ def limited(setup: Setup, band: Band, recordings: Sequence[Samples], wanted_s: f
             f"at least {_LEAST_BLOCKS}",
             "Record longer: limits rest on what is rare.",
         )
-    tails = {name: tail([one[:, k] for one in blocks]) for k, name in enumerate(_STATISTICS)}
-    row, slow, body, sums = (one.level(len(_STATISTICS) * wanted_s / _BLOCK_S) for one in tails.values())
+    names = _STATISTICS if setup.sizes.base and setup.sizes.F else _STATISTICS[:4]
+    tails = {name: tail([one[:, k] for one in blocks]) for k, name in enumerate(names)}
+    row, slow, body, sums, *foot = (one.level(len(names) * wanted_s / _BLOCK_S) for one in tails.values())
     limits = replace(
         band,
         row_limit=max(math.sqrt(row), _LEAST_ROW),
         slow_limit=max(math.sqrt(slow), _LEAST_ROW),
         body_limit=body,
         cusum_limit=max(sums, _LEAST_CUSUM),
+        slow_body_limit=foot[0] if foot else band.slow_body_limit,
+        foot_limit=foot[1] if foot else band.foot_limit,
     )
     return BandFit(limits, tails, count * _BLOCK_S, wanted_s)
 
 
 def _maxima(trace: Trace, length: int) -> Floats:
-    """Return the largest of each statistic (blocks,4) over blocks that are settled and judged all through.
+    """Return the largest of each statistic (blocks,6) over blocks that are settled and judged all through.
 
     The trace is one without limits. The square of a row is taken: of normal noise it has an exponential tail,
     as the others.
@@ -330,8 +429,10 @@ def _maxima(trace: Trace, length: int) -> Floats:
         np.where(trace.judged != 0, _UNLIMITED * ratio, 0.0).max(axis=1)
         for ratio in (trace.ratio, trace.slow_ratio)
     )
-    statistics = np.column_stack([row**2, slow**2, _UNLIMITED * trace.body_ratio, trace.cusum])
-    counted = (trace.settling == 0) & (trace.judged != 0).any(axis=1)
+    statistics = np.column_stack(
+        [row**2, slow**2, _UNLIMITED * trace.body_ratio, trace.cusum, *(_UNLIMITED * trace.foot.T)]
+    )
+    counted = trace.settling == 0
     kept = _block_maxima(~counted, length) == 0
     return np.asarray(_block_maxima(statistics, length)[kept])
 

@@ -13,6 +13,7 @@ from monitor.commission.band import BandFit, fit_band, without_limits
 from monitor.commission.drive import Samples, free_rows
 from monitor.commission.fit import FitOptions, FittedModel, Recording, fit_model
 from monitor.commission.friction import bent
+from monitor.commission.trunk import weighed
 from monitor.errors import ConfigError
 from monitor.setup.build import Setup, apart, build
 from monitor.setup.calibration import Band, Calibration, Model, default_band
@@ -68,6 +69,8 @@ def calibrate(
     )
     setup = _with_model(plain, fitted.model)
     setup = _with_model(plain, bent(setup.with_band(without_limits(setup.band)), sessions_for_model))
+    if setup.sizes.base:
+        setup = _with_model(plain, weighed(setup.with_band(without_limits(setup.band)), sessions_for_model))
     band = fit_band(setup, sessions_for_band, wanted_s or config.watch.false_alarm_s)
     return Calibration(setup.model, band.band), Report(fitted, band)
 

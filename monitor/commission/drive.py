@@ -17,8 +17,9 @@ from monitor.setup.build import Setup
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
 
-# How far from what is planned a foot may meet or leave the ground [s].
-_PLAN_S = 0.1
+# How long before it is planned to a foot may meet ground, and how long after its planned lift-off the
+# residual may still feel it, fast and slow [s].
+_EARLY_S, LATE_S, SLOW_LATE_S = 0.02, 0.05, 0.2
 
 
 class Samples(NamedTuple):
@@ -36,6 +37,8 @@ class Samples(NamedTuple):
         1 where a foot is planned to stand; a floating base needs them.
     tau_link : (T,m), optional
         Torque at the link side as reported; what stands at joints without a sensor is of no account.
+    hoisted : bool
+        Whether a hoist holds the base, with a force nobody knows.
     """
 
     t_ns: Ints
@@ -45,12 +48,16 @@ class Samples(NamedTuple):
     base: Floats
     feet: Ints | None = None
     tau_link: Floats | None = None
+    hoisted: bool = False
 
 
 class Trace(NamedTuple):
     """What the step made of it, by sample: residuals (T,rows), causes (T,rows,C), features, variances.
 
-    Rows are those that are judged; judged (T,rows) is 1 where one feels no force that is not known.
+    alone (T,4,rows) is what a row has beyond what all others predict, and its sd, see kernels/feet.py, fast
+    and slow. foot (T,2) is how far the slow residual of all rows stands out beside feet, and the force of a
+    foot that should be none. free (T,rows) is 1 where a row feels no force that is not known, judged (rows,)
+    where one is judged.
     """
 
     r_fast: Floats
@@ -65,11 +72,16 @@ class Trace(NamedTuple):
     cusum: Floats
     open: Ints
     settling: Ints
+    alone: Floats
+    foot: Floats
+    free: Ints
     judged: Ints
 
 
-def free_rows(setup: Setup, samples: Samples) -> Ints:
-    """Return 1 for each sample and row (T,n) that feels no force of a foot on the ground, else 0.
+def free_rows(setup: Setup, samples: Samples, late_s: float = LATE_S) -> Ints:
+    """Return 1 for each sample and row (T,n) that feels no force of a foot on the ground or a hoist, else 0.
+
+    For so long after its planned lift-off (late_s) a foot may still be felt.
 
     Raises
     ------
@@ -87,10 +99,17 @@ def free_rows(setup: Setup, samples: Samples) -> Ints:
             f"one column for each of {sizes.F} feet, one row for each of {len(free)} samples",
             "Without them nobody knows which legs carry load.",
         )
-    early = round(_PLAN_S * 1e9 / float(params["period_ns"]))
+    if samples.hoisted:
+        free[:, : sizes.base] = 0
+        return free
+    rate_hz = 1e9 / float(params["period_ns"])
+    early, late = round(_EARLY_S * rate_hz), round(late_s * rate_hz)
+    # Of a stretch with its centre in the middle the first half reaches back in time, the second ahead.
+    reach = np.zeros(2 * max(early, late) + 1, bool)
+    reach[max(early, late) - early : max(early, late) + late + 1] = True
     for foot in range(sizes.F):
         planned = samples.feet[:, foot] != 0
-        stands = binary_dilation(planned, iterations=early) if early else planned
+        stands = binary_dilation(planned, reach)
         axis = int(params["foot_axis"][foot])
         while axis >= 0:  # up to the base, which feels every foot
             free[stands, params["dof"][axis]] = 0
@@ -98,7 +117,7 @@ def free_rows(setup: Setup, samples: Samples) -> Ints:
     return free
 
 
-def _judged(setup: Setup, samples: Samples) -> Ints:
+def _free(setup: Setup, samples: Samples) -> Ints:
     """Return `free_rows`, motor sides (T,rows) as their joints."""
     free = free_rows(setup, samples)
     return np.hstack([free, free[:, setup.params["link_row"][0]]])
@@ -114,8 +133,9 @@ def _links(params: Block, samples: Samples) -> Floats:
 
 @kernel
 def _take(
-    inputs: Block, k: int, t_ns: Ints, q: Floats, qd: Floats, tau: Floats, base: Floats, tau_link: Floats
-) -> None:
+    inputs: Block, k: int, t_ns: Ints, q: Floats, qd: Floats, tau: Floats, base: Floats,
+    tau_link: Floats, feet: Ints,
+) -> None:  # fmt: skip
     """Put sample k where the step expects it."""
     x = inputs[0]
     x["seq"] = x["seq"] + 1
@@ -129,20 +149,20 @@ def _take(
         x["base_quat"][:] = base[k, 3:7]
         x["base_v"][:] = base[k, 7:10]
         x["base_w"][:] = base[k, 10:13]
+        x["feet"][:] = feet[k]
 
 
 @kernel
 def _run(
     params: Block, inputs: Block, state: Block, outputs: Block,
-    t_ns: Ints, q: Floats, qd: Floats, tau: Floats, base: Floats, tau_link: Floats,
+    t_ns: Ints, q: Floats, qd: Floats, tau: Floats, base: Floats, tau_link: Floats, feet: Ints,
     r_fast: Floats, r_slow: Floats, explained: Floats, cause: Floats, feature: Floats, variance: Floats,
     ratio: Floats, slow_ratio: Floats, body: Floats, cusum: Floats,
-    is_open: Ints, settling: Ints, judged: Ints,
+    is_open: Ints, settling: Ints, alone: Floats, foot: Floats,
 ) -> None:  # fmt: skip
     s, out = state[0], outputs[0]
     for k in range(t_ns.shape[0]):
-        _take(inputs, k, t_ns, q, qd, tau, base, tau_link)
-        inputs[0]["judged"][:] = judged[k]
+        _take(inputs, k, t_ns, q, qd, tau, base, tau_link, feet)
         step(params, inputs, state, outputs)
         r_fast[k] = out["row_fast"]
         r_slow[k] = out["row_slow"]
@@ -159,10 +179,37 @@ def _run(
             cusum[k] = max(cusum[k], s["cusum"][i, 0], s["cusum"][i, 1])
         is_open[k] = s["event_open"]
         settling[k] = out["settling"]
+        alone[k, 0] = s["alone"]
+        alone[k, 1] = s["alone_sd"]
+        alone[k, 2] = s["alone_slow"][0]
+        alone[k, 3] = s["alone_slow"][1]
+        foot[k, 0] = s["slow_body_ratio"]
+        foot[k, 1] = s["foot_lasts"]
 
 
-def run(setup: Setup, samples: Samples) -> Trace:
-    """Return what the step makes of a recording, from a fresh start, all rows judged that are free.
+def ready(setup: Setup, samples: Samples) -> Blocks:
+    """Return fresh blocks of a robot that is on, judged as far as its support allows."""
+    blocks = setup.blocks()
+    blocks.inputs["drive"], blocks.inputs["judged"] = 1, 1
+    if samples.hoisted:
+        blocks.inputs["judged"][0, : setup.sizes.base] = 0
+    elif setup.sizes.base:
+        blocks.inputs["grounded"] = 1
+    return blocks
+
+
+def _arrays(blocks: Blocks, samples: Samples) -> tuple[Any, ...]:
+    """Return what `_take` reads; feet that are not said are so for the step too."""
+    feet = samples.feet
+    if feet is None:
+        feet = np.full((len(samples.t_ns), blocks.inputs["feet"].shape[-1]), -1)
+    return (*samples[:5], _links(blocks.params, samples), np.ascontiguousarray(feet, dtype=np.int64))
+
+
+def run(setup: Setup, samples: Samples, judge_base: bool = True) -> Trace:
+    """Return what the step makes of a recording, from a fresh start.
+
+    With `judge_base` False what the rows of a base have alone is what the legs do not explain of them.
 
     Raises
     ------
@@ -176,8 +223,10 @@ def run(setup: Setup, samples: Samples) -> Trace:
             "a reading of each sensor in each sample",
             "Record with the sensors, or take link_torque_sensor out of the configuration.",
         )
-    blocks = setup.blocks()
-    blocks.inputs["drive"] = 1
+    free = _free(setup, samples)
+    blocks = ready(setup, samples)
+    if not judge_base:
+        blocks.inputs["judged"][0, : setup.sizes.base] = 0
     T, n, causes = len(samples.t_ns), setup.sizes.rows, setup.params["cause_fast"].shape[-1]
     trace = Trace(
         r_fast=np.zeros((T, n)),
@@ -192,9 +241,12 @@ def run(setup: Setup, samples: Samples) -> Trace:
         cusum=np.zeros(T),
         open=np.zeros(T, np.int64),
         settling=np.zeros(T, np.int64),
-        judged=_judged(setup, samples),
+        alone=np.zeros((T, 4, n)),
+        foot=np.zeros((T, 2)),
+        free=free,
+        judged=blocks.inputs["judged"][0].copy(),
     )
-    arrays: tuple[Any, ...] = (*samples[:5], _links(setup.params, samples), *trace)
+    arrays: tuple[Any, ...] = (*_arrays(blocks, samples), *trace[:-2])
     _run(*blocks, *arrays)
     return trace
 
@@ -202,10 +254,10 @@ def run(setup: Setup, samples: Samples) -> Trace:
 @kernel
 def _until(
     params: Block, inputs: Block, state: Block, outputs: Block, k: int, looked_for: int,
-    t_ns: Ints, q: Floats, qd: Floats, tau: Floats, base: Floats, tau_link: Floats,
+    t_ns: Ints, q: Floats, qd: Floats, tau: Floats, base: Floats, tau_link: Floats, feet: Ints,
 ) -> int:  # fmt: skip
     while k < t_ns.shape[0]:
-        _take(inputs, k, t_ns, q, qd, tau, base, tau_link)
+        _take(inputs, k, t_ns, q, qd, tau, base, tau_link, feet)
         step(params, inputs, state, outputs)
         k += 1
         if outputs[0]["notice"] & looked_for:
@@ -216,8 +268,8 @@ def _until(
 def until(blocks: Blocks, samples: Samples, k: int, looked_for: int) -> int:
     """Step from sample k on until the step takes notice of what is looked for (bits of `Notice`).
 
-    Which rows are judged is left to the caller (`inputs.judged`). Returns the number of samples stepped since
+    The blocks are those of `ready`. Returns the number of samples stepped since
     the beginning: the last one is that of the notice.
     """
-    arrays: tuple[Any, ...] = (*samples[:5], _links(blocks.params, samples))
+    arrays = _arrays(blocks, samples)
     return int(_until(*blocks, k, looked_for, *arrays))

@@ -12,7 +12,7 @@ from collections.abc import Sequence
 import numpy as np
 from numpy.typing import NDArray
 
-from monitor.commission.drive import Samples, run
+from monitor.commission.drive import SLOW_LATE_S, Samples, free_rows, run
 from monitor.kernels.ledger import WIDTHS
 from monitor.setup.build import Setup
 from monitor.setup.calibration import Model
@@ -31,13 +31,15 @@ def bent(setup: Setup, recordings: Sequence[Samples]) -> Model:
     The setup must open no event on the way (see `commission.band.without_limits`).
     """
     traces = [run(setup, one) for one in recordings]
+    unloaded = [free_rows(setup, one, SLOW_LATE_S) for one in recordings]
     v0, rated = setup.params["friction_velocity"][0], setup.params["rated"][0]
     model, rows = setup.model, np.arange(setup.sizes.n)
     rows[setup.params["link_row"][0]] = np.arange(setup.sizes.n, setup.sizes.rows)  # where friction is seen
     coulomb, viscous, bend = model.coulomb.copy(), model.viscous.copy(), model.bend.copy()
     for i in range(setup.sizes.base, setup.sizes.n):
-        v = np.concatenate([t.feature[t.settling == 0, i, 2][::_EVERY] for t in traces])
-        r = np.concatenate([t.r_slow[t.settling == 0, rows[i]][::_EVERY] for t in traces])
+        free = [(t.settling == 0) & (one[:, i] != 0) for t, one in zip(traces, unloaded, strict=True)]
+        v = np.concatenate([t.feature[k, i, 2][::_EVERY] for t, k in zip(traces, free, strict=True)])
+        r = np.concatenate([t.r_slow[k, rows[i]][::_EVERY] for t, k in zip(traces, free, strict=True)])
         moves = np.abs(v) > _MOVES * v0[i]
         if np.count_nonzero(moves) < 1000:
             continue

@@ -112,6 +112,11 @@ def _ratios(s: Source) -> Iterator[Row]:
         yield from _joint_rows(s, "ratio", unit)
 
 
+def _feet(s: Source, field: str) -> Iterator[Row]:
+    for foot, force in zip(s.facts.feet, s.outputs[field], strict=True):
+        yield from ((foot, axis, value) for axis, value in zip("xyz", force, strict=True))
+
+
 def _one_of(words: type[IntEnum], value: int, *labels: str) -> Iterator[Row]:
     """A state as Prometheus keeps it: a series per possible word, 1 for the one that holds."""
     return ((*labels, _word(member), member == value) for member in words)
@@ -265,6 +270,20 @@ METRICS = (
         "Force the model expects of a prismatic joint.",
         lambda s: _joint_rows(s, "tau_model", "N"),
         ("joint",),
+    ),
+    Declared(
+        "limbtell_foot_force_newtons",
+        "gauge",
+        "Force of the ground on a foot, estimated; 0 unless planned feet carry the robot. World axes.",
+        lambda s: _feet(s, "foot_force"),
+        ("foot", "axis"),
+    ),
+    Declared(
+        "limbtell_foot_force_sd_newtons",
+        "gauge",
+        "Standard deviation of that estimate.",
+        lambda s: _feet(s, "foot_force_sd"),
+        ("foot", "axis"),
     ),
     Declared(
         "limbtell_events_total",

@@ -7,7 +7,7 @@ from collections.abc import Callable
 import numpy as np
 from numpy.typing import NDArray
 
-from monitor.explain import actuator, contact, load, position_sensor, torque_sensor, touchdown
+from monitor.explain import actuator, contact, foothold, load, position_sensor, torque_sensor, touchdown
 from monitor.explain.outline import Explanation, Outline
 from monitor.kernels.jit import kernel
 
@@ -22,9 +22,10 @@ FAMILIES: tuple[tuple[str, Callable[[Outline], list[Explanation]]], ...] = (
     (load.NAME, load.explanations),
     (touchdown.NAME, touchdown.explanations),
     (torque_sensor.NAME, torque_sensor.explanations),
+    (foothold.NAME, foothold.explanations),
 )
 NAMES = tuple(name for name, _ in FAMILIES)
-CONTACT, ACTUATOR, SENSOR, LOAD, TOUCHDOWN, TORQUE_SENSOR = range(len(FAMILIES))
+CONTACT, ACTUATOR, SENSOR, LOAD, TOUCHDOWN, TORQUE_SENSOR, FOOTHOLD = range(len(FAMILIES))
 
 
 def explanations(outline: Outline) -> list[Explanation]:
@@ -35,8 +36,9 @@ def explanations(outline: Outline) -> list[Explanation]:
 @kernel
 def fill(
     family: int, index: int, feature: Floats, slope: Floats, M: Floats,
-    body_axis: Ints, body_centre: Floats, foot_axis: Ints, foot_point: Floats,
-    load_axis: int, load_centre: Floats, parent: Ints, dof: Ints, S: Floats, V: Floats, Vd: Floats,
+    body_axis: Ints, body_centre: Floats, foot_axis: Ints, foot_point: Floats, foot_radius: Floats,
+    up: Floats, load_axis: int, load_centre: Floats, parent: Ints, dof: Ints,
+    S: Floats, V: Floats, Vd: Floats,
     R: Floats, p: Floats, link_row: Ints, armature: Floats, H: Floats,
 ) -> None:  # fmt: skip
     """Fill the columns H (rows,6) of a candidate: torque per unit of its parameters, as many as it has.
@@ -54,5 +56,5 @@ def fill(
         load.rows(load_axis, load_centre, parent, dof, S, V, Vd, R, p, H)
     elif family == TORQUE_SENSOR:
         torque_sensor.rows(index, link_row, feature, H)
-    else:
-        contact.rows(foot_axis[index], foot_point[index], parent, dof, S, R, p, H)
+    elif family == TOUCHDOWN:
+        touchdown.rows(foot_axis[index], foot_point[index], foot_radius[index], up, parent, dof, S, R, p, H)

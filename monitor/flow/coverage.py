@@ -20,6 +20,8 @@ _START = 2
 # A change of one of these makes the torque balance start anew.
 _BALANCE = ("boot", "mode", "drive", "brake", "stop", "tool", "payload", "payload_known", "support")
 _GUIDED = "guided"
+# Supports whose forces on the body nobody knows; when carried the legs hang free all the same.
+_HELD = ("carried", "docked")
 _MODE_REASON = {_GUIDED: Reason.GUIDED, "calibrating": Reason.CALIBRATING}
 
 
@@ -46,7 +48,9 @@ class ConditionKeeper:
         self._stale = True
         self._refused = False
         self._since_start = False  # something was there already when the judgement began
+        self._feet_unknown = False  # on the ground, and samples do not say which feet stand
         self._settling, self._pending = outputs["settling"].data, state["pending"].data
+        self._says_no_feet = outputs["feet_unknown"].data
         self._now = (Coverage.BLIND, Reason.NO_STREAM)
         self._accounted_ns: int | None = None
         self._evaluate()
@@ -101,6 +105,9 @@ class ConditionKeeper:
             if stale:
                 self._stale = True
                 self._evaluate()
+        if self._feet_unknown != bool(self._says_no_feet[0]):
+            self._feet_unknown = not self._feet_unknown
+            self._evaluate()
         if silent:
             now = (Coverage.BLIND, Reason.NO_STREAM)
         elif (self._settling[0] or self._pending[0]) and self._whole[0] != Coverage.BLIND:
@@ -142,20 +149,28 @@ class ConditionKeeper:
         x["drive"] = 1 if known is None or known.drive is None else known.drive
         self._joints = [self._joint(i) for i in range(m)]
         judged = np.array([c != Coverage.BLIND for c, _ in self._joints]) & self._may_judge()
-        # A row is judged when every joint on the wire that enters it is; base rows hold the feet's forces.
+        # A row is judged when every joint on the wire that enters it is.
         x["judged"] = 0
         base, motors = len(x["judged"]) - m - len(self._link_rows), len(x["judged"]) - len(self._link_rows)
         x["judged"][base:motors] = np.all(judged | ~self._facts.row_needs, axis=1)
         x["judged"][motors:] = x["judged"][self._link_rows]
+        # What else than its planned feet holds a base exerts forces on it that nobody knows.
+        support = None if known is None or self._stale else known.support
+        x["grounded"] = self._facts.floating and support == "ground"
+        x["judged"][:base] = x["grounded"] and self._may_judge()
         x["guided"] = known is not None and known.mode in _MODE_REASON
         self._whole = _whole(self._joints)
         self._show()
 
     def _may_judge(self) -> bool:
-        """Return whether unexplained torque means anything: not calibrating, no foot on the ground."""
+        """Return whether unexplained torque means anything: not calibrating, nor held by unknown forces."""
         known = self._condition
-        if self._facts.floating and (known is None or self._stale or known.support != "hoisted"):
-            return False
+        if self._facts.floating:
+            support = None if known is None or self._stale else known.support
+            if support not in ("ground", "hoisted", "carried") or (
+                support == "ground" and self._feet_unknown
+            ):
+                return False
         return known is None or known.mode != "calibrating"
 
     def _joint(self, i: int) -> tuple[Coverage, Reason]:
@@ -173,8 +188,12 @@ class ConditionKeeper:
             return Coverage.CONDITIONAL, _MODE_REASON[known.mode]
         if known.mode == "stopped" or known.stop is not None:
             return Coverage.CONDITIONAL, Reason.STOPPED
-        if self._facts.floating and known.support != "hoisted":
-            return Coverage.CONDITIONAL, Reason.NOT_HOISTED
+        if self._facts.floating and known.support is None:
+            return Coverage.CONDITIONAL, Reason.CONDITION_UNKNOWN
+        if self._facts.floating and known.support in _HELD:
+            return Coverage.CONDITIONAL, Reason.HELD
+        if self._feet_unknown:
+            return Coverage.CONDITIONAL, Reason.FEET_UNKNOWN
         if not known.payload_known or (known.payload is not None and self._facts.tool is None):
             return Coverage.CONDITIONAL, Reason.PAYLOAD_UNKNOWN
         if self._since_start:
@@ -204,6 +223,7 @@ class ConditionKeeper:
             "stale": self._stale,
             "refused": self._refused,
             "since_start": self._since_start,
+            "feet_unknown": self._feet_unknown,
             "now": list(self._now),
             "accounted_ns": self._accounted_ns,
         }
@@ -217,6 +237,7 @@ class ConditionKeeper:
             self._condition = condition._replace(payload=condition.payload and Payload(*condition.payload))
         self._heard_ns, self._stale = saved["heard_ns"], saved["stale"]
         self._refused, self._since_start = saved["refused"], saved["since_start"]
+        self._feet_unknown = saved["feet_unknown"]
         self._now = (Coverage(saved["now"][0]), Reason(saved["now"][1]))
         self._accounted_ns = saved["accounted_ns"]
         rebase = int(self._inputs["rebase"])

@@ -4,9 +4,10 @@ from __future__ import annotations
 
 import math
 
-from monitor.flow import lasting, link_torque, trend
+from monitor.flow import feet, lasting, link_torque, trend
 from monitor.flow.layout import RING, Block, Floats, Form, Notice
 from monitor.kernels import band, evidence, ledger, tracking
+from monitor.kernels import feet as feet_kernels
 from monitor.kernels.jit import kernel
 
 _JOINT_SPACE, _FIRST_ORDER = int(Form.JOINT_SPACE), int(Form.FIRST_ORDER)
@@ -31,6 +32,9 @@ def into_band(params: Block, inputs: Block, state: Block, outputs: Block) -> Non
     band.variance(s["cause"], c["cause_fast"], s["var_fast"])
     band.variance(s["cause"], c["cause_slow"], s["var_slow"])
     band.standing(s["cause"], c["cause_fast"], s["var_stand"])
+    floating = s["v"].shape[0] > c["tau_lag"].shape[0]
+    if floating:
+        feet.stand(params, inputs, state, outputs)
     tracking.explained(s["feature"], s["track"], s["track_P"], s["explained"], s["explained_var"])
     s["tracked"][:] = s["explained"]
     lasting.explain_lasting(params, state)
@@ -43,6 +47,8 @@ def into_band(params: Block, inputs: Block, state: Block, outputs: Block) -> Non
             s["white"][i] += band.BLIND * c["rated"][i] ** 2
     band.covariance(s["var_fast"], c["rho"], s["white"], s["R"])
     lasting.widen(state, s["R"])
+    if floating:
+        feet.widen(params, state, s["R"])
     keep = math.exp(-s["dt_s"] / c["slow_later_s"]) if s["dt_s"] > 0.0 else 0.0
     for i in range(n):
         s["explained_slow"][i] += (1.0 - keep) * (s["explained"][i] - s["explained_slow"][i])
@@ -50,7 +56,9 @@ def into_band(params: Block, inputs: Block, state: Block, outputs: Block) -> Non
         s["var_slow_kept"][i] = max(s["var_slow"][i], keep * s["var_slow_kept"][i])
         slow_var = s["var_slow_kept"][i] + s["R"][i, i] - s["var_fast"][i]
         out["band_fast"][i] = c["row_limit"] * math.sqrt(s["R"][i, i])
-        out["band_slow"][i] = c["slow_limit"] * math.sqrt(slow_var)
+        if not floating:
+            out["band_slow"][i] = c["slow_limit"] * math.sqrt(slow_var)
+            s["slow_ratio"][i] = abs(s["row_slow"][i] - s["explained_slow"][i]) / out["band_slow"][i]
     link_torque.forget(params, state, s["R"])
     evidence.factor(s["R"], s["R_factor"])
     s["white"][:] = s["left"]
@@ -60,11 +68,56 @@ def into_band(params: Block, inputs: Block, state: Block, outputs: Block) -> Non
         total += s["white"][i] ** 2
         out["explained"][i] = s["explained"][i]
         s["fast_ratio"][i] = abs(s["left"][i]) / out["band_fast"][i]
-        s["slow_ratio"][i] = abs(s["row_slow"][i] - s["explained_slow"][i]) / out["band_slow"][i]
         out["ratio"][i] = max(s["fast_ratio"][i], s["slow_ratio"][i])
-        s["ratio_peak"][i] = max(s["ratio_peak"][i], out["ratio"][i])
+        s["alone"][i], s["beside"][i] = s["left"][i], s["left"][i]
     s["body_ratio"] = total / c["body_limit"]
+    if floating:
+        _beside_feet(params, inputs, state, outputs)
+    for i in range(n):
+        s["ratio_peak"][i] = max(s["ratio_peak"][i], out["ratio"][i])
     out["body_ratio"] = s["body_ratio"]
+
+
+@kernel
+def _beside_feet(params: Block, inputs: Block, state: Block, outputs: Block) -> None:
+    """Take as ratio of a row what it has beyond all others; add to that of the body what feet should not do.
+
+    The slow residual is looked at every evidence step: a push on the trunk is little beside the noise of its
+    acceleration, but lasts.
+    """
+    c, x, s, out = params[0], inputs[0], state[0], outputs[0]
+    n = s["left"].shape[0]
+    share = c["body_share"][feet.dofs_taken(state)]
+    if s["sampled"] + 1 >= c["evidence_samples"]:
+        for i in range(n):
+            s["white"][i] = s["explained_var"][i] + c["cusum_sd"][i] ** 2
+            if x["judged"][i] == 0:
+                s["white"][i] += band.BLIND * c["rated"][i] ** 2
+        band.covariance(s["var_slow"], c["rho"], s["white"], s["slow_R"])
+        lasting.widen(state, s["slow_R"])
+        feet.widen(params, state, s["slow_R"])
+        evidence.factor(s["slow_R"], s["slow_factor"])
+        for i in range(n):
+            s["white"][i] = s["r_slow"][i] - s["explained"][i]
+        evidence.whiten(s["slow_factor"], s["white"])
+        feet_kernels.invert(s["slow_factor"], s["inverse"])
+        feet_kernels.pulls(s["inverse"], s["white"], s["pull"], s["alone"], s["alone_sd"])
+        s["slow_body_ratio"] = 0.0
+        for i in range(n):
+            s["slow_ratio"][i] = abs(s["alone"][i]) / (c["slow_limit"] * s["alone_sd"][i])
+            s["slow_body_ratio"] += s["white"][i] ** 2 / (share * c["slow_body_limit"])
+            out["band_slow"][i] = c["slow_limit"] * s["alone_sd"][i]
+            s["alone_slow"][0, i], s["alone_slow"][1, i] = s["alone"][i], s["alone_sd"][i]
+        s["white"][:] = s["left"]
+        evidence.whiten(s["R_factor"], s["white"])
+    feet_kernels.invert(s["R_factor"], s["inverse"])
+    feet_kernels.pulls(s["inverse"], s["white"], s["pull"], s["alone"], s["alone_sd"])
+    for i in range(n):
+        out["band_fast"][i] = c["row_limit"] * s["alone_sd"][i]
+        s["fast_ratio"][i] = abs(s["alone"][i]) / out["band_fast"][i]
+        out["ratio"][i] = max(s["fast_ratio"][i], s["slow_ratio"][i])
+    s["body_ratio"] /= share
+    feet.forces(params, state, outputs)
 
 
 @kernel
@@ -110,15 +163,22 @@ def judge(params: Block, inputs: Block, state: Block, outputs: Block) -> None:
     t_ns = s["at_ns"]
     s["step_due"] = 0
     out["settling"] = 1 if t_ns < s["settled_ns"] else 0
-    if out["settling"] != 0:
+    if out["settling"] != 0 or out["feet_unknown"] != 0:
+        if out["feet_unknown"] != 0 and s["event_open"] != 0:
+            end(params, state, outputs)
         s["ring_held"] = 0
         s["sampled"] = 0
+        s["slow_ratio"][:] = 0.0
+        s["slow_body_ratio"] = 0.0
         s["event_quiet_ns"] = t_ns
         return
     drifted = _sum_up(params, inputs, state)
+    lost = feet.lost(params, inputs, state, outputs)
     row = band.largest(out["ratio"], x["judged"])
-    ratio = max(out["ratio"][row], s["body_ratio"]) if row >= 0 else 0.0
-    if ratio < c["onset_ratio"]:
+    ratio = 0.0
+    if row >= 0:
+        ratio = max(out["ratio"][row], s["body_ratio"], s["slow_body_ratio"], s["foot_lasts"])
+    if max(ratio, s["foot_now"]) < c["onset_ratio"] and lost < 0:
         s["event_quiet_ns"] = t_ns
     s["step_due"] = 1 if _remember(params, inputs, state, outputs) else 0
     if ratio > 1.0 and (s["event_open"] == 0 or s["event_drifted"] != 0):
@@ -128,13 +188,15 @@ def judge(params: Block, inputs: Block, state: Block, outputs: Block) -> None:
     elif drifted >= 0 and s["event_open"] == 0:
         s["event_drifted"] = 1
         _open(state, outputs, drifted // 2, s["cusum_since_ns"][drifted // 2, drifted % 2])
+    elif lost >= 0 and s["event_open"] == 0:
+        _open(state, outputs, row, s["foot_felt_ns"][lost])
     if s["event_open"] == 0:
         return
     if ratio > s["event_ratio"]:
         s["event_ratio"] = ratio
         s["event_row"] = row
-        s["event_size"] = s["left"][row]
-    drifts = False
+        s["event_size"] = s["alone"][row]
+    drifts = lost >= 0
     for i in range(s["cusum"].shape[0]):
         if x["judged"][i] != 0 and s["event_drifted"] != 0:
             drifts = drifts or max(s["cusum"][i, 0], s["cusum"][i, 1]) > 0.5 * c["cusum_limit"]
@@ -156,7 +218,7 @@ def _open(state: Block, outputs: Block, row: int, onset_ns: int) -> None:
     s["event_open"], s["weigh_afresh"], s["event_doubtful"] = 1, 1, 0
     s["event_onset_ns"] = onset_ns
     s["event_loud_ns"], s["event_over_ns"] = s["at_ns"], s["at_ns"]
-    s["event_row"], s["event_ratio"], s["event_size"] = row, 0.0, s["left"][row]
+    s["event_row"], s["event_ratio"], s["event_size"] = row, 0.0, s["alone"][row]
 
 
 @kernel
@@ -177,7 +239,9 @@ def _sum_up(params: Block, inputs: Block, state: Block) -> int:
     n = s["left"].shape[0]
     for i in range(n):
         # A joint that stands hides any torque up to its Coulomb friction, for as long as it stands.
-        if s["cause"][i, band.STANDS] < _STANDING:
+        if s["loaded"][i] != 0:
+            s["cusum_sum"][i] = 0.0  # the force of a foot is not known well enough
+        elif s["cause"][i, band.STANDS] < _STANDING:
             sd = math.sqrt(s["var_slow"][i] + s["explained_var"][i] + c["cusum_sd"][i] ** 2)
             s["cusum_sum"][i] += (s["row_slow"][i] - s["explained"][i]) / sd
     s["cusum_count"] += 1
@@ -219,6 +283,9 @@ def _remember(params: Block, inputs: Block, state: Block, outputs: Block) -> boo
     for i in range(s["a"].shape[0]):
         s["ring_a"][k, i] = s["a"][i] + s["e_slow"][i]
     s["ring_r"][k] = s["left"]
+    s["ring_beside"][k] = s["beside"]
+    s["ring_foot_J"][k] = s["foot_J"]
+    s["ring_carries"][k] = s["foot_carries"]
     s["ring_var"][k] = s["var_fast"]
     s["ring_stand"][k] = s["var_stand"]
     for i in range(s["left"].shape[0]):
@@ -235,9 +302,12 @@ def _remember(params: Block, inputs: Block, state: Block, outputs: Block) -> boo
         for i in range(s["left"].shape[0]):
             if x["judged"][i] == 0 or lasting.holds_row(state, i) or link_torque.is_link_side(params, i):
                 continue
-            variance = c["track_noise"] * (s["var_fast"][i] + _STUCK * s["var_stand"][i])
+            variance = s["var_fast"][i]
+            if s["loaded"][i] != 0:
+                variance = max(variance, s["alone_sd"][i] ** 2 - s["explained_var"][i])
+            variance = c["track_noise"] * (variance + _STUCK * s["var_stand"][i])
             tracking.track(
-                i, s["left"][i] + s["tracked"][i], variance, s["feature"], c["track_sd"],
+                i, s["alone"][i] + s["tracked"][i], variance, s["feature"], c["track_sd"],
                 c["track_keep"], c["track_clip"], s["track"], s["track_P"],
             )  # fmt: skip
             trend.follow(params, state, outputs, i, variance, dt_s)

@@ -8,8 +8,8 @@ from __future__ import annotations
 
 import math
 
-from monitor.explain import ACTUATOR, CONTACT, fill
-from monitor.flow import lasting, link_torque
+from monitor.explain import ACTUATOR, CONTACT, FOOTHOLD, TOUCHDOWN, fill
+from monitor.flow import feet, lasting, link_torque
 from monitor.flow.layout import RING, Block, Notice
 from monitor.kernels import band
 from monitor.kernels import evidence as ev
@@ -21,6 +21,8 @@ _STEP = 1e-5  # rad or m: for the slope of inverse dynamics
 _IMPOSSIBLE = -1e9  # a log evidence
 _RISE_S = 0.005  # of the fast residual
 _KNOWN_NS = 40_000_000  # certainty for so long suffices for what is known
+_FOOT_NS = 12_000_000  # certainty for so long suffices for what a foot met or missed
+_SHIFTS = 0.3
 _BEFORE = 10  # entries before the onset that tell the slow noise
 _DEPENDENT = 25.0
 _WEIGHT = 0.5  # of evidence
@@ -68,6 +70,9 @@ def begin(params: Block, inputs: Block, state: Block) -> None:
     for k in range(s["smooth_log"].shape[0]):
         d = params[0]["smooth_columns"][k]
         m = n + 2 * d + params[0]["smooth_settles"][k]
+        if params[0]["smooth_family"][k] == TOUCHDOWN:
+            entry = min(s["weigh_next"], s["ring_head"] - 1) % RING
+            feet.spare(state, params[0]["smooth_index"][k], entry, s["smooth_acts"], k)
         P = s["smooth_P"][k, : m * m].reshape((m, m))
         ev.smooth_start(d, _NEAR, s["null_s"], s["null_P"], s["smooth_x"][k], P)
 
@@ -151,6 +156,10 @@ def _conclude(params: Block, inputs: Block, state: Block, outputs: Block) -> boo
     if s["sure_of"] != best:
         s["sure_of"], s["sure_since_ns"] = best, s["at_ns"]
     sure_ns = s["at_ns"] - s["sure_since_ns"]
+    family = c["of_family"][best]
+    if (family in (TOUCHDOWN, FOOTHOLD)) and sure_ns > _FOOT_NS:
+        s["concluded"] = 1  # what follows is a stumble
+        return False
     known = lasting.slot_of(params, state, best) >= 0
     if known and sure_ns > _KNOWN_NS:
         return lasting.confirm(params, state, outputs, best)
@@ -241,21 +250,24 @@ def _prepare(params: Block, inputs: Block, state: Block) -> None:
 def _noise(params: Block, inputs: Block, state: Block, entry: int) -> None:
     """Fill R, the fast part of the noise at one entry, and x_d, the sd of the slow part."""
     c, x, s = params[0], inputs[0], state[0]
+    # What a joint hides that stands stays as it is; under a foot it changes with every shift of load.
+    stuck = 0.01 if s["v"].shape[0] == c["tau_lag"].shape[0] else _SHIFTS
     for i in range(s["x_d"].shape[0]):
         stands = s["ring_stand"][entry, i]
         var = s["ring_var"][entry, i] - stands
         # What an explanation cannot get right of a large residual: noise that lasts a while, and noise that
         # comes and goes with the motion. White noise stands for the latter: as strong as 25 dependent steps.
-        rough = (c["model_error"] * s["ring_r"][entry, i]) ** 2
+        rough = (c["model_error"] * s["ring_beside"][entry, i]) ** 2
         slow = c["slow_share"][i] * var + stands + s["ring_extra"][entry, i] + c["cusum_sd"][i] ** 2
         slow += s["ring_hidden"][entry, i]
         s["x_d"][i] = math.sqrt(slow + rough)
-        s["x_y"][i] = (1.0 - c["slow_share"][i]) * var + 0.01 * stands + _SHAKEN * s["ring_hidden"][entry, i]
+        s["x_y"][i] = (1.0 - c["slow_share"][i]) * var + stuck * stands + _SHAKEN * s["ring_hidden"][entry, i]
         s["x_spread"][i] = _DEPENDENT * rough
         if x["judged"][i] == 0:
             s["x_spread"][i] += band.BLIND * c["rated"][i] ** 2
     band.covariance(s["x_y"], c["rho"], s["x_spread"], s["R"])
     lasting.widen(state, s["R"])
+    feet.widen_at(params, state, entry, s["R"])
     link_torque.forget(params, state, s["R"])
 
 
@@ -319,8 +331,8 @@ def _fill(params: Block, state: Block, family: int, index: int) -> None:
     c, s = params[0], state[0]
     fill(
         family, index, s["x_feature"], s["slope"], s["x_M"], c["body_axis"], c["body_centre"], c["foot_axis"],
-        c["foot_point"], c["load_axis"], c["load_centre"], c["parent"], c["dof"], s["x_S"], s["x_V"],
-        s["x_Vd"], s["x_R_W"], s["x_p_W"], c["link_row"], c["armature"], s["x_H"],
+        c["foot_point"], c["foot_radius"], c["up"], c["load_axis"], c["load_centre"], c["parent"], c["dof"],
+        s["x_S"], s["x_V"], s["x_Vd"], s["x_R_W"], s["x_p_W"], c["link_row"], c["armature"], s["x_H"],
     )  # fmt: skip
 
 
@@ -411,7 +423,7 @@ def _smooth(params: Block, state: Block, part: int) -> None:
         s["smooth_acts"][k], s["smooth_ended"][k] = acted + log_evidence, ended
         acts = s["smooth_acts"][k]
         value = 2 * d + n  # where the first component settles
-        if settles > 0 and c["smooth_sized"][k] == 1:
+        if settles > 0 and (settles == 1 or c["smooth_sized"][k] == 1):
             sd = math.sqrt(P[value, value])
             one_sided = _one_sided(params, state, c["smooth_one_sided"][k], c["smooth_of"][k])
             acts += ev.worth(s["smooth_x"][k, value], sd, c["least"], one_sided)
@@ -474,6 +486,8 @@ def posterior(params: Block, state: Block, outputs: Block) -> None:
         top = max(top, s["constant_log"][k])
     for k in range(s["smooth_log"].shape[0]):
         top = max(top, s["smooth_log"][k])
+    for f in range(s["foothold_log"].shape[0]):
+        top = max(top, s["null_log"] + s["foothold_log"][f])
     p[:] = 0.0
     p[0] = math.exp(_WEIGHT * (s["null_log"] - top))
     p[1] = math.exp(_WEIGHT * (s["other_log"] - top))
@@ -483,6 +497,8 @@ def posterior(params: Block, state: Block, outputs: Block) -> None:
     for k in range(s["smooth_log"].shape[0]):
         log = _WEIGHT * (s["smooth_log"][k] - top)
         p[2 + c["smooth_of"][k]] += math.exp(log + c["smooth_share"][k])
+    for f in range(s["foothold_log"].shape[0]):
+        p[2 + c["foothold_of"][f]] += math.exp(_WEIGHT * (s["null_log"] + s["foothold_log"][f] - top))
     total = 0.0
     for i in range(X):
         p[i] *= math.exp(c["log_rate"][i])

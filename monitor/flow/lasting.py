@@ -246,8 +246,14 @@ def _update(state: Block, f: int, i: int, d: int) -> None:
     """Kalman update of a slot's parameters by the residual of one row."""
     s = state[0]
     # What a standing joint hides stays as it is, and so does not average out.
-    v = _CORRELATED * (s["var_fast"][i] + 20.0 * s["var_stand"][i])
-    nu, touched = s["left"][i], False
+    variance = s["var_fast"][i]
+    if s["loaded"][i] != 0:
+        # A foot's force loads the row too: what counts is what the row has beyond all others.
+        if s["fault_family"][f] != ACTUATOR:
+            return
+        variance = max(variance, s["alone_sd"][i] ** 2 - _unsure(state, f, i, d))
+    v = _CORRELATED * (variance + 20.0 * s["var_stand"][i])
+    nu, touched = s["alone"][i], False
     for a in range(d):
         h = s["fault_H"][f, i, a]
         nu -= h * (s["fault_theta"][f, a] - s["fault_before"][a])
@@ -263,6 +269,17 @@ def _update(state: Block, f: int, i: int, d: int) -> None:
         s["fault_theta"][f, a] += s["fault_gain"][a] / v * nu
         for b in range(d):
             s["fault_P"][f, a, b] -= s["fault_gain"][a] * s["fault_gain"][b] / v
+
+
+@kernel
+def _unsure(state: Block, f: int, i: int, d: int) -> float:
+    """Return the variance of what a slot's parameters do to a row."""
+    s = state[0]
+    total = 0.0
+    for a in range(d):
+        for b in range(d):
+            total += s["fault_H"][f, i, a] * s["fault_P"][f, a, b] * s["fault_H"][f, i, b]
+    return total
 
 
 @kernel
@@ -308,9 +325,9 @@ def refresh(params: Block, state: Block) -> None:
         if s["fault_of"][f] != 0 and _by_posture(s["fault_family"][f]):
             fill(
                 s["fault_family"][f], s["fault_index"][f], s["x_feature"], s["slope"], s["x_M"],
-                c["body_axis"], c["body_centre"], c["foot_axis"], c["foot_point"], c["load_axis"],
-                c["load_centre"], c["parent"], c["dof"], s["x_S"], s["x_V"], s["x_Vd"], s["x_R_W"],
-                s["x_p_W"], c["link_row"], c["armature"], s["fault_H"][f],
+                c["body_axis"], c["body_centre"], c["foot_axis"], c["foot_point"], c["foot_radius"], c["up"],
+                c["load_axis"], c["load_centre"], c["parent"], c["dof"], s["x_S"], s["x_V"], s["x_Vd"],
+                s["x_R_W"], s["x_p_W"], c["link_row"], c["armature"], s["fault_H"][f],
             )  # fmt: skip
 
 

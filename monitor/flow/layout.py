@@ -146,10 +146,11 @@ class Reason(IntEnum):
     GUIDED = 7
     CALIBRATING = 8
     STOPPED = 9  # a stop is in force: the drives may be braking or about to lose power
-    NOT_HOISTED = 10  # floating base: forces of feet, hands or docks are not told apart from faults
-    PAYLOAD_UNKNOWN = 11
-    SINCE_START = 12  # something was there already when the judgement began
-    LINK_TORQUE_MISSING = 13  # a torque sensor is configured and does not read: drive and world are one sum
+    HELD = 10  # floating base: people or a dock hold the body, with forces nobody knows
+    FEET_UNKNOWN = 11  # on the ground, and nobody says which feet are planned to stand
+    PAYLOAD_UNKNOWN = 12
+    SINCE_START = 13  # something was there already when the judgement began
+    LINK_TORQUE_MISSING = 14  # a torque sensor is configured and does not read: drive and world are one sum
 
 
 class Notice(IntEnum):
@@ -304,6 +305,17 @@ def params_fields(s: Sizes) -> list[Field]:
         ("body_centre", f8, (s.B, 3)),  # m, body frame
         ("foot_axis", i8, (s.F,)),
         ("foot_point", f8, (s.F, 3)),
+        ("foot_radius", f8, (s.F,)),  # m: ground is met so far below the point
+        ("up", f8, (3,)),  # against gravity
+        ("foot_force_sd", f8, ()),  # N: prior of each component of the force of a foot that stands
+        ("foot_guard_ns", i8, ()),  # for so long after its planned lift-off a foot may still carry
+        ("foot_lands_ns", i8, ()),  # a foot that stands may take so long to meet ground
+        ("foot_lost_ns", i8, ()),  # and may be without force for so long
+        ("foothold_of", i8, (s.F,)),  # explanation of a lost foothold, by foot
+        ("foot_early_ns", i8, ()),  # a foot may meet ground so long before it is planned to
+        ("slow_body_limit", f8, ()),  # as body_limit, of the slow residual of a walker
+        ("foot_limit", f8, ()),  # of the squared normalised force of a foot that should feel none
+        ("body_share", f8, (s.F + 1,)),  # of body_limit, by feet on the ground: each takes three components
         ("load_axis", i8, ()),
         ("load_centre", f8, (3,)),
         ("other_sd", f8, (rows,)),  # N m: of something else
@@ -374,7 +386,7 @@ def inputs_fields(s: Sizes) -> list[Field]:
     """One sample as the robot sent it, and the condition it is in."""
     m, N = s.m, s.N
     return [
-        # t_ns to tau_link lie together: `flow.wire` writes a message there in one copy.
+        # t_ns to feet lie together: `flow.wire` writes a message there in one copy.
         ("t_ns", i8, ()),  # robot clock
         ("seq", i8, ()),
         ("q", f8, (m,)),  # rad or m, order and sign of the wire
@@ -386,11 +398,13 @@ def inputs_fields(s: Sizes) -> list[Field]:
         ("base_w", f8, (3,)),  # rad/s, body axes
         ("tau_cmd", f8, (m,)),  # commanded torque, units of tau; NaN where not sent
         ("tau_link", f8, (s.T,)),  # N m, sign of the wire; NaN where not sent
+        ("feet", i8, (s.F,)),  # 1 planned to stand, 0 not, -1 not said
         ("rebase", i8, ()),  # 0 no, 1 gap or bad signal, 2 start, restart or change of condition
         ("brake", i8, (m,)),  # 1 closed
         ("drive", i8, (m,)),  # 1 powered
         ("guided", i8, ()),  # 1: a person or a calibration moves the robot
         ("judged", i8, (s.rows,)),  # 1 where the residual may open an event
+        ("grounded", i8, ()),  # 1: a floating base whose planned feet carry it
         ("E", f8, (N, 4, 4)),  # pseudo-inertias, announced payload included
     ]
 
@@ -540,6 +554,29 @@ def state_fields(s: Sizes) -> list[Field]:
         ("R_factor", f8, (rows, rows)),
         ("white", f8, (rows,)),
         ("body_ratio", f8, ()),
+        # feet
+        ("foot_J", f8, (s.F, 3, n)),  # Jacobian of the point where each foot meets ground, world axes
+        ("foot_carries", i8, (s.F,)),  # 1: it may carry: planned to, or was until a moment ago
+        ("foot_lifted_ns", i8, (s.F,)),  # when it was last planned to stand
+        ("foot_landed_ns", i8, (s.F,)),  # since when it is planned to stand
+        ("foot_felt_ns", i8, (s.F,)),  # when it was last felt to carry, or need not
+        ("loaded", i8, (rows,)),  # 1: the row feels a foot that may carry
+        ("inverse", f8, (rows, rows)),  # of R_factor
+        ("beside", f8, (rows,)),  # N m: left beside the likeliest forces of the feet that may carry
+        ("alone", f8, (rows,)),  # N m: what a row has more than all others predict; and its sd
+        ("alone_sd", f8, (rows,)),
+        ("alone_slow", f8, (2, rows)),  # the same of the slow residual, at the last evidence step
+        ("slow_R", f8, (rows, rows)),
+        ("slow_factor", f8, (rows, rows)),
+        ("pull", f8, (rows,)),  # R^-1 left
+        ("foot_white", f8, (3, rows)),
+        ("foot_covariance", f8, (3, 3)),
+        ("foot_ratio", f8, (s.F, 3)),  # how far the force of a foot stands out, least of the last moments
+        ("foot_ratio_ns", i8, (s.F, 3)),
+        ("foot_lasts", f8, ()),  # the largest of those least ones
+        ("foot_now", f8, ()),  # the largest of this sample, however short
+        ("grounded", i8, ()),
+        ("slow_body_ratio", f8, ()),
         ("cusum_sum", f8, (rows,)),
         ("cusum_count", i8, ()),
         ("cusum", f8, (rows, 2)),
@@ -558,6 +595,9 @@ def state_fields(s: Sizes) -> list[Field]:
         ("ring_hidden", f8, (RING, rows)),  # (N m)²: friction that a standing joint may hide
         ("ring_feature", f8, (RING, rows, FEATURES)),
         ("ring_loud", i8, (RING,)),  # 1: something stood out
+        ("ring_beside", f8, (RING, rows)),
+        ("ring_foot_J", f8, (RING, s.F, 3, n)),
+        ("ring_carries", i8, (RING, s.F)),
         ("ring_head", i8, ()),  # entries written so far
         ("ring_held", i8, ()),  # entries since the last re-base
         ("weigh_next", i8, ()),  # next entry to weigh, and its next stage
@@ -622,6 +662,8 @@ def state_fields(s: Sizes) -> list[Field]:
         ("other_s", f8, (rows,)),
         ("other_P", f8, (rows, rows)),
         ("other_log", f8, ()),
+        ("foothold_log", f8, (s.F,)),  # of a foothold that was lost, over nothing
+        ("foothold_force", f8, (s.F, 2)),  # N: the force of its foot against gravity, and its sd
         ("constant_s", f8, (s.K, RISE, rows)),
         ("constant_A", f8, (s.K, RISE, RISE)),
         ("constant_b", f8, (s.K, RISE)),
@@ -693,6 +735,9 @@ def outputs_fields(s: Sizes) -> list[Field]:
         ("body_ratio", f8, ()),  # the same for all rows together
         ("probability", f8, (s.X + 2,)),  # of nothing, something else, then the explanations
         ("tau_model", f8, (n,)),  # N m: what inverse dynamics expects of each joint
+        ("foot_force", f8, (s.F, 3)),  # N: of the ground on each foot, world axes; zero where none is planned
+        ("foot_force_sd", f8, (s.F, 3)),
+        ("feet_unknown", i8, ()),  # 1: on the ground, and the sample does not say which feet stand
         ("notice", i8, ()),  # bits of `Notice`
         ("signal", i8, ()),  # `Signal` of this sample
         ("signal_joint", i8, ()),  # joint it concerns, -1 none

@@ -140,6 +140,7 @@ def _evidence(facts: Facts, blocks: Blocks) -> dict[str, float]:
     log = np.full(len(facts.explanations), -np.inf)
     for name in ("constant", "smooth"):
         np.logaddexp.at(log, c[f"{name}_of"], s[f"{name}_log"] + c[f"{name}_share"])
+    np.logaddexp.at(log, c["foothold_of"], s["null_log"] + s["foothold_log"])
     weighted, rate = log + c["log_rate"][2:], c["log_rate"][2:]
     found = {"nothing": float(s["null_log"]), "something-else": float(s["other_log"])}
     verdicts = np.array([one.verdict for one in facts.explanations])
@@ -249,6 +250,8 @@ def best_candidate(blocks: Blocks, facts: Facts, explanation: int) -> tuple[int,
     for smooth, name in ((False, "constant"), (True, "smooth")):
         for k in np.flatnonzero(c[f"{name}_of"] == explanation).tolist():
             ways.append((float(s[f"{name}_log"][k] + c[f"{name}_share"][k]), k, smooth))
+    if not ways:  # told by other means than evidence of the residual
+        return -1, facts.explanations[explanation].candidates[0], False
     _, best, smooth = max(ways)
     return best, _declared(blocks, facts.explanations[explanation], best, smooth), smooth
 
@@ -265,6 +268,9 @@ def _declared(blocks: Blocks, explanation: Explanation, k: int, smooth: bool) ->
 def size_of(blocks: Blocks, k: int, one: Candidate, smooth: bool) -> Size:
     """Return the size of a candidate: what was largest of a smooth one, the mean of a constant."""
     s = blocks.state[0]
+    if k < 0:
+        force, sd = s["foothold_force"][one.number].tolist()
+        return Size(force, one.unit, sd)
     if smooth:
         return Size(float(s["smooth_peak_size"][k]), one.unit, float(s["smooth_peak_sd"][k]))
     return Size(float(s["constant_size"][k]), one.unit, float(s["constant_size_sd"][k]))

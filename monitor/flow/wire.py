@@ -35,7 +35,7 @@ class JointSample(NamedTuple):
 
     seq: int
     t_ns: int  # robot clock
-    body: bytes  # t_ns, seq, q, qd, tau, base state, tau_cmd, tau_link: as the `inputs` block holds them
+    body: bytes  # t_ns, seq, q, qd, tau, base state, tau_cmd, tau_link, feet: as in `inputs`
 
 
 class Payload(NamedTuple):
@@ -104,7 +104,9 @@ class JointsFormat:
         self._rows = struct.Struct(f"<qq{3 * m}d")
         self._head = struct.Struct("<qq")
         self._no_command = self._row.pack(*[math.nan] * m)
-        self._nothing_more = _NO_BASE + self._no_command + self._no_links
+        self._feet = struct.Struct(f"<{feet}q")
+        self._no_feet = self._feet.pack(*[-1] * feet)
+        self._nothing_more = _NO_BASE + self._no_command + self._no_links + self._no_feet
         # Orders of names seen so far; the configured one needs no re-ordering. Bounded: names are checked.
         self._orders: dict[tuple[Any, ...], tuple[int, ...] | None] = {self.names: None}
 
@@ -139,7 +141,7 @@ class JointsFormat:
         return JointSample(seq, t_ns, body + (self._nothing_more if plain else self._more(message, order)))
 
     def _more(self, message: dict[str, Any], order: tuple[int, ...] | None) -> bytes:
-        """Return base state, commanded and link torque as `inputs` holds them; check what else there is."""
+        """Return what follows tau as `inputs` holds it; check what else there is."""
         base = _base(message.get("base")) if self.floating else _NO_BASE
         tau_cmd = message.get("tau_cmd")
         commanded = self._no_command if tau_cmd is None else self._array("tau_cmd", tau_cmd, order)
@@ -148,9 +150,10 @@ class JointsFormat:
             read = self._row.unpack(self._array("tau_link", message["tau_link"], order))
             links = self._links.pack(*(read[i] for i in self._link_torque))
             self.ignores_link_torque = not self._link_torque
+        feet = self._no_feet
         if self.feet and message.get("feet") is not None:
-            _flags("joints feet", message["feet"], self.feet)
-        return base + commanded + links
+            feet = self._feet.pack(*_flags("joints feet", message["feet"], self.feet))
+        return base + commanded + links + feet
 
     def _are_raw(self, q: Any, qd: Any, tau: Any) -> bool:
         """Whether these are raw doubles of the right length; the slow road names what is wrong."""

@@ -287,8 +287,9 @@ def _fill_ledger(params: Any, tree: Tree, config: Config) -> None:
     params["pole_fast"] = 2.0 * math.pi * watch.fast_bandwidth_hz
     params["pole_slow"] = 2.0 * math.pi * watch.slow_bandwidth_hz
     noises = _noises(tree, config)
+    gains = _alike(noises, tree.n - len(tree.joints))
     for k in range(GAIN_STEPS):
-        for i, (position_sd, velocity_sd) in enumerate(noises):
+        for i, (position_sd, velocity_sd) in enumerate(gains):
             dt_s = (k + 1) * period_s
             params["gain_fast"][0, k, i] = riccati_gain(position_sd, velocity_sd, watch.fast_walk, dt_s)
             params["gain_slow"][0, k, i] = riccati_gain(position_sd, velocity_sd, watch.slow_walk, dt_s)
@@ -305,6 +306,19 @@ def _fill_ledger(params: Any, tree: Tree, config: Config) -> None:
     params["start_settle_ns"] = round(1e9 * watch.start_settle_s)
     params["quiet_ns"] = round(1e9 * watch.quiet_s)
     params["clock_jump_ns"] = round(1e9 * watch.clock_jump_periods * period_s)
+
+
+def _alike(noises: list[tuple[float, float]], base: int) -> list[tuple[float, float]]:
+    """Return the noise by which each row is filtered: that of the base for all rows of a walker.
+
+    With gains in common the response does not depend on the mass matrix: a force on a foot shows in the rows
+    of base and leg at the same time, in the proportion of its Jacobian. With their own, quicker gains of the
+    joints every step of a foot would look like an outside force for some 20 ms.
+    """
+    if not base:
+        return noises
+    position, velocity = zip(*noises[:base], strict=True)
+    return len(noises) * [(max(position), max(velocity))]
 
 
 def _noises(tree: Tree, config: Config) -> list[tuple[float, float]]:

@@ -83,6 +83,10 @@ class Band:
         How far the model is off for a second or more [N m]; the sums count it beside the noise.
     cusum_limit : float
         Sum of normalised block means, less the reference, that opens an event.
+    slow_body_limit : float
+        As `body_limit`, of the slow residual of a walker.
+    foot_limit : float
+        Squared normalised force of a foot that should feel none, that opens an event.
     """
 
     fast: Floats
@@ -95,6 +99,8 @@ class Band:
     body_limit: float
     cusum_sd: Floats
     cusum_limit: float
+    slow_body_limit: float
+    foot_limit: float
 
 
 @dataclass(frozen=True, eq=False)
@@ -141,6 +147,8 @@ def default_band(rated: Floats, coulomb: Floats, viscous: Floats) -> Band:
         body_limit=body_limit(n),
         cusum_sd=_LASTING * rated,
         cusum_limit=CUSUM_LIMIT,
+        slow_body_limit=body_limit(n),
+        foot_limit=body_limit(3),
     )
 
 
@@ -232,6 +240,8 @@ class _BandTable(Table):
     body_limit: float = Field(description="Limit of all rows together.", gt=0)
     cusum_sd: Row = Field(description="Lasting error of the model of each row [N m].")
     cusum_limit: float = Field(description="Limit of the sums.", gt=0)
+    slow_body_limit: float = Field(description="Limit of all rows together, slow residual.", gt=0)
+    foot_limit: float = Field(description="Limit of the force of a foot that should feel none.", gt=0)
 
 
 class _File(Table):
@@ -376,6 +386,8 @@ def _band(where: str, table: _BandTable, n: int) -> Band:
         slow_limit=table.slow_limit,
         body_limit=table.body_limit,
         cusum_limit=table.cusum_limit,
+        slow_body_limit=table.slow_body_limit,
+        foot_limit=table.foot_limit,
     )
 
 

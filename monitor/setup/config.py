@@ -224,7 +224,11 @@ class FootConfig(Table):
         examples=["front_left_shank"], description="Link of the robot description which carries the foot."
     )
     point: Vector3 = Field(
-        default=(0.0, 0.0, 0.0), description="Where it touches ground, in axes of the link [m]."
+        default=(0.0, 0.0, 0.0),
+        description="Where it meets ground, or the centre of a foot that is a ball; axes of the link [m].",
+    )
+    radius: NotNegative = Field(
+        default=0.0, description="Of a foot that is a ball: ground is met so far below its centre [m]."
     )
 
 
@@ -308,6 +312,7 @@ class RobotConfig(Table):
         _refuse_doubled("foot", (foot.name for foot in self.foot))
         self._check_gravity()
         self._check_coupling()
+        self._check_link_sensors()
         return self
 
     def _check_gravity(self) -> None:
@@ -326,6 +331,16 @@ class RobotConfig(Table):
                 "one of the two at its default",
                 "Keep the one you measured and remove the other.",
             )
+
+    def _check_link_sensors(self) -> None:
+        for i, joint in enumerate(self.joint):
+            if joint.link_torque_sensor and self.base == "floating":
+                raise refusal(
+                    ("joint", i, "link_torque_sensor"),
+                    'true beside base = "floating"',
+                    "false, or a fixed base",
+                    "On a walking robot, link side and motor side of a joint are not taken apart yet.",
+                )
 
     def _check_coupling(self) -> None:
         if not self.coupling:
@@ -495,6 +510,28 @@ class WatchConfig(Table):
         le=1,
         description="Share of peak_torque at which the drive counts as at its limit: reported, not a fault.",
     )
+    foot_force_ratio: Positive = Field(
+        default=0.4,
+        description="How large each component of a standing foot's force is, as a share of the weight.",
+    )
+    foot_guard_s: NotNegative = Field(
+        default=0.04,
+        description=(
+            "For so long after its planned lift-off a foot may still carry: it leaves the ground some "
+            "milliseconds late, and the residual lags by some more [s]."
+        ),
+    )
+    foot_early_s: NotNegative = Field(
+        default=0.01,
+        description="A foot may meet ground so long before it is planned to, which is no event [s].",
+    )
+    foot_landing_s: NotNegative = Field(
+        default=0.02, description="A foot may meet ground so long after it was planned to [s]."
+    )
+    foot_lost_s: Positive = Field(
+        default=0.015,
+        description="A planned foot that was without force for so long has lost its hold [s].",
+    )
     frozen_s: Positive = Field(
         default=0.05,
         description="A position that stays the same this long while the joint moves is frozen [s].",
@@ -612,6 +649,9 @@ class ExplainConfig(Table):
     )
     touchdown_per_h: Rate = Field(
         default=100.0, description="Feet that meet ground where none is planned, all feet [1/h]."
+    )
+    foothold_lost_per_h: Rate = Field(
+        default=100.0, description="Feet that carry nothing where they are planned to, all feet [1/h]."
     )
     other_per_h: Rate = Field(default=1.0, description="Whatever is none of these [1/h].")
     nothing_per_h: Rate = Field(

@@ -18,20 +18,21 @@ from monitor.kernels.dynamics import REVOLUTE
 from monitor.robot.robot import Robot
 from monitor.robot.shape import bodies
 from monitor.robot.tree import WORLD, Tree
-from monitor.setup.calibration import Band
+from monitor.setup.calibration import Band, body_limit
 from monitor.setup.config import Config
 
 Floats = NDArray[np.float64]
 
-EVIDENCE_S = 0.004  # between evidence steps
 SLOW_S = 1.5  # correlation of slow noise
-STAGES = 4
+# Rhythm of evidence by degrees of freedom: time between steps [s], stages of a step
+# A walker has many more candidates, and each costs more; no sample may cost too much.
+RHYTHM = {10: (0.004, 4), 1000: (0.008, 16)}
 BLOCK_S = 0.1  # of the sums
 HOLD_S = 0.03
 LEAST = 0.12  # prior sd: smaller ones are no fault
 MODEL_ERROR = 0.03
 TRACK_S = 120.0
-TRACK_NOISE = 20.0
+TRACK_NOISE_S = 0.08  # as long the noise of friction tracking counts as one
 TRACK_CLIP = 2.5
 OTHER = 0.2  # of rated
 # Postures that are tried, and the share below which a change is rounding.
@@ -64,7 +65,7 @@ def outline(tree: Tree, config: Config, rated: Floats, model: Any) -> Outline:
         telling=np.array(
             [_telling(tree, rated, axis, centre) for axis, centre in zip(body.axis, body.centre, strict=True)]
         ),
-        feet=tuple(foot.name for foot in config.robot.foot),
+        feet=tuple(foot.name for foot in config.robot.foot if base),
         sensed=tuple(tree.joints.index(x.name) for x in config.robot.joint if x.link_torque_sensor),
         weight=max(weight, 1.0),
         carrier=_carrier(tree, config)[0],
@@ -180,7 +181,8 @@ def candidates(outline_: Outline) -> Candidates:
     """Return all explanations of a robot with their candidates."""
     found = tuple(explain.explanations(outline_))
     every = [(i, one) for i, explanation in enumerate(found) for one in explanation.candidates]
-    constant = tuple(pair for pair in every if pair[1].time_s is None)
+    # What predicts no residual is told by other means, and is no candidate of the evidence.
+    constant = tuple(pair for pair in every if pair[1].time_s is None and pair[1].sd)
     smooth = tuple(pair for pair in every if pair[1].time_s is not None)
     return Candidates(found, constant, smooth)
 
@@ -193,6 +195,7 @@ def fill_band(params: Any, band: Band) -> None:
     params["row_limit"], params["slow_limit"] = band.row_limit, band.slow_limit
     params["body_limit"] = band.body_limit
     params["cusum_sd"], params["cusum_limit"] = band.cusum_sd, band.cusum_limit
+    params["slow_body_limit"], params["foot_limit"] = band.slow_body_limit, band.foot_limit
     params["cusum_reference"] = 2.0
     params["quiet_ratio"], params["onset_ratio"] = 0.6, 0.4
     params["hold_s"], params["model_error"] = HOLD_S, MODEL_ERROR
@@ -201,20 +204,22 @@ def fill_band(params: Any, band: Band) -> None:
 def fill_evidence(params: Any, tree: Tree, config: Config, found: Candidates) -> None:
     """Set the rhythm of evidence, the bodies, the candidates and their rates."""
     period_s = 1.0 / config.input.rate_hz
-    samples = max(1, round(EVIDENCE_S / period_s))
+    between_s, stages = next(rhythm for most, rhythm in RHYTHM.items() if tree.n <= most)
+    samples = max(1, round(between_s / period_s))
     dt = samples * period_s
-    params["evidence_samples"], params["evidence_stages"] = samples, STAGES
+    params["evidence_samples"], params["evidence_stages"] = samples, stages
     params["column_lag"] = round(_lag_s(params) / dt)
     params["slow_later_s"] = max(_lag_s(params, "slow") - _lag_s(params), period_s)
-    params["stages_at_once"] = math.ceil(STAGES / samples)
+    params["stages_at_once"] = math.ceil(stages / samples)
     params["slow_keep"] = math.exp(-dt / SLOW_S)
     params["track_keep"] = math.exp(-dt / TRACK_S)
-    params["track_noise"], params["track_clip"] = TRACK_NOISE, TRACK_CLIP
+    params["track_noise"], params["track_clip"] = TRACK_NOISE_S / between_s, TRACK_CLIP
     _fill_trend(params, config, dt)
     params["least"] = LEAST
     params["cusum_samples"] = max(1, round(BLOCK_S / period_s))
     params["other_sd"] = OTHER * params["rated"]
     _fill_bodies(params, tree, config)
+    _fill_feet(params, tree, config)
     _fill_candidates(params, found, dt)
     settings = config.explain
     params["sure"], params["sure_ns"] = settings.lasting_probability, round(1e9 * settings.lasting_s)
@@ -223,6 +228,8 @@ def fill_evidence(params: Any, tree: Tree, config: Config, found: Candidates) ->
         params["of_family"][0, number] = explain.NAMES.index(first.family)
         params["of_index"][0, number] = first.number
         params["of_sd"][0, number] = _lasting_sd(explanation)
+        if first.family == "foothold-lost":
+            params["foothold_of"][0, first.number] = number
     rates = [settings.nothing_per_h, settings.other_per_h, *(x.rate_per_h for x in found.explanations)]
     params["log_rate"] = np.log(rates)
 
@@ -255,7 +262,7 @@ def _load_centre(tree: Tree, config: Config, axis: int) -> Floats:
 
 def _lasting_sd(explanation: Explanation) -> Floats:
     """Return the prior sd of the parameters an explanation has when it lasts (LASTING)."""
-    constants = tuple(one.sd[0] for one in explanation.candidates if one.time_s is None)
+    constants = tuple(one.sd[0] for one in explanation.candidates if one.time_s is None and one.sd)
     settled = next((one.sd for one in explanation.candidates if one.settles == len(one.sd) <= LASTING), ())
     values = constants or settled
     sd = np.zeros(LASTING)
@@ -270,9 +277,25 @@ def _fill_bodies(params: Any, tree: Tree, config: Config) -> None:
         place = next(place for place in tree.links if place.name == foot.link and place.axis != WORLD)
         params["foot_axis"][0, i] = place.axis
         params["foot_point"][0, i] = place.R @ foot.point + place.p
+        params["foot_radius"][0, i] = foot.radius
     axis = _carrier(tree, config)[1]
     params["load_axis"] = axis
     params["load_centre"] = _load_centre(tree, config, axis)
+
+
+def _fill_feet(params: Any, tree: Tree, config: Config) -> None:
+    """Set what is known of feet that stand beforehand, and how punctual they are."""
+    gravity, watch = np.array(config.robot.gravity_vector), config.watch
+    strength = float(np.linalg.norm(gravity))
+    params["up"] = -gravity / strength if strength else (0.0, 0.0, 1.0)
+    weight = float(tree.arrays.E[:, 3, 3].sum()) * strength
+    params["foot_force_sd"] = watch.foot_force_ratio * max(weight, 1.0)
+    params["foot_guard_ns"] = round(1e9 * watch.foot_guard_s)
+    params["foot_lands_ns"] = round(1e9 * watch.foot_landing_s)
+    params["foot_lost_ns"] = round(1e9 * watch.foot_lost_s)
+    params["foot_early_ns"] = round(1e9 * watch.foot_early_s)
+    for feet in range(len(config.robot.foot) + 1):
+        params["body_share"][0, feet] = body_limit(max(tree.n - 3 * feet, 1)) / body_limit(tree.n)
 
 
 def _fill_candidates(params: Any, found: Candidates, dt: float) -> None:

@@ -14,7 +14,7 @@ from typing import Any, NamedTuple
 import numpy as np
 from numpy.typing import NDArray
 
-from monitor.commission.drive import Samples
+from monitor.commission.drive import Samples, ready
 from monitor.flow.layout import Block, Blocks
 from monitor.flow.step import step
 from monitor.kernels.jit import kernel, resolved
@@ -23,10 +23,15 @@ from monitor.setup.build import Setup, build
 from replay.simulate import Push, Rind, Schedule
 from tests.bench.common import rind_config
 from tests.bench.dynamics import compiled_us
+from tests.worlds.score_walker import config_of, samples_of
+from tests.worlds.walker import walker_session
 
 Floats = NDArray[np.float64]
 
 _TURNS, _WARM = 9, 1500
+_BASE = {
+    "base_p": slice(0, 3), "base_quat": slice(3, 7), "base_v": slice(7, 10), "base_w": slice(10, 13)
+}  # fmt: skip
 
 
 class Subject(NamedTuple):
@@ -47,7 +52,15 @@ def rind() -> Subject:
     return Subject("7-joint arm", build(rind_config()), Samples(t_ns, q, qd, tau, np.zeros((len(q), 0))))
 
 
-SUBJECTS: tuple[Callable[[], Subject], ...] = (rind,)
+def terrace() -> Subject:
+    """Return a trotting walker, one joint of which says half its rated torque too much from the middle on."""
+    session = walker_session("trot", 1, 1, 10.0, happenings=False)
+    setup, samples = build(config_of(session)), samples_of(session)
+    samples.tau[len(samples.tau) // 2 :, -1] += 0.5 * float(setup.params["rated"][0, -1])
+    return Subject("12-joint walker", setup, samples)
+
+
+SUBJECTS: tuple[Callable[[], Subject], ...] = (rind, terrace)
 
 
 @kernel
@@ -79,9 +92,9 @@ def _timed(subject: Subject) -> tuple[Floats, NDArray[np.bool_]]:
     """Return the least time of each sample [µs], and whether an event was open after it."""
     found, opened = [], np.zeros(len(subject.samples.t_ns), bool)
     for _ in range(_TURNS):
-        blocks = subject.setup.blocks()
+        blocks = ready(subject.setup, subject.samples)
         empty = _turn(resolved(_nothing, *blocks), blocks, subject.samples, opened)
-        blocks = subject.setup.blocks()
+        blocks = ready(subject.setup, subject.samples)
         found.append(_turn(resolved(step, *blocks), blocks, subject.samples, opened) - np.median(empty))
     return np.min(found, axis=0) / 1e3, opened
 
@@ -92,10 +105,13 @@ def _turn(
     """Return the time of each call [ns], all rows judged; fill where an event is open."""
     took = np.zeros(len(opened), np.int64)
     x, state = blocks.inputs[0], blocks.state[0]
-    x["judged"], x["drive"] = 1, 1
     for k in range(len(took)):
         x["seq"], x["t_ns"] = k, samples.t_ns[k]
         x["q"], x["qd"], x["tau"] = samples.q[k], samples.qd[k], samples.tau[k]
+        if samples.feet is not None:
+            x["feet"] = samples.feet[k]
+            for name, columns in _BASE.items():
+                x[name] = samples.base[k, columns]
         begin = time.perf_counter_ns()
         call(*blocks)
         took[k] = time.perf_counter_ns() - begin

@@ -106,8 +106,19 @@ def test_no_combination_that_leaves_anything_unsaid_or_unpowered_counts_as_watch
             assert not (judged[i] and (joints[i][0] == B or mode == "calibrating"))
 
 
-@pytest.mark.parametrize("support", ["ground", "hoisted", "carried", "docked", ...])
-def test_a_walker_is_watched_only_where_no_ground_can_push_its_feet(sled_setup: Setup, support: Any) -> None:
+@pytest.mark.parametrize(
+    ("support", "reason", "judged"),
+    [
+        ("ground", Reason.FEET_UNKNOWN, 0),  # this one has no feet that could be planned to stand
+        ("hoisted", Reason.NONE, 1),
+        ("carried", Reason.HELD, 1),
+        ("docked", Reason.HELD, 0),
+        (..., Reason.CONDITION_UNKNOWN, 0),
+    ],
+)
+def test_a_walker_is_watched_as_far_as_the_forces_on_it_are_known(
+    sled_setup: Setup, support: Any, reason: Reason, judged: int
+) -> None:
     rig = Rig(sled_setup)
     rig.condition(support=support)
     pose = np.array([0, 0, 1, 1, 0, 0, 0.0, 0, 0])
@@ -116,10 +127,8 @@ def test_a_walker_is_watched_only_where_no_ground_can_push_its_feet(sled_setup: 
     base = base_fields(pose, np.zeros(6))
     for _ in range(600):
         rig.sample([0.0, 0.0], [0.0, 0.0], held, **base)
-    free = support == "hoisted"
-    assert seen(rig)[0] == [(W, Reason.NONE) if free else (C, Reason.NOT_HOISTED)] * 2
-    judged = rig.pipeline.blocks.inputs[0]["judged"]
-    assert judged.tolist() == [0] * 6 + ([1, 1] if free else [0, 0])
+    assert seen(rig)[0] == [(W if reason == Reason.NONE else C, reason)] * 2
+    assert rig.pipeline.blocks.inputs[0]["judged"].tolist() == [0] * 6 + [judged] * 2
 
 
 def test_before_the_robot_says_anything_nothing_counts_as_well(pair_setup: Setup) -> None:

@@ -51,14 +51,15 @@ as_sent = st.sampled_from(["list", "bin"])
 
 def fields(sample: JointSample) -> dict[str, Any]:
     """Return what the body of a sample holds, by its documented layout: 64-bit numbers, little-endian."""
-    numbers = struct.unpack("<qq25d", sample.body)
+    numbers = struct.unpack_from("<qq25d", sample.body)
+    feet = struct.unpack(f"<{len(sample.body[27 * 8 :]) // 8}q", sample.body[27 * 8 :])
     names = {"q": 3, "qd": 3, "tau": 3, "p": 3, "quat": 4, "v": 3, "w": 3, "tau_cmd": 3}
     found: dict[str, Any] = {"t_ns": numbers[0], "seq": numbers[1]}
     at = 2
     for name, size in names.items():
         found[name] = numbers[at : at + size]
         at += size
-    return found
+    return found | {"feet": feet}
 
 
 def bits(values: Any) -> bytes:
@@ -211,6 +212,8 @@ def sent_or_refused(payload: bytes) -> None:
             if row is not None:
                 row = list(struct.unpack("<3d", row)) if isinstance(row, bytes) else row
                 assert bits(found[name]) == bits([float(row[i]) for i in order])
+        said = sent.get("feet")
+        assert list(found["feet"]) == ([-1] * decoder.feet if said is None else said)[: decoder.feet]
 
 
 @fuzz
@@ -452,3 +455,12 @@ def test_link_torques_of_joints_with_a_sensor_come_last_in_the_configured_order(
     assert np.isnan(struct.unpack("<2d", without[-16:])).all()
     assert len(without) == len(FIXED.decode(msgpack.packb(GOOD)).body) + 16
     assert not decoder.ignores_link_torque
+
+
+@pytest.mark.parametrize(
+    ("said", "held"), [({"feet": [0, 1]}, (0, 1)), ({"feet": None}, (-1, -1)), ({}, (-1, -1))]
+)
+def test_planned_feet_come_with_the_sample_and_are_unknown_where_not_sent(
+    said: dict[str, Any], held: tuple[int, int]
+) -> None:
+    assert fields(FLOATING.decode(msgpack.packb(GOOD | {"base": BASE} | said)))["feet"] == held

@@ -67,6 +67,8 @@ def drawn(setup: Setup, seed: int = 1) -> Calibration:
         body_limit=61.5,
         cusum_sd=rng.uniform(0.1, 1.0, n),
         cusum_limit=13.75,
+        slow_body_limit=55.25,
+        foot_limit=41.5,
     )
     bend = rng.normal(0.0, 0.3, (n, BENDS))
     return Calibration(Model(E, *friction, bend), band, {"sessions": ["ab12"], "date": "2031-05-04"})

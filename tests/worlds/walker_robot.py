@@ -175,7 +175,9 @@ def terrace(seed: int) -> Terrace:
         coulomb=true["coulomb"],
         viscous=true["viscous"],
         joints=joints,
-        feet=tuple({"name": f, "link": f"{f}_shank", "point": [0.0, 0.0, -shank]} for f in FEET),
+        feet=tuple(
+            {"name": f, "link": f"{f}_shank", "point": [0.0, 0.0, -shank], "radius": radius} for f in FEET
+        ),
         grip=rng.uniform(0.6, 0.9),
         stance_height_m=0.78 * (thigh + shank) + radius,
     )
