@@ -79,7 +79,8 @@ def credible(params: Block, inputs: Block, state: Block, outputs: Block) -> bool
     s["bad"][fault] += 1
     if fault != _OK:
         out["notice"] |= _BAD_SAMPLE
-        s["event_doubtful"] |= int(fault != _CLOCK and x["t_ns"] - s["event_onset_ns"] < _SHOWS_NS)
+        if s["event_open"] != 0 and fault != _CLOCK and x["t_ns"] - s["event_onset_ns"] < _SHOWS_NS:
+            s["event_doubtful"] = 1
     return bool(fault == _OK)
 
 

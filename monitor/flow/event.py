@@ -33,6 +33,7 @@ def into_band(params: Block, inputs: Block, state: Block, outputs: Block) -> Non
     band.variance(s["cause"], c["cause_slow"], s["var_slow"])
     band.standing(s["cause"], c["cause_fast"], s["var_stand"])
     floating = s["v"].shape[0] > c["tau_lag"].shape[0]
+    out["feet_unknown"] = 0
     if floating:
         feet.stand(params, inputs, state, outputs)
     tracking.explained(s["feature"], s["track"], s["track_P"], s["explained"], s["explained_var"])
@@ -106,7 +107,6 @@ def _beside_feet(params: Block, inputs: Block, state: Block, outputs: Block) -> 
         for i in range(n):
             s["slow_ratio"][i] = abs(s["alone"][i]) / (c["slow_limit"] * s["alone_sd"][i])
             s["slow_body_ratio"] += s["white"][i] ** 2 / (share * c["slow_body_limit"])
-            out["band_slow"][i] = c["slow_limit"] * s["alone_sd"][i]
             s["alone_slow"][0, i], s["alone_slow"][1, i] = s["alone"][i], s["alone_sd"][i]
         s["white"][:] = s["left"]
         evidence.whiten(s["R_factor"], s["white"])
@@ -114,6 +114,7 @@ def _beside_feet(params: Block, inputs: Block, state: Block, outputs: Block) -> 
     feet_kernels.pulls(s["inverse"], s["white"], s["pull"], s["alone"], s["alone_sd"])
     for i in range(n):
         out["band_fast"][i] = c["row_limit"] * s["alone_sd"][i]
+        out["band_slow"][i] = c["slow_limit"] * s["alone_slow"][1, i]
         s["fast_ratio"][i] = abs(s["alone"][i]) / out["band_fast"][i]
         out["ratio"][i] = max(s["fast_ratio"][i], s["slow_ratio"][i])
     s["body_ratio"] /= share

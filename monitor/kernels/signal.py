@@ -18,7 +18,7 @@ Floats = NDArray[np.float64]
 OK, NON_FINITE, OUT_OF_RANGE, BASE_POSE = 0, 1, 2, 7
 
 NOISY = 6.0  # score from which on a reading is too noisy
-SUSPECT = 2.5  # score that no blow reaches: the reading may turn out too noisy
+SUSPECT = 3.5  # score that no blow reaches: the reading may turn out too noisy
 ROUGH = 1000  # samples over which the roughness of a torque is learnt
 LIVELY = 1000  # noisy samples after which an exact repetition means something
 _RELIEF = 0.2

@@ -17,7 +17,7 @@ from monitor.flow.wire import pack
 from monitor.setup.build import Setup
 from tests.flow.rig import PAIR, PERIOD_NS, Mover, Rig, both, message
 
-REST = np.array([0.3, -0.5])
+REST = np.array([0.3, 1.0])  # both joints bear weight
 WEIGHT = Mover(PAIR, (0.3, 0.1)).gravity_torque(REST)
 STATEMENT = [
     "verdict", "detail", "joint", "link", "probability", "alternatives", "size", "onset_t",

@@ -17,7 +17,7 @@ from monitor.flow.verdict import touch
 from monitor.setup.build import Setup
 from tests.flow.rig import PAIR, PAIR_JOINTS, Mover, Rig, both, made
 
-REST = np.array([0.3, -0.5])
+REST = np.array([0.3, 1.0])  # both joints bear weight
 WEIGHT = Mover(PAIR, (0.3, 0.1)).gravity_torque(REST)
 
 

@@ -94,7 +94,8 @@ def samples_of(session: WalkerSession) -> Samples:
     q, qd, tau, base = (
         np.ascontiguousarray(x, dtype=float) for x in (session.q, session.qd, session.tau, base)
     )
-    return Samples(t_ns, q, qd, tau, base, session.planned.astype(np.int64), session.support == "hoisted")
+    feet, hoisted = session.planned.astype(np.int64), session.support == "hoisted"
+    return Samples(t_ns, q, qd, tau, base, feet, hoisted=hoisted)
 
 
 def prepared(robot: int, first: int) -> Setup:
