@@ -23,6 +23,7 @@ _RISE_S = 0.005  # of the fast residual
 _KNOWN_NS = 40_000_000  # certainty for so long suffices for what is known
 _FOOT_NS = 12_000_000  # certainty for so long suffices for what a foot met or missed
 _SHIFTS = 0.3
+_WATCHED = 2  # evidence steps that a foot without force was watched before its event opened
 _BEFORE = 10  # entries before the onset that tell the slow noise
 _DEPENDENT = 25.0
 _WEIGHT = 0.5  # of evidence
@@ -37,6 +38,9 @@ def begin(params: Block, inputs: Block, state: Block) -> None:
     s = state[0]
     s["weigh_afresh"] = 0
     s["weighed"] = 0
+    for f in range(s["foothold_log"].shape[0]):
+        if s["foothold_log"][f] > 0.0:
+            s["weighed"] = _WATCHED
     s["weigh_stage"] = 0
     s["sure_of"] = -1
     s["concluded"] = 0
@@ -157,7 +161,7 @@ def _conclude(params: Block, inputs: Block, state: Block, outputs: Block) -> boo
         s["sure_of"], s["sure_since_ns"] = best, s["at_ns"]
     sure_ns = s["at_ns"] - s["sure_since_ns"]
     family = c["of_family"][best]
-    if (family in (TOUCHDOWN, FOOTHOLD)) and sure_ns > _FOOT_NS:
+    if family == FOOTHOLD or (family == TOUCHDOWN and sure_ns > _FOOT_NS):
         s["concluded"] = 1  # what follows is a stumble
         return False
     known = lasting.slot_of(params, state, best) >= 0
