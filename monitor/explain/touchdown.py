@@ -20,7 +20,7 @@ NAME = "touchdown"
 NORMAL_SD, SIDEWAYS_SD = 0.4, 0.15
 # How fast the force comes, in a step that is meant or in a stumble; the normal one wavers by so much of its
 # variance.
-TIMES_S, SETTLED = (0.03, 0.008), 0.3
+TIMES_S, SETTLED = (0.1, 0.03, 0.008), 0.3
 
 
 def explanations(outline: Outline) -> list[Explanation]:
@@ -35,7 +35,7 @@ def explanations(outline: Outline) -> list[Explanation]:
 
 def _way(foot: int, sd: tuple[float, ...], time_s: float) -> Candidate:
     return Candidate(
-        NAME, foot, "unplanned", sd, "N", 0.5, time_s, 1, SETTLED, lasts_s=1.0, one_sided=True
+        NAME, foot, "unplanned", sd, "N", 1.0 / len(TIMES_S), time_s, 1, SETTLED, lasts_s=1.0, one_sided=True
     )  # fmt: skip
 
 

@@ -14,7 +14,6 @@ _JOINT_SPACE, _FIRST_ORDER = int(Form.JOINT_SPACE), int(Form.FIRST_ORDER)
 _EVENT_OPENED, _EVENT_ENDED = int(Notice.EVENT_OPENED), int(Notice.EVENT_ENDED)
 _STANDING = 0.1
 _STUCK = 10.0  # the torque that a standing joint hides does not average out
-_HIDES = 0.5  # of Coulomb friction
 # A single block counts at most so many sd: the sums are for what lasts.
 _CLIP = 6.0
 
@@ -293,7 +292,7 @@ def _remember(params: Block, inputs: Block, state: Block, outputs: Block) -> boo
         s["ring_extra"][k, i] = s["explained_var"][i]
     for i in range(s["a"].shape[0]):
         # Whatever acts on the robot may also turn the friction that a standing joint hides.
-        s["ring_hidden"][k, i] = (_HIDES * c["coulomb"][i] * s["cause"][i, band.STANDS]) ** 2
+        s["ring_hidden"][k, i] = (c["hides"] * c["coulomb"][i] * s["cause"][i, band.STANDS]) ** 2
     link_torque.hidden(params, s["ring_hidden"][k])
     s["ring_feature"][k] = s["feature"]
     s["ring_head"] += 1

@@ -25,8 +25,6 @@ _FOOT_NS = 12_000_000  # certainty for so long suffices for what a foot met or m
 _SHIFTS = 0.3
 _WATCHED = 2  # evidence steps that a foot without force was watched before its event opened
 _BEFORE = 10  # entries before the onset that tell the slow noise
-_DEPENDENT = 25.0
-_WEIGHT = 0.5  # of evidence
 _PAUSE_NS = 50_000_000
 _SHAKEN = 0.03  # share of a standing joint's friction that jumps about while something acts
 _NEAR = 0.1  # a smooth cause begins so near zero, in prior sd
@@ -260,13 +258,13 @@ def _noise(params: Block, inputs: Block, state: Block, entry: int) -> None:
         stands = s["ring_stand"][entry, i]
         var = s["ring_var"][entry, i] - stands
         # What an explanation cannot get right of a large residual: noise that lasts a while, and noise that
-        # comes and goes with the motion. White noise stands for the latter: as strong as 25 dependent steps.
+        # comes and goes with the motion. White noise stands for the latter: as strong as dependent steps are.
         rough = (c["model_error"] * s["ring_beside"][entry, i]) ** 2
         slow = c["slow_share"][i] * var + stands + s["ring_extra"][entry, i] + c["cusum_sd"][i] ** 2
         slow += s["ring_hidden"][entry, i]
         s["x_d"][i] = math.sqrt(slow + rough)
         s["x_y"][i] = (1.0 - c["slow_share"][i]) * var + stuck * stands + _SHAKEN * s["ring_hidden"][entry, i]
-        s["x_spread"][i] = _DEPENDENT * rough
+        s["x_spread"][i] = c["dependent"] * rough
         if x["judged"][i] == 0:
             s["x_spread"][i] += band.BLIND * c["rated"][i] ** 2
     band.covariance(s["x_y"], c["rho"], s["x_spread"], s["R"])
@@ -478,9 +476,9 @@ def _to_body(R: Block, wrench: Block) -> None:
 def posterior(params: Block, state: Block, outputs: Block) -> None:
     """Fill the probability of every explanation: rates times evidence, candidates of one added up.
 
-    Evidence counts `_WEIGHT` times: the model is not quite right, residuals depend on each other more than it
-    knows, and a posterior that takes it at its word is too sure ("Inconsistency of Bayesian inference for
-    misspecified linear models, and a proposal for repairing it", Bayesian Analysis 2017,
+    Evidence counts `evidence_weight` times: the model is not quite right, residuals depend on each other more
+    than it knows, and a posterior that takes it at its word is too sure ("Inconsistency of Bayesian inference
+    for misspecified linear models, and a proposal for repairing it", Bayesian Analysis 2017,
     doi 10.1214/17-BA1085). The weight is what makes probabilities on simulated arms come true.
     """
     c, s, p = params[0], state[0], outputs[0]["probability"]
@@ -493,16 +491,18 @@ def posterior(params: Block, state: Block, outputs: Block) -> None:
     for f in range(s["foothold_log"].shape[0]):
         top = max(top, s["null_log"] + s["foothold_log"][f])
     p[:] = 0.0
-    p[0] = math.exp(_WEIGHT * (s["null_log"] - top))
-    p[1] = math.exp(_WEIGHT * (s["other_log"] - top))
+    p[0] = math.exp(c["evidence_weight"] * (s["null_log"] - top))
+    p[1] = math.exp(c["evidence_weight"] * (s["other_log"] - top))
     for k in range(s["constant_log"].shape[0]):
-        log = _WEIGHT * (s["constant_log"][k] - top)
+        log = c["evidence_weight"] * (s["constant_log"][k] - top)
         p[2 + c["constant_of"][k]] += math.exp(log + c["constant_share"][k])
     for k in range(s["smooth_log"].shape[0]):
-        log = _WEIGHT * (s["smooth_log"][k] - top)
+        log = c["evidence_weight"] * (s["smooth_log"][k] - top)
         p[2 + c["smooth_of"][k]] += math.exp(log + c["smooth_share"][k])
     for f in range(s["foothold_log"].shape[0]):
-        p[2 + c["foothold_of"][f]] += math.exp(_WEIGHT * (s["null_log"] + s["foothold_log"][f] - top))
+        p[2 + c["foothold_of"][f]] += math.exp(
+            c["evidence_weight"] * (s["null_log"] + s["foothold_log"][f] - top)
+        )
     total = 0.0
     for i in range(X):
         p[i] *= math.exp(c["log_rate"][i])

@@ -131,6 +131,9 @@ def _told(facts: Facts, blocks: Blocks, likeliest: str) -> bool:
     """
     log = _evidence(facts, blocks)
     best = log.pop(likeliest)
+    if likeliest == "touchdown":
+        # Ground that meets a foot pushes just as something on its shank would: there the rates decide.
+        log.pop("contact")
     return best - max(log.values()) > TOLD_BY + _NOT_RIGHT * max(best - log.get("nothing", best), 0.0)
 
 

@@ -172,7 +172,8 @@ def reversing(loose: float, seed: int) -> bands._Seen:
     cause = np.zeros((T, 1, CAUSES))
     cause[:, 0, FLOOR], cause[:, 0, STANDS] = 1.0, reversal
     still = np.zeros((T, 1))
-    return bands._Seen(cause, r[:, None], r[:, None], still, np.ones((T, 1), bool))
+    counted = np.ones((T, 1), bool)
+    return bands._Seen(cause, r[:, None], r[:, None], still, still, counted, counted)
 
 
 def widened(seen: list[bands._Seen]) -> float:
