@@ -18,7 +18,7 @@ from scipy.optimize import minimize_scalar, nnls
 
 from monitor.commission.drive import SLOW_LATE_S, Samples, Trace, free_rows, run
 from monitor.errors import SessionError
-from monitor.kernels.band import BLIND, FLOOR, INERTIA, NOISE, STANDS, STANDS_SQUARED
+from monitor.kernels.band import BLIND, FLOOR, INERTIA, NOISE, SHAKEN, STANDS, STANDS_SQUARED
 from monitor.setup.build import Setup
 from monitor.setup.calibration import Band
 from monitor.setup.weighing import SLOW_S
@@ -39,7 +39,7 @@ _BLOCK_S, _LEAST_BLOCKS = 1.0, 60
 _BEYOND = 0.1  # share of the blocks that make the tail
 _SHAPE_SD, _LARGEST_SHAPE = 0.1, 0.3
 # Causes of a joint that stands or reverses; when none does; and how their weights grow, see `_widening`.
-_REVERSALS = [STANDS, STANDS_SQUARED]
+_REVERSALS = [STANDS, STANDS_SQUARED, SHAKEN]
 _CALM, _TOLERANCE, _LARGEST_WIDENING, _REFERENCE_BLOCKS = 0.02, 1.15, 64.0, 2000.0
 _WIDENING_EVERY = 4
 # Causes of a base, which has neither drives nor friction (the floor comes first, see `_causes`).
@@ -267,7 +267,7 @@ def _shape(setup: Setup, band: Band, recordings: Sequence[Samples], traces: Sequ
             # ways.
             hidden = setup.model.coulomb[i] ** 2 / 3.0
             for weight in (fast, slow):
-                weight[i, STANDS_SQUARED] += max(hidden - weight[i, _REVERSALS].sum(), 0.0)
+                weight[i, STANDS_SQUARED] += max(hidden - weight[i, [STANDS, STANDS_SQUARED]].sum(), 0.0)
     z = [_normalised(one, fast) for one in seen]
     lasting = _lasting(seen, int(setup.params["cusum_samples"][0]))
     return replace(

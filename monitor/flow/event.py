@@ -24,8 +24,8 @@ def into_band(params: Block, inputs: Block, state: Block, outputs: Block) -> Non
     c, x, s, out = params[0], inputs[0], state[0], outputs[0]
     _respond(params, state)
     band.causes(
-        s["M"], s["a"], s["v_at"], s["tau"], c["friction_velocity"], c["e_variance"], s["dt_s"],
-        c["cause_pole"], c["hold_s"], s["held"], s["held_left_s"], s["cause"],
+        s["M"], s["a"], s["v_at"], s["tau"], c["friction_velocity"], c["coulomb"], c["e_variance"],
+        s["dt_s"], c["cause_pole"], c["hold_s"], s["held"], s["held_left_s"], s["cause"],
     )  # fmt: skip
     link_torque.causes(params, state)
     band.variance(s["cause"], c["cause_fast"], s["var_fast"])

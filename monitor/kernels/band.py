@@ -3,7 +3,7 @@
 Causes of the squared residual of a row, each through a low-pass as long as the residual's own filter: a
 floor; sensor noise seen through the mass matrix; standing or reversing, where friction hides torque (`D` and
 `D²`, `D = 1 - tanh²(v/v0)`, held for a while); squares of torque, velocity and inertial torque; low speed, as
-`D` with wider v0.
+`D` with wider v0; other joints that stand or reverse, whose friction shakes this one through the mass matrix.
 """
 
 from __future__ import annotations
@@ -19,8 +19,8 @@ from monitor.kernels.ledger import WIDTHS
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
 
-FLOOR, NOISE, STANDS, STANDS_SQUARED, TORQUE, VELOCITY, INERTIA, CREEPS, CRAWLS = range(9)
-CAUSES = 9
+FLOOR, NOISE, STANDS, STANDS_SQUARED, TORQUE, VELOCITY, INERTIA, CREEPS, CRAWLS, SHAKEN = range(10)
+CAUSES = 10
 
 # Variance of a row that must not count, in squares of its rated torque.
 BLIND = 1e4
@@ -28,8 +28,8 @@ BLIND = 1e4
 
 @kernel
 def causes(
-    M: Floats, a: Floats, v: Floats, tau: Floats, v0: Floats, e_variance: Floats, dt: float, pole: float,
-    hold_s: float, held: Floats, left: Floats, cause: Floats,
+    M: Floats, a: Floats, v: Floats, tau: Floats, v0: Floats, coulomb: Floats, e_variance: Floats,
+    dt: float, pole: float, hold_s: float, held: Floats, left: Floats, cause: Floats,
 ) -> None:  # fmt: skip
     """Advance cause (n,CAUSES) by one sample of dt; held, left (n) carry the holding of D.
 
@@ -65,6 +65,12 @@ def causes(
         cause[i, TORQUE] = keep * cause[i, TORQUE] + (1.0 - keep) * tau[i] * tau[i]
         cause[i, VELOCITY] = keep * cause[i, VELOCITY] + (1.0 - keep) * v[i] * v[i]
         cause[i, INERTIA] = keep * cause[i, INERTIA] + (1.0 - keep) * inertia * inertia
+    for i in range(n):
+        shaken = 0.0
+        for j in range(n):
+            if j != i:
+                shaken += (M[i, j] / M[j, j] * coulomb[j] * held[j]) ** 2
+        cause[i, SHAKEN] = keep * cause[i, SHAKEN] + (1.0 - keep) * shaken
 
 
 @kernel

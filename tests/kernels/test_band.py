@@ -145,7 +145,21 @@ def caused(v: Floats, a: Floats, tau: Floats, M: Floats, v0: Floats) -> Floats:
     held, left, cause = np.zeros(n), np.zeros(n), np.zeros((n, band.CAUSES))
     e_variance, found = np.arange(2.0, n + 2.0) ** 2, []
     for k in range(steps):
-        band.causes(M, a[k], v[k], tau[k], v0, e_variance, DT, POLE, HOLD_S, held, left, cause)
+        band.causes(
+            M,
+            a[k],
+            v[k],
+            tau[k],
+            v0,
+            np.arange(1.0, n + 1.0),
+            e_variance,
+            DT,
+            POLE,
+            HOLD_S,
+            held,
+            left,
+            cause,
+        )
         found.append(cause.copy())
     return np.array(found)
 
@@ -173,6 +187,17 @@ def test_each_cause_is_its_square_through_the_low_pass() -> None:
         else:
             expected = lfilter([1.0 - keep], [1.0, -keep], square, axis=0)
             np.testing.assert_allclose(cause[:, :, number], expected, rtol=1e-9, atol=1e-12)
+
+
+def test_friction_of_other_joints_that_stand_shakes_a_row_through_the_mass_matrix() -> None:
+    # A torque Coulomb_j on joint j alone accelerates it by Coulomb_j / M_jj, which takes M_ij of that at joint i.
+    M = np.array([[2.0, 0.5, 0.1], [0.5, 1.0, 0.2], [0.1, 0.2, 0.4]])
+    v = np.tile([0.0, 1.0, 0.0], (400, 1))
+    cause = caused(v, np.zeros((400, 3)), np.zeros((400, 3)), M, np.full(3, 1e-3))[-1, :, band.SHAKEN]
+    stand = np.array([1.0, 0.0, 3.0])  # Coulomb friction of those that stand
+    torque = M / np.diag(M) * stand
+    np.fill_diagonal(torque, 0.0)
+    np.testing.assert_allclose(cause, (torque**2).sum(axis=1), rtol=1e-9)
 
 
 def test_low_speed_counts_in_proportion_to_what_is_left_of_each_width() -> None:

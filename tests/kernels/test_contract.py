@@ -242,7 +242,7 @@ def samples() -> list[tuple[Any, tuple[Any, ...]]]:
         (
             band.causes,
             (
-                *(M, row(), row(), row(), abs(row()) + 1, abs(row())),
+                *(M, row(), row(), row(), abs(row()) + 1, abs(row()), abs(row())),
                 *(0.001, 90.0, 0.03, 0.1 * abs(row()), 0.001 * (whole % 2), table),
             ),
         ),
