@@ -190,7 +190,7 @@ def test_each_cause_is_its_square_through_the_low_pass() -> None:
 
 
 def test_friction_of_other_joints_that_stand_shakes_a_row_through_the_mass_matrix() -> None:
-    # A torque Coulomb_j on joint j alone accelerates it by Coulomb_j / M_jj, which takes M_ij of that at joint i.
+    # A torque Coulomb_j on joint j alone accelerates it by Coulomb_j / M_jj; joint i feels M_ij of that.
     M = np.array([[2.0, 0.5, 0.1], [0.5, 1.0, 0.2], [0.1, 0.2, 0.4]])
     v = np.tile([0.0, 1.0, 0.0], (400, 1))
     cause = caused(v, np.zeros((400, 3)), np.zeros((400, 3)), M, np.full(3, 1e-3))[-1, :, band.SHAKEN]
