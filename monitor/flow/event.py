@@ -292,7 +292,9 @@ def _remember(params: Block, inputs: Block, state: Block, outputs: Block) -> boo
         s["ring_extra"][k, i] = s["explained_var"][i]
     for i in range(s["a"].shape[0]):
         # Whatever acts on the robot may also turn the friction that a standing joint hides.
-        s["ring_hidden"][k, i] = (c["hides"] * c["coulomb"][i] * s["cause"][i, band.STANDS]) ** 2
+        s["ring_hidden"][k, i] = (
+            c["hides"][s["grounded"]] * c["coulomb"][i] * s["cause"][i, band.STANDS]
+        ) ** 2
     link_torque.hidden(params, s["ring_hidden"][k])
     s["ring_feature"][k] = s["feature"]
     s["ring_head"] += 1

@@ -264,7 +264,7 @@ def _noise(params: Block, inputs: Block, state: Block, entry: int) -> None:
         slow += s["ring_hidden"][entry, i]
         s["x_d"][i] = math.sqrt(slow + rough)
         s["x_y"][i] = (1.0 - c["slow_share"][i]) * var + stuck * stands + _SHAKEN * s["ring_hidden"][entry, i]
-        s["x_spread"][i] = c["dependent"] * rough
+        s["x_spread"][i] = c["dependent"][s["grounded"]] * rough
         if x["judged"][i] == 0:
             s["x_spread"][i] += band.BLIND * c["rated"][i] ** 2
     band.covariance(s["x_y"], c["rho"], s["x_spread"], s["R"])
@@ -483,6 +483,7 @@ def posterior(params: Block, state: Block, outputs: Block) -> None:
     """
     c, s, p = params[0], state[0], outputs[0]["probability"]
     X = p.shape[0]
+    weight = c["evidence_weight"][s["grounded"]]
     top = max(s["null_log"], s["other_log"])
     for k in range(s["constant_log"].shape[0]):
         top = max(top, s["constant_log"][k])
@@ -491,18 +492,16 @@ def posterior(params: Block, state: Block, outputs: Block) -> None:
     for f in range(s["foothold_log"].shape[0]):
         top = max(top, s["null_log"] + s["foothold_log"][f])
     p[:] = 0.0
-    p[0] = math.exp(c["evidence_weight"] * (s["null_log"] - top))
-    p[1] = math.exp(c["evidence_weight"] * (s["other_log"] - top))
+    p[0] = math.exp(weight * (s["null_log"] - top))
+    p[1] = math.exp(weight * (s["other_log"] - top))
     for k in range(s["constant_log"].shape[0]):
-        log = c["evidence_weight"] * (s["constant_log"][k] - top)
+        log = weight * (s["constant_log"][k] - top)
         p[2 + c["constant_of"][k]] += math.exp(log + c["constant_share"][k])
     for k in range(s["smooth_log"].shape[0]):
-        log = c["evidence_weight"] * (s["smooth_log"][k] - top)
+        log = weight * (s["smooth_log"][k] - top)
         p[2 + c["smooth_of"][k]] += math.exp(log + c["smooth_share"][k])
     for f in range(s["foothold_log"].shape[0]):
-        p[2 + c["foothold_of"][f]] += math.exp(
-            c["evidence_weight"] * (s["null_log"] + s["foothold_log"][f] - top)
-        )
+        p[2 + c["foothold_of"][f]] += math.exp(weight * (s["null_log"] + s["foothold_log"][f] - top))
     total = 0.0
     for i in range(X):
         p[i] *= math.exp(c["log_rate"][i])

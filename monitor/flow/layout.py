@@ -274,9 +274,10 @@ def params_fields(s: Sizes) -> list[Field]:
         ("rho", f8, (rows, rows)),  # correlation of the residuals
         ("slow_share", f8, (rows,)),  # share of the variance that is slow noise
         ("slow_keep", f8, ()),  # its correlation over one evidence step
-        ("dependent", f8, ()),  # steps whose model error is one and the same
-        ("evidence_weight", f8, ()),
-        ("hides", f8, ()),  # share of Coulomb friction that a standing joint may hide
+        # how far the model is trusted, [off the ground, on planned feet]:
+        ("dependent", f8, (2,)),  # steps whose model error is one and the same
+        ("evidence_weight", f8, (2,)),
+        ("hides", f8, (2,)),  # share of Coulomb friction that a standing joint may hide
         ("model_error", f8, ()),  # share of the residual itself
         ("track_sd", f8, (rows, 3)),  # prior of added Coulomb, viscous and constant friction
         ("track_keep", f8, ()),  # what is kept over one evidence step

@@ -31,10 +31,10 @@ BLOCK_S = 0.1  # of the sums
 HOLD_S = 0.03
 LEAST = 0.12  # prior sd: smaller ones are no fault
 MODEL_ERROR = 0.03
-# How far a model is trusted: steps that share one model error, weight of evidence, share of Coulomb friction
-# that a standing joint may hide. Found on simulated arms and walkers: unknown forces of feet leave a walker's
-# evidence weaker by themselves.
-TRUST = {"fixed": (25.0, 0.5, 0.5), "floating": (1.0 / 16.0, 1.0, 0.0)}
+# How far a model is trusted, off the ground and on planned feet: steps that share one model error, weight of
+# evidence, share of Coulomb friction that a standing joint may hide. Found on simulated arms and walkers: unknown
+# forces of feet leave the evidence weaker by themselves.
+TRUST = ((25.0, 0.5, 0.5), (1.0 / 16.0, 1.0, 0.0))
 TRACK_S = 120.0
 TRACK_NOISE_S = 0.08  # as long the noise of friction tracking counts as one
 TRACK_CLIP = 2.5
@@ -203,10 +203,7 @@ def fill_band(params: Any, band: Band) -> None:
     params["cusum_reference"] = 2.0
     params["quiet_ratio"], params["onset_ratio"] = 0.6, 0.4
     params["hold_s"], params["model_error"] = HOLD_S, MODEL_ERROR
-    floating = params["rated"].shape[1] > params["link_row"].shape[1] + params["tau_lag"].shape[1]
-    params["dependent"], params["evidence_weight"], params["hides"] = TRUST[
-        "floating" if floating else "fixed"
-    ]
+    params["dependent"], params["evidence_weight"], params["hides"] = zip(*TRUST, strict=True)
 
 
 def fill_evidence(params: Any, tree: Tree, config: Config, found: Candidates) -> None:
