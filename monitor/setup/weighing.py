@@ -32,8 +32,8 @@ HOLD_S = 0.03
 LEAST = 0.12  # prior sd: smaller ones are no fault
 MODEL_ERROR = 0.03
 # How far a model is trusted, off the ground and on planned feet: steps that share one model error, weight of
-# evidence, share of Coulomb friction that a standing joint may hide. Found on simulated arms and walkers: unknown
-# forces of feet leave the evidence weaker by themselves.
+# evidence, share of Coulomb friction that a standing joint may hide. Found on simulated arms and walkers:
+# unknown forces of feet leave the evidence weaker by themselves.
 TRUST = ((25.0, 0.5, 0.5), (1.0 / 16.0, 1.0, 0.0))
 TRACK_S = 120.0
 TRACK_NOISE_S = 0.08  # as long the noise of friction tracking counts as one
