@@ -308,13 +308,12 @@ def _varies(state: Block, f: int, dt_s: float) -> tuple[bool, bool]:
     """Follow the variance of a torque that varies freely; return as `_acts` does."""
     s = state[0]
     row = s["fault_index"][f] // 8
-    if s["event_open"] == 0:
-        fresh = s["left"][row] ** 2 - s["var_fast"][row] - s["fault_free"][f]
-        s["fault_free"][f] = max(
-            s["fault_free"][f] + fresh * dt_s / _FREE_S, _LEAST_FREE * s["var_fast"][row]
-        )
     moves = abs(s["feature"][row, 1]) > 0.9
-    return s["fault_free"][f] > 2.0 * s["var_fast"][row], moves
+    if s["event_open"] != 0 or not moves:
+        return False, False
+    fresh = s["left"][row] ** 2 - s["var_fast"][row] - s["fault_free"][f]
+    s["fault_free"][f] = max(s["fault_free"][f] + fresh * dt_s / _FREE_S, _LEAST_FREE * s["var_fast"][row])
+    return bool(s["fault_free"][f] > 2.0 * s["var_fast"][row]), True
 
 
 @kernel
